@@ -1,0 +1,1 @@
+"""Supervised relay-feedback tuning of PID loops that live in PLCs."""

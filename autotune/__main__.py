@@ -1,0 +1,6 @@
+"""``python -m autotune`` is the command ``autotune``."""
+
+from autotune.cli import main
+
+if __name__ == "__main__":
+    main()

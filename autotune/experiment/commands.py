@@ -1,0 +1,44 @@
+"""What to do.  Commands are imperative and data; the shell performs them and reports back."""
+
+from dataclasses import dataclass
+
+from autotune.loop.mode import LoopMode
+
+
+@dataclass(frozen=True, slots=True)
+class ClaimLoop:
+    """Ask the PLC's guard for the loop: write ``token`` as holder request with a first heartbeat."""
+
+    token: int
+    heartbeat: int
+
+
+@dataclass(frozen=True, slots=True)
+class SetMode:
+    """Request a mode of the block."""
+
+    mode: LoopMode
+
+
+@dataclass(frozen=True, slots=True)
+class DriveOutput:
+    """Hold the output at ``op_pct`` (percent of span).
+
+    With a guard, token, heartbeat, sequence and output go in one contiguous write in every scan; the
+    sequence grows only when the output moves (16 bit, modulo).  Without a guard it is sent on moves only.
+    """
+
+    op_pct: float
+    token: int
+    heartbeat: int
+    sequence: int
+
+
+@dataclass(frozen=True, slots=True)
+class HandBack:
+    """Give the loop back as found.  Retried, idempotent, deaf to cancels; answered by ``HandBackEnded``."""
+
+    because: str
+
+
+Command = ClaimLoop | SetMode | DriveOutput | HandBack

@@ -1,0 +1,1 @@
+"""The wire.  It decides nothing and writes only what the write list holds."""

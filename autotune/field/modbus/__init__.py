@@ -1,0 +1,1 @@
+"""Modbus/TCP; the only room that imports pymodbus."""

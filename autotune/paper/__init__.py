@@ -1,0 +1,1 @@
+"""The sheet as a page that a person reads and signs."""

@@ -1,0 +1,1 @@
+"""The record of a test: one immutable sheet, chained to the one before it."""
