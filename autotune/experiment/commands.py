@@ -35,10 +35,22 @@ class DriveOutput:
 
 
 @dataclass(frozen=True, slots=True)
+class SetSetpoint:
+    """Write the setpoint back, in percent of span; only part of a hand-back, where it tracks in manual."""
+
+    sp_pct: float
+
+
+@dataclass(frozen=True, slots=True)
+class ReleaseLoop:
+    """Give the holder's token back to the PLC: write 0 as holder request."""
+
+
+@dataclass(frozen=True, slots=True)
 class HandBack:
     """Give the loop back as found.  Retried, idempotent, deaf to cancels; answered by ``HandBackEnded``."""
 
     because: str
 
 
-Command = ClaimLoop | SetMode | DriveOutput | HandBack
+Command = ClaimLoop | SetMode | DriveOutput | SetSetpoint | ReleaseLoop | HandBack
