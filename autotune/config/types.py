@@ -36,6 +36,26 @@ class DataType(Enum):
     REAL = "REAL"
     LREAL = "LREAL"
 
+    @property
+    def register_count(self) -> int:
+        """How many 16-bit registers one value fills."""
+        return _REGISTERS[self]
+
+    @property
+    def is_whole(self) -> bool:
+        """Whether it holds whole numbers only."""
+        return self not in (DataType.REAL, DataType.LREAL)
+
+
+_REGISTERS = dict.fromkeys(DataType, 1) | {
+    DataType.DINT: 2,
+    DataType.UDINT: 2,
+    DataType.REAL: 2,
+    DataType.LINT: 4,
+    DataType.ULINT: 4,
+    DataType.LREAL: 4,
+}
+
 
 class Order(Enum):
     """Order of words in a value, or of bytes in a word."""

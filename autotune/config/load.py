@@ -1,0 +1,222 @@
+"""``load``: a file of the user's to a ``Configuration``, or all that is wrong with it at once."""
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import TypeVar
+
+from pydantic import ValidationError
+
+from autotune.config.build import block_from, controller_from, loop_from
+from autotune.config.checks import block_flaws, loop_flaws, site_flaws
+from autotune.config.complaints import Flaw, Section, flaws_of, meant, shown
+from autotune.config.digest import configuration_digest
+from autotune.config.documents import Documents, Override, gather, read_table
+from autotune.config.numbers import Table
+from autotune.config.places import Place, never_written, overlaps_between, places_of, touches
+from autotune.config.schema import (
+    BlockTable,
+    ControllerTable,
+    FileTable,
+    IncludedTable,
+    LoopTable,
+    SiteLimitsTable,
+)
+from autotune.config.types import AddressRange, Configuration, Controller, LoopConfig
+from autotune.errors import Complaint, ConfigError
+
+T = TypeVar("T", bound=Table)
+
+
+@dataclass(slots=True)
+class _Draft:
+    """The tables that are right so far; what is wrong lies in ``documents.complaints``."""
+
+    documents: Documents
+    file: FileTable | None = None
+    site: SiteLimitsTable | None = None
+    controllers: dict[str, ControllerTable] = field(default_factory=dict)
+    blocks: dict[str, BlockTable] = field(default_factory=dict)
+    loops: list[tuple[Section, LoopTable]] = field(default_factory=list)
+    placed: dict[str, list[Place]] = field(default_factory=dict)
+    never_written: dict[str, list[AddressRange]] = field(default_factory=dict)
+
+
+def load(path: Path | str, overrides: Mapping[str, Override] | None = None) -> Configuration:
+    """Read, check and convert a configuration with all the files it names.
+
+    ``overrides`` puts contents in place of keys before anything is checked, by dotted key:
+    ``{"controller.skid.port": 50213}``, ``loop.NAME...``, ``block.NAME...`` or a key of the file's top.
+    Raises ``ConfigError`` with every complaint found.
+    """
+    path = Path(path)
+    documents = gather(path, overrides or {})
+    draft = _Draft(documents)
+    if documents.tops:
+        _read_tops(path, draft)
+        _read_controllers_and_blocks(draft)
+        _read_loops(draft)
+        _place_tags(draft)
+    if documents.complaints:
+        raise ConfigError(_once_each(documents.complaints))
+    return _configuration(path, draft)
+
+
+def _read_tops(path: Path, draft: _Draft) -> None:
+    top, *included = draft.documents.tops
+    draft.file = _table(draft.documents, top, FileTable)
+    for one in included:
+        _table(draft.documents, one, IncludedTable)
+    named = top.own.get("site_limits")
+    if isinstance(named, str) and named:
+        _read_site(path.parent / named, draft)
+    if draft.file is not None and draft.site is not None:
+        asked, allowed = draft.file.concurrent_tests_at_most, draft.site.concurrent_tests_at_most
+        if asked > allowed:
+            fault = f"{asked} is more than the site's {allowed}"
+            draft.documents.complain(top, Flaw(("concurrent_tests_at_most",), fault, f"write at most {allowed}"))
+
+
+def _read_site(path: Path, draft: _Draft) -> None:
+    own = read_table(path, draft.documents)
+    if own is None:
+        return
+    section = Section(str(path), "", own)
+    site = _table(draft.documents, section, SiteLimitsTable)
+    if site is None:
+        return
+    draft.site = site
+    draft.documents.complain(section, *site_flaws(site))
+    blocks = draft.documents.blocks
+    for name in site.settings_limits:
+        if name not in blocks:
+            draft.documents.complain(section, _unknown(("settings_limits", name), "block", name, list(blocks)))
+    for number, told in enumerate(site.never_written):
+        loc = ("never_written", number)
+        known = draft.documents.controllers
+        if told.controller not in known:
+            flaw = _unknown((*loc, "controller"), "controller", told.controller, list(known))
+            draft.documents.complain(section, flaw)
+            continue
+        try:
+            controller = ControllerTable.model_validate(known[told.controller].own)
+        except ValidationError:
+            continue  # complained of where the controller stands
+        found = never_written(told.table, told.first, told.last, controller)
+        if isinstance(found, AddressRange):
+            draft.never_written.setdefault(told.controller, []).append(found)
+        else:
+            draft.documents.complain(section, Flaw((*loc, "first"), *found))
+
+
+def _read_controllers_and_blocks(draft: _Draft) -> None:
+    documents = draft.documents
+    endpoints: dict[tuple[str, int, int], str] = {}
+    for name, section in documents.controllers.items():
+        controller = _table(documents, section, ControllerTable)
+        if controller is None:
+            continue
+        draft.controllers[name] = controller
+        first = endpoints.setdefault(_endpoint(controller), name)
+        if first != name:
+            fault = f"the same host, port and device_id as controller.{first}"
+            documents.complain(section, Flaw(("host",), fault, "keep one of them; loops may share a controller"))
+    for name, section in documents.blocks.items():
+        block = _table(documents, section, BlockTable)
+        if block is not None:
+            draft.blocks[name] = block
+            documents.complain(section, *block_flaws(block))
+
+
+def _read_loops(draft: _Draft) -> None:
+    documents = draft.documents
+    names: dict[str, str] = {}
+    if not documents.loops and not documents.complaints:
+        documents.complain(documents.tops[0], Flaw(("loop",), "missing", "add at least one [[loop]]"))
+    for own in documents.loops:
+        section = Section(own.file, own.head, own.own, documents.defaults)
+        loop = _table(documents, section, LoopTable)
+        if loop is None:
+            continue
+        first = names.get(loop.name)
+        if first is not None:
+            documents.complain(section, Flaw(("name",), f"told twice, first in {first}", "give it another name"))
+            continue
+        names[loop.name] = section.file
+        draft.loops.append((section, loop))
+        for kind, name, known in (
+            ("controller", loop.controller, documents.controllers),
+            ("block", loop.block, documents.blocks),
+        ):
+            if name not in known:
+                documents.complain(section, _unknown((kind,), kind, name, list(known)))
+        controller, block = draft.controllers.get(loop.controller), draft.blocks.get(loop.block)
+        documents.complain(section, *loop_flaws(loop, controller, block, draft.site))
+
+
+def _place_tags(draft: _Draft) -> None:
+    documents = draft.documents
+    sections = {loop.name: section for section, loop in draft.loops}
+    located: list[tuple[str, tuple[object, ...], list[Place]]] = []
+    for section, loop in draft.loops:
+        controller = draft.controllers.get(loop.controller)
+        if controller is None:
+            continue
+        placed, flaws = places_of(loop, controller, draft.blocks.get(loop.block))
+        documents.complain(section, *flaws)
+        draft.placed[loop.name] = placed
+        located.append((loop.name, _endpoint(controller), placed))
+        for place in placed:
+            for forbidden in draft.never_written.get(loop.controller, ()):
+                if place.is_written and touches(place, forbidden):
+                    fault = f"{place.name} lies where the site's limits allow no write"
+                    documents.complain(
+                        section, Flaw((*place.loc, "address"), fault, "correct the address or the range")
+                    )
+    for name, flaw in overlaps_between(located):
+        documents.complain(sections[name], flaw)
+
+
+def _configuration(path: Path, draft: _Draft) -> Configuration:
+    assert draft.file is not None  # noqa: S101 - without complaints every table was right
+    controllers = {
+        name: controller_from(name, table, tuple(draft.never_written.get(name, ())))
+        for name, table in draft.controllers.items()
+    }
+    loops = tuple(_loop(loop, draft, controllers) for _, loop in draft.loops)
+    everyone = tuple(controllers.values())
+    return Configuration(
+        file=path,
+        data_dir=path.parent / draft.file.data_dir,
+        loops=loops,
+        controllers=everyone,
+        concurrent_tests_at_most=draft.file.concurrent_tests_at_most,
+        digest=configuration_digest(loops, everyone, draft.file.concurrent_tests_at_most),
+        sources=tuple(draft.documents.sources),
+    )
+
+
+def _loop(loop: LoopTable, draft: _Draft, controllers: Mapping[str, Controller]) -> LoopConfig:
+    block = block_from(draft.blocks[loop.block])
+    return loop_from(loop, controllers[loop.controller], block, draft.placed[loop.name], draft.site)
+
+
+def _table(documents: Documents, section: Section, table: type[T]) -> T | None:
+    try:
+        return table.model_validate(section.merged)
+    except ValidationError as error:
+        documents.complain(section, *flaws_of(error, table))
+        return None
+
+
+def _unknown(loc: tuple[str | int, ...], kind: str, name: str, known: list[str]) -> Flaw:
+    listed = f"there are: {', '.join(sorted(known))}" if known else f"add [{kind}.NAME]"
+    return Flaw(loc, f"there is no {kind} {shown(name)}", f"{meant(name, known)}{listed}")
+
+
+def _endpoint(controller: ControllerTable) -> tuple[str, int, int]:
+    return controller.host.lower(), controller.port, controller.device_id
+
+
+def _once_each(complaints: list[Complaint]) -> tuple[Complaint, ...]:
+    return tuple({str(complaint): complaint for complaint in complaints}.values())
