@@ -14,7 +14,8 @@ class Proposal:
     equation or table.  ``settings`` are the rule's own (form of the paper), ``in_block_form`` the same in
     the block's form, ``fields`` the rounded numbers in the controller's registers, ``rounding_pct``
     the largest relative change that rounding made (percent).  ``gain_factor`` is proposed over
-    present gain in the block's form (``None`` without present settings).  ``cautions`` are sentences.
+    present gain in the block's form (``None`` without present settings).  ``cautions`` are sentences;
+    ``suits`` says in plain words what the rule was made for.
     """
 
     name: str
@@ -26,6 +27,7 @@ class Proposal:
     rounding_pct: float
     gain_factor: float | None
     cautions: tuple[str, ...] = ()
+    suits: str = ""
 
 
 @dataclass(frozen=True, slots=True)
