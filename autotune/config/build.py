@@ -6,13 +6,9 @@ from typing import Any
 from autotune.config.digest import block_digest, loop_digest
 from autotune.config.numbers import Table
 from autotune.config.places import SETTINGS, Place
-from autotune.config.schema import (
-    BlockTable,
-    ControllerTable,
-    LoopTable,
-    SettingLimitTable,
-    SiteLimitsTable,
-)
+from autotune.config.schema import ControllerTable, LoopTable
+from autotune.config.schema_settings import BlockTable, SettingLimitTable
+from autotune.config.schema_site import SiteLimitsTable
 from autotune.config.test_plan import timed_limits
 from autotune.config.types import AddressRange, Controller, GuardCodes, LoopConfig, ModbusEndpoint, ModeCodes
 from autotune.confirmed_write.plan import FieldLimit

@@ -8,20 +8,16 @@ from typing import TypeVar
 from pydantic import ValidationError
 
 from autotune.config.build import block_from, controller_from, loop_from
-from autotune.config.checks import block_flaws, loop_flaws, site_flaws
+from autotune.config.checks import loop_flaws
+from autotune.config.checks_settings import block_flaws, site_flaws
 from autotune.config.complaints import Flaw, Section, flaws_of, meant, shown
 from autotune.config.digest import configuration_digest
 from autotune.config.documents import Documents, Override, gather, read_table
 from autotune.config.numbers import Table
 from autotune.config.places import Place, never_written, overlaps_between, places_of, touches
-from autotune.config.schema import (
-    BlockTable,
-    ControllerTable,
-    FileTable,
-    IncludedTable,
-    LoopTable,
-    SiteLimitsTable,
-)
+from autotune.config.schema import ControllerTable, FileTable, IncludedTable, LoopTable
+from autotune.config.schema_settings import BlockTable
+from autotune.config.schema_site import SiteLimitsTable
 from autotune.config.types import AddressRange, Configuration, Controller, LoopConfig
 from autotune.errors import Complaint, ConfigError
 

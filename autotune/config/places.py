@@ -5,7 +5,8 @@ from dataclasses import dataclass
 from itertools import pairwise
 
 from autotune.config.complaints import Flaw, Loc
-from autotune.config.schema import BlockTable, ControllerTable, LoopTable
+from autotune.config.schema import ControllerTable, LoopTable
+from autotune.config.schema_settings import BlockTable
 from autotune.config.schema_tags import TagsTable, TagTable
 from autotune.config.types import AddressRange, DataType, ModbusTag, Ne43, Order, RegisterTable
 

@@ -13,7 +13,6 @@ from autotune.config.numbers import (
     Name,
     Pct,
     RatePct,
-    Ratio,
     Seconds,
     SecondsOrNone,
     StepPct,
@@ -21,20 +20,10 @@ from autotune.config.numbers import (
     Unit,
     Words,
 )
-from autotune.config.schema_tags import OrderChoice, TableChoice, TagsTable, WatchTable
+from autotune.config.schema_settings import SettingsLimitsTable
+from autotune.config.schema_tags import OrderChoice, TagsTable, WatchTable
 from autotune.experiment.plan import FirstMove
 from autotune.loop.mode import ControlAction
-from autotune.loop.settings import (
-    Algorithm,
-    AntiWindup,
-    DerivativeKind,
-    DerivativeOn,
-    GainKind,
-    GainPer,
-    IntegralKind,
-    PidForm,
-    SignConvention,
-)
 
 
 class ControllerTable(Table):
@@ -68,54 +57,6 @@ class ControllerTable(Table):
         default=None, ge=1, le=123, description="most registers in one write, 1 to 123"
     )
     read_gap_registers: int | None = Field(default=None, ge=0, le=125, description="largest gap that one read bridges")
-
-
-class RangeTable(Table):
-    """What a settings field can hold, in its own unit."""
-
-    low: Eu = Field(description="lowest number that the field can hold")
-    high: Eu = Field(description="highest number that the field can hold")
-    resolution: Ratio = Field(default=0.0, description="smallest step of the field; 0 when as fine as its type")
-
-
-class BlockTable(Table):
-    """``[block.NAME]``: a PID block, described and never named by its maker."""
-
-    form: Annotated[PidForm, CHOICE] = Field(description="how the terms combine: ideal, series or parallel")
-    gain_kind: Annotated[GainKind, CHOICE] = Field(description="what the gain field holds: gain or proportional band")
-    gain_per: Annotated[GainPer, CHOICE] = Field(description="gain per percent or per engineering unit of PV")
-    integral_kind: Annotated[IntegralKind, CHOICE] = Field(description="what the integral field holds, with its unit")
-    integral_off: Eu | None = Field(
-        default=None, description="number that switches the integral off; leave out if none does"
-    )
-    has_derivative: bool = Field(default=True, description="whether the block has a derivative term")
-    derivative_kind: Annotated[DerivativeKind, CHOICE] | None = Field(
-        default=None, description="what the derivative field holds, with its unit"
-    )
-    derivative_off: Eu | None = Field(default=None, description="number that switches the derivative off")
-    derivative_on: Annotated[DerivativeOn, CHOICE] | None = Field(
-        default=None, description="derivative on PV or on error"
-    )
-    derivative_filter_ratio: Annotated[float, Field(gt=0, le=1e6)] | None = Field(
-        default=None, description="N of the derivative filter Td/N; leave out when there is no filter"
-    )
-    pv_filter_time_s: SecondsOrNone = Field(default=0.0, description="the block's own PV filter, s")
-    setpoint_weight: Ratio = Field(
-        default=1.0, description="share of SP in the proportional term (1 = error, 0 = PV only)"
-    )
-    sign: Annotated[SignConvention, CHOICE] | None = Field(default=None, description="action flag or signed gain")
-    algorithm: Annotated[Algorithm, CHOICE] | None = Field(default=None, description="positional or incremental")
-    anti_windup: Annotated[AntiWindup, CHOICE] | None = Field(
-        default=None, description="what the integral does at a limit: stop, conditional, tracking or not declared"
-    )
-    sp_tracks_in_manual: bool = Field(default=False, description="whether SP follows PV in manual")
-    scan_s: Seconds | None = Field(default=None, description="the block's own execution, s")
-    gain_range: RangeTable | None = Field(default=None, description="what the gain field can hold")
-    integral_range: RangeTable | None = Field(default=None, description="what the integral field can hold")
-    derivative_range: RangeTable | None = Field(default=None, description="what the derivative field can hold")
-    panel_labels: list[Words] | None = Field(
-        default=None, min_length=3, max_length=3, description="the panel's three labels: gain, integral, derivative"
-    )
 
 
 class SpanTable(Table):
@@ -236,24 +177,6 @@ class BaselineTable(Table):
     drift_at_most_pct_per_s: RatePct = Field(description="largest slope of PV at rest, % of span per s")
 
 
-class SettingLimitTable(Table):
-    """Floor, ceiling and largest change of one settings field."""
-
-    low: Eu | None = Field(default=None, description="lowest number that may be written, in the field's unit")
-    high: Eu | None = Field(default=None, description="highest number that may be written, in the field's unit")
-    factor_at_most: Annotated[float, Field(gt=1, le=1000)] | None = Field(
-        default=None, description="largest factor against as found, above 1"
-    )
-
-
-class SettingsLimitsTable(Table):
-    """``[loop.settings_limits]`` and ``[settings_limits.BLOCK]`` of the site's limits."""
-
-    gain: SettingLimitTable | None = Field(default=None, description="limits of the gain field")
-    integral: SettingLimitTable | None = Field(default=None, description="limits of the integral field")
-    derivative: SettingLimitTable | None = Field(default=None, description="limits of the derivative field")
-
-
 class LoopTable(Table):
     """``[[loop]]``: one loop, complete."""
 
@@ -296,37 +219,6 @@ class LoopTable(Table):
     settings_limits: SettingsLimitsTable = Field(
         default=SettingsLimitsTable(), description="table [loop.settings_limits]"
     )
-
-
-class NeverWrittenTable(Table):
-    """``[[never_written]]`` of the site's limits; both ends included, counted as the controller counts."""
-
-    controller: Words = Field(description="the NAME of a [controller.NAME]")
-    table: TableChoice = Field(description="coil or holding")
-    first: int = Field(description="first address, counted as that controller's `addressing` says")
-    last: int = Field(description="last address, included")
-
-
-class SiteLimitsTable(Table):
-    """The site's own file: ceilings that no loop file can widen."""
-
-    schema_version: Literal[1] = Field(description="1")
-    step_at_most_pct: StepPct = Field(description="largest step of any output, % of span")
-    op_low_pct: Pct = Field(default=0.0, description="no test moves an output below, % of span")
-    op_high_pct: Pct = Field(default=100.0, description="no test moves an output above, % of span")
-    test_within_s: Seconds | None = Field(default=None, description="longest test of any loop, s")
-    concurrent_tests_at_most: Annotated[int, Field(ge=1, le=100)] = Field(default=1, description="most tests at a time")
-    without_guard: Literal["refused", "with consent"] = Field(
-        default="refused", description='tests where the PLC has no guard: "refused" or "with consent"'
-    )
-    write_settings: Literal["never", "in manual", "in automatic"] = Field(
-        description="the most that any loop may allow: never, in manual or in automatic"
-    )
-    factor_at_most: Annotated[float, Field(gt=1, le=1000)] = Field(
-        description="largest factor of any setting against as found, above 1"
-    )
-    never_written: list[NeverWrittenTable] = Field(default=[], description="tables [[never_written]]")
-    settings_limits: dict[str, SettingsLimitsTable] = Field(default={}, description="tables [settings_limits.BLOCK]")
 
 
 class FileTable(Table):
