@@ -18,7 +18,7 @@ from pydantic import AfterValidator, AwareDatetime, BaseModel, ConfigDict, Field
 SCHEMA_VERSION = 1
 
 Utc = Annotated[AwareDatetime, AfterValidator(lambda instant: instant.astimezone(UTC))]
-SheetId = Annotated[str, StringConstraints(pattern=r"^[A-Za-z0-9._-]+-\d{8}-\d{6}-[0-9a-f]{4}$")]
+SheetId = Annotated[str, StringConstraints(max_length=80, pattern=r"^[A-Za-z0-9._-]+-\d{8}-\d{6}-[0-9a-f]{4}$")]
 Digest = Annotated[str, StringConstraints(pattern=r"^[0-9a-f]{64}$")]
 
 
@@ -26,9 +26,11 @@ def sheet_id(loop: str, started_utc: datetime, tail: int) -> str:
     """A name that sorts by time within its loop and can be said on the telephone: ``TIC-204-20261201-094502-7f3a``.
 
     ``tail`` tells apart two tests of one second; its low 16 bits are used.  What can't stand in a file name
-    becomes ``_``.
+    becomes ``_``; of a very long loop name the first 60 characters are kept.
     """
-    return f"{re.sub(r'[^A-Za-z0-9._-]', '_', loop)}-{started_utc.astimezone(UTC):%Y%m%d-%H%M%S}-{tail & 0xFFFF:04x}"
+    return (
+        f"{re.sub(r'[^A-Za-z0-9._-]', '_', loop)[:60]}-{started_utc.astimezone(UTC):%Y%m%d-%H%M%S}-{tail & 0xFFFF:04x}"
+    )
 
 
 class _Stored(BaseModel):

@@ -1,0 +1,266 @@
+"""The sheet as a plain page, at most ``WIDTH`` columns: for a terminal, a printer and a clipboard."""
+
+from collections.abc import Iterable, Iterator, Sequence
+from datetime import UTC, tzinfo
+
+from autotune.paper.words import OUTCOMES, RESULTS, WIDTH, exact, instant, plain, quantity, shown, wrapped
+from autotune.sheet.schema import AsFound, Change, Person, Proposal, Quantity, Recovery, Sheet, Span
+from autotune.sheet.store import StoredSheet
+
+
+def sheet_page(stored: StoredSheet, zone: tzinfo = UTC) -> str:
+    """The whole page; instants in ``zone`` with their offset from UTC, every figure with its unit."""
+    sheet = stored.sheet
+    lines = [
+        f"TEST SHEET{sheet.sheet_id:>{WIDTH - 10}}",
+        "=" * WIDTH,
+        *_identity(sheet, zone),
+        *_part("Outcome", _outcome(sheet)),
+        *_part("As found, as left", _as_found_as_left(stored, zone)),
+        *_part("Permission and cautions", _permission(sheet, zone)),
+        *_part("Planned", _planned(sheet)),
+        *_part("What happened", _events(sheet)),
+        *_part("Cycles seen", _cycles(sheet)),
+        *_part("Findings", _findings(sheet)),
+        *_part("Proposals", _proposals(sheet.proposals)),
+        *_part("What this test can't tell", _bullets(sheet.costs)),
+        *_part("Added later", _addenda(stored, zone)),
+        *_part("Record", _record(stored)),
+        *_signatures(),
+    ]
+    return "\n".join(line.rstrip() for line in lines) + "\n"
+
+
+def _part(title: str, lines: Iterable[str]) -> Iterator[str]:
+    """A part with its title; one without content is left out."""
+    body = list(lines)
+    if body:
+        yield ""
+        yield f"{title} {'-' * (WIDTH - 1 - len(title))}"
+        yield from body
+
+
+def _identity(sheet: Sheet, zone: tzinfo) -> Iterator[str]:
+    length_s = (sheet.ended_utc - sheet.started_utc).total_seconds()
+    yield from _rows(
+        ("Loop", f"{sheet.loop}  {sheet.service}"),
+        ("Unit", f"{sheet.unit}, controller {sheet.controller}"),
+        ("Started", f"{instant(sheet.started_utc, zone)}, lasted {shown(length_s, 's')}"),
+        ("Tested by", _person(sheet.person)),
+        ("PV span", _span(sheet.pv_span)),
+        ("OP span", _span(sheet.op_span)),
+    )
+
+
+def _outcome(sheet: Sheet) -> Iterator[str]:
+    code = f" ({sheet.outcome.code})" if sheet.outcome.code else ""
+    yield from wrapped(f"{sheet.outcome.ended}{code}: {sheet.outcome.text}")
+    is_untouched = sheet.outcome.ended == "ABORTED" and sheet.as_found is None and not sheet.writes
+    yield from wrapped("The loop was not touched." if is_untouched else OUTCOMES[sheet.outcome.ended])
+
+
+def _as_found_as_left(stored: StoredSheet, zone: tzinfo) -> Iterator[str]:
+    found = stored.sheet.as_found
+    if found is None:
+        return
+    yield from _loop_state(found, stored.sheet)
+    change = next((entry for entry in reversed(stored.addenda) if isinstance(entry, Change)), None)
+    if change is not None:
+        yield from wrapped(f"Settings as left: {change.result}, {instant(change.utc, zone)}")
+        yield from _settings(("as found", found.settings), ("as left", change.read_back))
+    else:
+        yield from wrapped("Settings: this test changed none.")
+        yield from _settings(("as found", found.settings))
+
+
+def _loop_state(state: AsFound, sheet: Sheet) -> Iterator[str]:
+    yield from _rows(
+        ("Mode", state.mode),
+        ("Output", _both(state.op_pct, state.op_eu, sheet.op_span)),
+        ("Setpoint", _both(state.sp_pct, state.sp_eu, sheet.pv_span)),
+        ("PV", _both(state.pv_pct, state.pv_eu, sheet.pv_span)),
+    )
+
+
+def _settings(*columns: tuple[str, Sequence[Quantity]]) -> Iterator[str]:
+    """Settings side by side under the words of the controller's own panel."""
+    if not columns[0][1]:
+        return
+    yield from _table(
+        ("", *(title for title, _ in columns)),
+        [
+            (field.label, *(exact(_amount(column, field.name), field.unit) for _, column in columns))
+            for field in columns[0][1]
+        ],
+    )
+
+
+def _permission(sheet: Sheet, zone: tzinfo) -> Iterator[str]:
+    yield from wrapped(f"Permitted {instant(sheet.permission.utc, zone)}: {sheet.permission.text}")
+    yield from _bullets(f"accepted {instant(said.utc, zone)}: {said.text}" for said in sheet.cautions_accepted)
+
+
+def _planned(sheet: Sheet) -> Iterator[str]:
+    plan, limits = sheet.plan, sheet.limits
+    hysteresis = "from the noise" if plan.hysteresis_pct is None else shown(plan.hysteresis_pct, "% of PV span")
+    yield from _rows(
+        ("Excitation", f"{plan.kind}, first {plan.first_move}"),
+        ("Steps", f"up {shown(plan.step_up_pct, '%')}, down {shown(plan.step_down_pct, '%')} of OP span"),
+        ("Hysteresis", f"{hysteresis} (half-width)"),
+        ("Output limits", f"{shown(limits.op_low_pct, '%')} to {shown(limits.op_high_pct, '%')} of OP span"),
+        ("PV limits", f"{shown(limits.pv_low_pct, '%')} to {shown(limits.pv_high_pct, '%')} of PV span"),
+        ("Scan", f"ours {shown(plan.scan_s, 's')}, controller's {shown(plan.plc_scan_s, 's')}"),
+        ("Guard", "armed in the controller" if plan.has_guard else "none in the controller"),
+    )
+    yield from _bullets(
+        f"watched: {watch.name} from {shown(watch.low_eu)} to {shown(watch.high_eu)} {watch.meaning}".rstrip()
+        for watch in limits.watch
+    )
+
+
+def _events(sheet: Sheet) -> Iterator[str]:
+    for event in sheet.events:
+        code = f"{event.code}: " if event.code else ""
+        by = f" (by {event.by})" if event.by else ""
+        yield from wrapped(f"- at {event.t_s:.1f} s, {event.kind}: {code}{event.text}{by}")
+
+
+def _cycles(sheet: Sheet) -> Iterator[str]:
+    if sheet.findings is None or not sheet.findings.cycles:
+        return
+    span = sheet.pv_span
+    rows = [
+        (
+            str(n),
+            f"{cycle.from_s:.1f} s",
+            shown(cycle.period_s, "s"),
+            _both(cycle.pv_amplitude_pct, cycle.pv_amplitude_pct * (span.high_eu - span.low_eu) / 100.0, span),
+            shown(cycle.amplitude_pct, "%"),
+        )
+        for n, cycle in enumerate(sheet.findings.cycles, start=1)
+    ]
+    yield from _table(("no.", "from", "period", "half swing of PV", "half step of OP"), rows)
+
+
+def _findings(sheet: Sheet) -> Iterator[str]:
+    findings = sheet.findings
+    if findings is None:
+        return
+    if findings.refusal is not None:
+        yield from wrapped(f"No conclusion: {findings.refusal}")
+    for figure in findings.concluded:
+        yield from wrapped(f"{figure.label}: {quantity(figure)}")
+    if findings.method:
+        yield from wrapped(f"by {findings.method}; time from {findings.time_base}")
+    yield from _bullets(f"why so wide: {reason}" for reason in findings.because)
+    yield from _bullets(f"caution: {caution}" for caution in findings.cautions)
+    for point in findings.seen:
+        yield from wrapped(
+            f"seen, {point.method}: gain {shown(point.gain, '%PV/%OP')} and phase {shown(point.phase_rad, 'rad')}"
+            f" at {shown(point.frequency_rad_per_s, 'rad/s')}"
+        )
+
+
+def _proposals(proposals: Iterable[Proposal]) -> Iterator[str]:
+    for proposal in proposals:
+        mark = "  << recommended" if proposal.is_recommended else ""
+        yield from wrapped(f"{proposal.name}: {proposal.title}{mark}")
+        yield from wrapped(f"after {proposal.source}", "    ")
+        if proposal.not_proposed_because is not None:
+            yield from wrapped(f"not proposed: {proposal.not_proposed_because}", "    ")
+            continue
+        settings = ", ".join(f"{field.label} {exact(field.amount, field.unit)}" for field in proposal.settings)
+        yield from wrapped(f"settings: {settings}", "    ")
+        if proposal.gain_factor is not None:
+            yield from wrapped(f"gain as proposed is {shown(proposal.gain_factor)} times the present one", "    ")
+        if proposal.rounding_pct is not None:
+            yield from wrapped(f"rounding changed a setting by at most {shown(proposal.rounding_pct, '%')}", "    ")
+        for figure in proposal.figures:
+            yield from wrapped(f"forecast, {figure.label}: {quantity(figure)}", "    ")
+        yield from _bullets((f"caution: {caution}" for caution in proposal.cautions), "    ")
+
+
+def _addenda(stored: StoredSheet, zone: tzinfo) -> Iterator[str]:
+    for entry, link in zip(stored.addenda, stored.entries[1:], strict=True):
+        yield from wrapped(f"{entry.kind.upper()}, {instant(entry.utc, zone)}, {_person(entry.person)}")
+        if entry.text:
+            yield from wrapped(entry.text, "    ")
+        if isinstance(entry, Change):
+            yield from _change(entry, zone)
+        elif isinstance(entry, Recovery):
+            yield from wrapped(f"{entry.result}: {RESULTS[entry.result]}", "    ")
+            if entry.present is not None:
+                yield from wrapped("the loop as it was met:", "    ")
+                yield from _loop_state(entry.present, stored.sheet)
+        yield f"    hash {link.hash}"
+
+
+def _change(change: Change, zone: tzinfo) -> Iterator[str]:
+    yield from wrapped(f"{change.result}: {RESULTS[change.result]}", "    ")
+    yield from wrapped(f"settings of {change.source}, confirmed {instant(change.confirmed_utc, zone)}", "    ")
+    yield from _settings(("as found", change.as_found), ("wanted", change.wanted), ("read back", change.read_back))
+    for write in change.writes:
+        detail = f"; {write.detail}" if write.detail else ""
+        yield from wrapped(f"- {write.name} = {exact(write.amount)}: {write.outcome}{detail}", "    ")
+    if change.op_bump_pct is not None:
+        yield from wrapped(f"the output moved by {shown(change.op_bump_pct, '% of OP span')} at the return", "    ")
+    yield f"    plan {change.plan_digest}"
+    yield from wrapped(f"confirmed with {change.confirmation_digest}", "    ")
+
+
+def _record(stored: StoredSheet) -> Iterator[str]:
+    sheet = stored.sheet
+    yield from _rows(
+        ("Software", f"autotune {sheet.versions.autotune}, Python {sheet.versions.python}"),
+        ("Samples", f"{len(sheet.samples.t_s)}, writes {len(sheet.writes)}"),
+        ("Configuration", sheet.configuration_digest),
+        ("Journal", sheet.journal_digest or "not kept"),
+        ("This sheet", stored.hash),
+    )
+
+
+def _signatures() -> Iterator[str]:
+    for role in ("Tested", "Witnessed", "Accepted"):
+        yield ""
+        yield ""
+        yield f"{role:<12}{'.' * 34}   name {'.' * 26}   date {'.' * 12}"
+
+
+def _rows(*rows: tuple[str, str]) -> Iterator[str]:
+    for label, text in rows:
+        first, *rest = wrapped(text, " " * 16)
+        yield f"{label:<15} {first.lstrip()}"
+        yield from rest
+
+
+def _table(titles: Sequence[str], rows: Sequence[Sequence[str]]) -> Iterator[str]:
+    """Columns as wide as their widest cell; what the page has no room for ends in an ellipsis."""
+    cells = [tuple(plain(cell) for cell in row) for row in (titles, *rows)]
+    room = (WIDTH - 2 * len(titles)) // len(titles)
+    widths = [min(room, max(len(row[column]) for row in cells)) for column in range(len(titles))]
+    for row in cells:
+        fitted = (c if len(c) <= width else f"{c[: width - 1]}…" for c, width in zip(row, widths, strict=True))
+        yield "  " + "  ".join(f"{cell:<{width}}" for cell, width in zip(fitted, widths, strict=True))
+
+
+def _bullets(texts: Iterable[str], indent: str = "") -> Iterator[str]:
+    for text in texts:
+        yield from wrapped(f"- {text}", indent)
+
+
+def _both(pct: float | None, eu: float | None, span: Span) -> str:
+    if pct is None:
+        return "not known"
+    return exact(pct, "%") if eu is None else f"{exact(pct, '%')} = {exact(eu, span.unit)}"
+
+
+def _span(span: Span) -> str:
+    return f"0 % = {shown(span.low_eu, span.unit)}, 100 % = {shown(span.high_eu, span.unit)}"
+
+
+def _amount(column: Sequence[Quantity], name: str) -> float | None:
+    return next((field.amount for field in column if field.name == name), None)
+
+
+def _person(person: Person) -> str:
+    return person.name if person.is_authenticated else f"{person.name} (typed, not authenticated)"
