@@ -12,10 +12,14 @@ from autotune.loop.settings import BlockDescription
 _DIGESTS = ("digest", "block_digest")
 
 
+def canonical_text(content: object) -> str:
+    """The canonical JSON of frozen types, as a digest covers it; digests kept inside them don't count."""
+    return json.dumps(_canonical(content), sort_keys=True, separators=(",", ":"), ensure_ascii=False, allow_nan=False)
+
+
 def digest_of(content: object) -> str:
-    """Hex SHA-256 of the canonical JSON of frozen types; digests kept inside them don't count."""
-    text = json.dumps(_canonical(content), sort_keys=True, separators=(",", ":"), ensure_ascii=False, allow_nan=False)
-    return hashlib.sha256(text.encode()).hexdigest()
+    """Hex SHA-256 of ``canonical_text``."""
+    return hashlib.sha256(canonical_text(content).encode()).hexdigest()
 
 
 def block_digest(block: BlockDescription) -> str:
