@@ -73,6 +73,10 @@ class PidBlock:
         self._memory.integral_pct += (self._terms.gain - terms.gain) * self._memory.proportional_pct
         self._settings, self._terms = settings, terms
 
+    def check_settings(self, settings: Settings) -> None:
+        """Raise ``ValueError`` when the block can't run on these settings."""
+        to_terms(self.spec, settings)
+
     @property
     def is_at_high_clamp(self) -> bool:
         """Whether the output stands at its upper clamp."""

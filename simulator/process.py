@@ -95,7 +95,7 @@ class Process:
         self._send(_Change(t_s + self.spec.dead_time_s, load_pct=step_pct), t_s)
 
     def set_load_sine(self, t_s: float, amplitude_pct: float, period_s: float) -> None:
-        """From ``t_s`` on ``amplitude_pct sin(2 pi (t - t_s) / period_s)`` joins the input, instead of any earlier sine."""
+        """From ``t_s`` on ``amplitude_pct sin(2 pi (t - t_s) / period_s)`` joins the input (one sine at a time)."""
         self._send(_Change(t_s + self.spec.dead_time_s, sine=(amplitude_pct, 2.0 * pi / period_s)), t_s)
 
     def set_output_drift(self, drift_pct_per_s: float) -> None:
@@ -105,7 +105,7 @@ class Process:
         self._drift_pct_per_s = drift_pct_per_s
 
     def advance_to(self, t_s: float) -> None:
-        """Move to ``t_s``, changes that arrive at exactly ``t_s`` included.  Raises ``ValueError`` when time runs back."""
+        """Move to ``t_s``, changes that arrive just then included.  Raises ``ValueError`` when time runs back."""
         if t_s < self.t_s:
             raise ValueError(f"a process can't go back from {self.t_s} s to {t_s} s")
         while self._under_way and self._under_way[0].arrival_s <= t_s:
