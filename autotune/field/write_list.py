@@ -38,6 +38,11 @@ class Permit:
             return True
         return self.low is not None and self.high is not None and self.low <= raw <= self.high
 
+    def in_words(self) -> str:
+        """The raw values allowed, for a person."""
+        allowed = [] if self.low is None else [f"{self.low} .. {self.high}"]
+        return " or ".join(allowed + [str(other) for other in self.others])
+
 
 @dataclass(frozen=True, slots=True)
 class WriteList:
@@ -68,8 +73,7 @@ class WriteList:
             raise WriteForbidden(f"{self.loop}: {name!r}: {fault}") from fault
         held = raw if isinstance(raw, int) else nearest_held(held_type(tag), raw)
         if held is None or not permit.allows(held):
-            codes = f" or one of {permit.others}" if permit.others else ""
-            raise WriteForbidden(f"{self.loop}: {name!r} may be {permit.low} .. {permit.high}{codes} raw, not {raw!r}")
+            raise WriteForbidden(f"{self.loop}: {name!r} may be {permit.in_words()} raw, not {raw!r}")
 
 
 def build_write_list(loop: LoopConfig) -> WriteList:

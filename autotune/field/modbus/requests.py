@@ -82,10 +82,11 @@ def is_one_read(endpoint: ModbusEndpoint, tags: Sequence[tuple[str, ModbusTag]])
 def plan_writes(
     endpoint: ModbusEndpoint, writes: Sequence[tuple[str, ModbusTag, RawValue]]
 ) -> tuple[WriteRequest, ...]:
-    """The fewest requests that keep the given order and write no address that isn't among ``writes``.
+    """Requests that keep the given order and write no address that isn't among ``writes``.
 
-    Tags that lie side by side go in one request, whatever their order.  Raises ``WriteForbidden`` when
-    a tag can't hold its raw value, ``ValueError`` for a table that can't be written.
+    Neighbours in the order that lie side by side go in one request, as many of them as it can take.
+    Raises ``WriteForbidden`` when a tag can't hold its raw value, ``ValueError`` for a table that can't be
+    written.
     """
     requests: list[WriteRequest] = []
     rest = list(writes)
