@@ -35,6 +35,14 @@ def loop_flaws(
         yield from _scans(loop, controller)
 
 
+def controller_flaws(controller: ControllerTable, loops: list[LoopTable]) -> Iterator[Flaw]:
+    """Faults of a controller that show only beside its loops."""
+    untimed = [loop.name for loop in loops if not all(getattr(loop.tags, name) is not None for name in CLOCK_TAGS)]
+    if controller.plc_scan_s is None and untimed:
+        fault = f"missing, and {', '.join(untimed)} has not all of {', '.join(CLOCK_TAGS)}"
+        yield Flaw(("plc_scan_s",), fault, "add plc_scan_s: the PLC's own scan, s, or the three clock tags")
+
+
 def _whose_loop(loop: LoopTable) -> Iterator[Flaw]:
     if loop.protects != "none":
         fault = f'"{loop.protects}": a safety function depends on this loop'
@@ -182,12 +190,6 @@ def _watch(loop: LoopTable) -> Iterator[Flaw]:
 
 
 def _scans(loop: LoopTable, controller: ControllerTable) -> Iterator[Flaw]:
-    has_clock = all(getattr(loop.tags, name) is not None for name in CLOCK_TAGS)
-    if controller.plc_scan_s is None and not has_clock:
-        fault = f"missing: without {', '.join(CLOCK_TAGS)} nothing tells when PV was sampled"
-        yield Flaw(
-            ("controller",), f"plc_scan_s of {loop.controller} is {fault}", "add plc_scan_s, the PLC's scan in s"
-        )
     timeout_s = controller.request_timeout_s if controller.request_timeout_s is not None else 0.5
     patience_s = loop.guard.timeout_s if loop.guard is not None else None
     if patience_s is not None and not timeout_s < patience_s:

@@ -8,7 +8,7 @@ from typing import TypeVar
 from pydantic import ValidationError
 
 from autotune.config.build import block_from, controller_from, loop_from
-from autotune.config.checks import loop_flaws
+from autotune.config.checks import controller_flaws, loop_flaws
 from autotune.config.checks_settings import block_flaws, site_flaws
 from autotune.config.complaints import Flaw, Section, flaws_of, meant, shown
 from autotune.config.digest import configuration_digest
@@ -148,6 +148,9 @@ def _read_loops(draft: _Draft) -> None:
                 documents.complain(section, _unknown((kind,), kind, name, list(known)))
         controller, block = draft.controllers.get(loop.controller), draft.blocks.get(loop.block)
         documents.complain(section, *loop_flaws(loop, controller, block, draft.site))
+    for name, controller in draft.controllers.items():
+        loops = [loop for _, loop in draft.loops if loop.controller == name]
+        documents.complain(documents.controllers[name], *controller_flaws(controller, loops))
 
 
 def _place_tags(draft: _Draft) -> None:
