@@ -21,6 +21,7 @@ class WritePlan:
     ``as_found`` and ``fields`` are the numbers as the controller holds them (already rounded to what its
     registers can hold).  ``order`` lists the field names in the order of writing.  ``block_digest`` and
     ``configuration_digest`` bind the plan to the description it was made for (hex SHA-256).
+    ``sp_tracks_in_manual`` says that the setpoint follows PV in manual, so that it has to be given back.
     """
 
     loop: str
@@ -32,6 +33,7 @@ class WritePlan:
     configuration_digest: str
     limits: tuple[tuple[str, FieldLimit], ...] = ()
     write_in_manual: bool = True
+    sp_tracks_in_manual: bool = False
 
 
 @dataclass(frozen=True, slots=True)
