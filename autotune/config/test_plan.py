@@ -45,8 +45,8 @@ def plan_for(loop: LoopConfig, token: int, *, is_no_guard_accepted: bool = False
 def timed_limits(limits: Limits, scan_s: float, controller: Controller, guard_timeout_s: float | None) -> Limits:
     """The limits with the three times that follow from scans (s), so that no file has to tell them.
 
-    ``op_move_s``: a write may wait for two of the PLC's scans and its I/O, is seen with our next reading
-    but one, and the largest swing takes its time at the permitted rate.
+    ``op_move_s``: a write may take a request's deadline, then waits for two of the PLC's scans and its
+    I/O, the largest swing takes its time at the permitted rate, and it is seen with our next reading.
     ``sample_age_s``: the reading's deadline, one PLC scan with its I/O, and one scan of ours.
     ``heartbeat_s``: half of the guard's patience but never less than two scans, so always before the
     guard, which outlasts at least three; without a guard there is no echo to wait for and the age of a
@@ -59,7 +59,7 @@ def timed_limits(limits: Limits, scan_s: float, controller: Controller, guard_ti
     heartbeat_s = age_s if guard_timeout_s is None else max(_HEARTBEAT_SHARE * guard_timeout_s, 2 * scan_s)
     return replace(
         limits,
-        op_move_s=2 * scan_s + 2 * plc_scan_s + controller.io_time_s + rate_s,
+        op_move_s=controller.endpoint.request_timeout_s + 2 * plc_scan_s + controller.io_time_s + rate_s + scan_s,
         sample_age_s=age_s,
         heartbeat_s=heartbeat_s,
     )
