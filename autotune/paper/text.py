@@ -176,7 +176,7 @@ def _proposals(proposals: Iterable[Proposal]) -> Iterator[str]:
         if proposal.rounding_pct is not None:
             yield from wrapped(f"rounding changed a setting by at most {shown(proposal.rounding_pct, '%')}", "    ")
         for figure in proposal.figures:
-            yield from wrapped(f"forecast, {figure.label}: {quantity(figure)}", "    ")
+            yield from wrapped(f"forecast, {figure.label}: {shown(figure.amount, figure.unit)}", "    ")
         yield from _bullets((f"caution: {caution}" for caution in proposal.cautions), "    ")
 
 
@@ -191,7 +191,7 @@ def _addenda(stored: StoredSheet, zone: tzinfo) -> Iterator[str]:
             yield from wrapped(f"{entry.result}: {RESULTS[entry.result]}", "    ")
             if entry.present is not None:
                 yield from wrapped("the loop as it was met:", "    ")
-                yield from _loop_state(entry.present, stored.sheet)
+                yield from (f"    {line}" for line in _loop_state(entry.present, stored.sheet))
         yield f"    hash {link.hash}"
 
 
@@ -251,7 +251,8 @@ def _bullets(texts: Iterable[str], indent: str = "") -> Iterator[str]:
 def _both(pct: float | None, eu: float | None, span: Span) -> str:
     if pct is None:
         return "not known"
-    return exact(pct, "%") if eu is None else f"{exact(pct, '%')} = {exact(eu, span.unit)}"
+    is_percent = (span.low_eu, span.high_eu, span.unit) == (0.0, 100.0, "%")
+    return exact(pct, "%") if eu is None or is_percent else f"{exact(pct, '%')} = {exact(eu, span.unit)}"
 
 
 def _span(span: Span) -> str:

@@ -26,10 +26,10 @@ def sheet_id(loop: str, started_utc: datetime, tail: int) -> str:
     """A name that sorts by time within its loop and can be said on the telephone: ``TIC-204-20261201-094502-7f3a``.
 
     ``tail`` tells apart two tests of one second; its low 16 bits are used.  What can't stand in a file name
-    becomes ``_``; of a very long loop name the first 60 characters are kept.
+    becomes ``_``; of a very long loop name the first 50 characters are kept.
     """
     return (
-        f"{re.sub(r'[^A-Za-z0-9._-]', '_', loop)[:60]}-{started_utc.astimezone(UTC):%Y%m%d-%H%M%S}-{tail & 0xFFFF:04x}"
+        f"{re.sub(r'[^A-Za-z0-9._-]', '_', loop)[:50]}-{started_utc.astimezone(UTC):%Y%m%d-%H%M%S}-{tail & 0xFFFF:04x}"
     )
 
 

@@ -84,7 +84,6 @@ class SqliteStore:
         except OSError as fault:
             raise SheetError(f"{file.parent}: {fault.strerror}; make the folder or correct `data_dir`") from fault
         with store._connected("rwc") as connection:
-            connection.execute("PRAGMA journal_mode=WAL")
             with _transaction(connection):
                 if not connection.execute("SELECT count(*) FROM sqlite_schema").fetchone()[0]:
                     for statement in _LAYOUT.values():
@@ -92,6 +91,8 @@ class SqliteStore:
                     connection.execute(f"PRAGMA application_id={_APPLICATION_ID}")
                     connection.execute(f"PRAGMA user_version={_LAYOUT_VERSION}")
             store._check_layout(connection)
+            with suppress(sqlite3.OperationalError):  # busy: whoever is busy there sets the same
+                connection.execute("PRAGMA journal_mode=WAL")
         return store
 
     def append(self, sheet: Sheet) -> str:

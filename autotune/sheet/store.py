@@ -103,17 +103,21 @@ def to_text(entry: Sheet | Addendum) -> str:
 def from_text(text: str, where: str) -> Sheet | Addendum:
     """The entry that a kept text holds; raises ``SheetError`` naming ``where`` and the remedy."""
     try:
-        return _ENTRY.validate_json(text)
+        entry = _ENTRY.validate_json(text)
+        version: object = entry.schema_version
     except ValidationError as fault:
-        newer = _newer_version(text)
-        if newer is not None:
-            raise SheetError(
-                f"{where}: written in version {newer} of the sheet's shape, this program knows up to"
-                f" {SCHEMA_VERSION}; open it with the newer autotune that wrote it"
-            ) from None
         first = fault.errors()[0]
         key = ".".join(str(part) for part in first["loc"])
-        raise SheetError(f"{where}: damaged at {key}: {first['msg']}; run `autotune sheet verify`") from fault
+        complaint = f"{where}: damaged at {key}: {first['msg']}; run `autotune sheet verify`"
+        version = _version(text)
+        if not _is_newer(version):
+            raise SheetError(complaint) from fault
+    if _is_newer(version):
+        raise SheetError(
+            f"{where}: written in version {version} of the sheet's shape, this program knows up to"
+            f" {SCHEMA_VERSION}; open it with the newer autotune that wrote it"
+        )
+    return entry
 
 
 def checked_from_text(entry: ChainEntry, store: str) -> Sheet | Addendum:
@@ -150,12 +154,15 @@ def newest_settings(newest_first: Iterable[Sheet | Addendum], until: datetime | 
     return None
 
 
-def _newer_version(text: str) -> int | None:
+def _version(text: str) -> object:
     try:
-        version = json.loads(text)["schema_version"]
+        return json.loads(text)["schema_version"]
     except (ValueError, KeyError, TypeError):
         return None
-    return version if isinstance(version, int) and version > SCHEMA_VERSION else None
+
+
+def _is_newer(version: object) -> bool:
+    return isinstance(version, int) and version > SCHEMA_VERSION
 
 
 class MemoryStore:
