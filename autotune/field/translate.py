@@ -16,6 +16,8 @@ from autotune.loop.span import Span
 
 __all__ = [
     "WireCommand",
+    "field_to_raw",
+    "held_fields",
     "sample_tags",
     "settings_tags",
     "settings_to_raw",
@@ -126,6 +128,23 @@ def settings_to_raw(loop: LoopConfig, fields: BlockFields) -> dict[str, RawValue
     return {
         name: representable(_required_tag(loop, name), field) for name, field in wanted.items() if field is not None
     }
+
+
+def field_to_raw(loop: LoopConfig, name: str, number: float) -> RawValue:
+    """One settings field in the controller's own unit as the nearest raw value that its tag holds.
+
+    Raises ``WriteForbidden`` where the loop has no such tag or it can't hold the number.
+    """
+    return representable(_required_tag(loop, name), number)
+
+
+def held_fields(loop: LoopConfig, fields: BlockFields) -> BlockFields:
+    """The numbers that the controller's registers will hold once ``fields`` are written, in the same units.
+
+    Raises ``WriteForbidden`` as ``settings_to_raw`` does.
+    """
+    held = {name: to_eu(_required_tag(loop, name), raw) for name, raw in settings_to_raw(loop, fields).items()}
+    return BlockFields(held["gain"], held["integral"], held.get("derivative"))
 
 
 def _is_inside(reading_pct: float) -> bool:
