@@ -10,7 +10,7 @@ from autotune.config.places import SETTINGS
 from autotune.config.schema import LoopTable
 from autotune.config.schema_settings import BlockTable, RangeTable, SettingLimitTable
 from autotune.config.schema_site import SiteLimitsTable
-from autotune.loop.settings import DerivativeKind, GainKind, IntegralKind
+from autotune.loop.settings import DerivativeKind, GainKind, IntegralKind, SignConvention
 
 _ALLOWED_ORDER = ("never", "in manual", "in automatic")
 
@@ -94,9 +94,20 @@ def _settings_limits(loop: LoopTable, block: BlockTable | None) -> Iterator[Flaw
         yield from _floor_flaws(("settings_limits", name), told)
         if name == "derivative" and block is not None and not block.has_derivative:
             yield Flaw(("settings_limits", name), f"block {loop.block} has no derivative", "take the table out")
-        if name == "gain" and block is not None and block.gain_kind is GainKind.PROPORTIONAL_BAND and told.low == 0:
-            fault = "a proportional band of 0 % is an endless gain"
-            yield Flaw(("settings_limits", name, "low"), fault, "write the smallest band above 0, in percent")
+        if name == "gain" and block is not None:
+            yield from _gain_floor(block, told)
+
+
+def _gain_floor(block: BlockTable, told: SettingLimitTable) -> Iterator[Flaw]:
+    loc = ("settings_limits", "gain", "low")
+    if block.gain_kind is GainKind.PROPORTIONAL_BAND and told.low == 0:
+        fault = "a proportional band of 0 % is an endless gain"
+        yield Flaw(loc, fault, "write the smallest band above 0, in percent")
+    if block.sign is SignConvention.SIGNED_GAIN and (
+        told.low is None or told.high is None or told.low <= 0 <= told.high
+    ):
+        fault = "a gain of either sign would pass, and the sign tells direct from reverse"
+        yield Flaw(loc, fault, "write low and high both on the loop's own side of 0")
 
 
 def _floor_flaws(loc: Loc, told: SettingLimitTable) -> Iterator[Flaw]:

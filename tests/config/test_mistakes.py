@@ -157,6 +157,9 @@ MISTAKES = (
     mistake("settings to write without their tags", 'write_settings = "never" ', 'write_settings = "in manual" ', f"{F}.tags.gain", "missing among the settings", "add the tag gain"),
     mistake("no tag for the derivative", "derivative = { address = 45 }", "# ", f"{T}.tags.derivative", "the block has a derivative", "has_derivative = false"),
     mistake("settings limits upside down", "low = 2.0, high = 1800.0", "low = 1800.0, high = 2.0", f"{T}.settings_limits.integral.low", "not below high", "swap"),
+    Mistake("a signed gain of either sign", (('sign = "action flag"', 'sign = "signed gain"'), ("low = 0.1, high = 10.0", "low = -0.1, high = 10.0")), f"{T}.settings_limits.gain.low", "either sign", "own side of 0"),
+    Mistake("a band with a floor of 0", (('gain_kind = "gain" ', 'gain_kind = "proportional band" '), ("low = 0.1, high = 10.0", "low = 0.0, high = 10.0")), f"{T}.settings_limits.gain.low", "endless gain", "above 0"),
+    Mistake("limits of a derivative that isn't there", (("[loop.mode_request_codes]", "[loop.settings_limits]\nderivative = { low = 0.0 }\n[loop.mode_request_codes]"),), f"{F}.settings_limits.derivative", "has no derivative", "take the table out"),
     mistake("a factor that allows nothing", "high = 10.0, factor_at_most = 3.0", "high = 10.0, factor_at_most = 1.0", f"{T}.settings_limits.gain.factor_at_most", "above 1", "largest factor"),
     # Against the site's limits
     mistake("a factor beyond the site's", "high = 10.0, factor_at_most = 3.0", "high = 10.0, factor_at_most = 6.0", f"{T}.settings_limits.gain.factor_at_most", "the site's factor_at_most 5", "smaller factor"),
