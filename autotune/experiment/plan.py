@@ -55,7 +55,8 @@ class TestPlan:
     needs ``accepts_no_guard``.  ``look_around_s`` is the time observed before anything is written,
     ``baseline_s`` the time held in manual.  ``baseline_noise_at_most_pct`` and
     ``baseline_drift_at_most_pct_per_s`` bound a steady baseline.  ``take_over_within_s`` bounds claim and
-    mode change, ``hand_back_within_s`` the hand-back with its retries.
+    mode change, ``hand_back_within_s`` the hand-back with its retries.  ``io_time_s`` is the longest time of the
+    PLC's inputs and outputs, outside its scan.
     """
 
     __test__ = False  # not a test case, whatever a test collector makes of the name
@@ -78,3 +79,4 @@ class TestPlan:
     baseline_drift_at_most_pct_per_s: float = 0.1
     take_over_within_s: float = 5.0
     hand_back_within_s: float = 30.0
+    io_time_s: float = 0.0

@@ -1,0 +1,275 @@
+"""A test bench in virtual time: an exact plant, a small PLC with a guard, and a shell that performs commands.
+
+The plant is solved exactly (matrix exponentials of the augmented system), so no step size enters.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable, Iterable
+from dataclasses import dataclass, field, replace
+
+import numpy as np
+from scipy.linalg import expm
+
+from autotune.experiment.commands import (
+    ClaimLoop,
+    Command,
+    DriveOutput,
+    HandBack,
+    ReleaseLoop,
+    SetMode,
+    SetSetpoint,
+)
+from autotune.experiment.events import Event, HandBackEnded, HandBackResult, SampleArrived, Started, Written
+from autotune.experiment.gate import gate, gate_hand_back
+from autotune.experiment.hand_back import HandBackDone, hand_back_overdue, next_hand_back_step
+from autotune.experiment.machine import begin, step
+from autotune.experiment.phases import Phase
+from autotune.experiment.plan import ConvergencePlan, RelayPlan, TestPlan
+from autotune.experiment.state import Experiment
+from autotune.loop.limits import Limits
+from autotune.loop.mode import ControlAction, LoopMode
+from autotune.loop.quality import Quality
+from autotune.loop.sample import GuardState, GuardView, Sample, Stamp
+from autotune.loop.write import WriteOutcome, WriteReport
+
+TOKEN = 4711
+
+
+class Plant:
+    """x' = A x + B u(t - delay), y = C x + rest; solved exactly between the switches of its delayed input."""
+
+    def __init__(
+        self, a: Iterable[Iterable[float]], b: Iterable[float], c: Iterable[float], delay_s: float, op_pct: float
+    ) -> None:
+        self.a, self.b, self.c = np.array(a, float), np.array(b, float), np.array(c, float)
+        self.delay_s, self.centre_pct = delay_s, op_pct
+        self.x = np.zeros(len(self.b))
+        self.t_s = 0.0
+        self.inputs: list[tuple[float, float]] = [(-math.inf, op_pct)]
+
+    def drive(self, t_s: float, op_pct: float) -> None:
+        self.inputs.append((t_s, op_pct))
+
+    def pv_at(self, t_s: float) -> float:
+        edges = [at + self.delay_s for at, _ in self.inputs if self.t_s < at + self.delay_s < t_s]
+        for until_s in (*edges, t_s):
+            self._advance(until_s)
+        return float(self.c @ self.x)
+
+    def _advance(self, until_s: float) -> None:
+        held_s = until_s - self.t_s
+        if held_s <= 0.0:
+            return
+        middle_s = self.t_s + 0.5 * held_s - self.delay_s
+        op_pct = next(op for at, op in reversed(self.inputs) if at <= middle_s)
+        size = len(self.b)
+        block = np.zeros((size + 1, size + 1))
+        block[:size, :size], block[:size, size] = self.a, self.b
+        phi = expm(block * held_s)
+        self.x = phi[:size, :size] @ self.x + phi[:size, size] * (op_pct - self.centre_pct)
+        self.t_s = until_s
+
+
+def first_order(gain: float, lag_s: float, delay_s: float, op_pct: float = 50.0) -> Plant:
+    """gain e^(-delay s) / (lag s + 1)."""
+    return Plant([[-1.0 / lag_s]], [gain / lag_s], [1.0], delay_s, op_pct)
+
+
+def three_lags(gain: float = 1.0, op_pct: float = 50.0, delay_s: float = 0.0) -> Plant:
+    """gain e^(-delay s) / (s + 1)^3."""
+    return Plant([[-1, 0, 0], [1, -1, 0], [0, 1, -1]], [gain, 0, 0], [0, 0, 1], delay_s, op_pct)
+
+
+@dataclass
+class Plc:
+    """The block and the guard, as far as a test meets them."""
+
+    plant: Plant
+    rest_pct: float = 40.0
+    mode: LoopMode = LoopMode.MAN
+    sp_pct: float = 40.0
+    op_pct: float = 50.0
+    has_guard: bool = False
+    sp_tracks: bool = False
+    state: GuardState = GuardState.IDLE
+    holder: int = 0
+    echo: int = 0
+    sequence: int = 0
+    effects: int = 0
+    effect_ms: int = 0
+    boot_count: int | None = None
+    has_clock: bool = False
+    clock_from_ms: int = 0
+    t_s: float = 0.0
+    noise: Callable[[float], float] = lambda t_s: 0.0
+    change: Callable[[Sample], Sample] = lambda sample: sample
+    writes: list[tuple[float, Command]] = field(default_factory=list)
+
+    def clock_ms(self, t_s: float) -> int:
+        return (self.clock_from_ms + round(1000.0 * t_s)) % 2**32
+
+    def read(self, t_s: float) -> Sample:
+        self.t_s = t_s
+        pv_pct = self.rest_pct + self.plant.pv_at(t_s) + self.noise(t_s)
+        if self.sp_tracks and self.mode is LoopMode.MAN:
+            self.sp_pct = pv_pct
+        guard = None
+        if self.has_guard:
+            guard = GuardView(
+                state=self.state,
+                holder=self.holder,
+                heartbeat_echo=self.echo,
+                is_enabled=True,
+                is_stop_pressed=False,
+                op_effect_count=self.effects,
+                op_effect_ms=self.effect_ms,
+            )
+        return self.change(
+            Sample(
+                t_s=t_s,
+                taken=Stamp.at(t_s),
+                pv_pct=pv_pct,
+                pv_quality=Quality.GOOD,
+                sp_pct=self.sp_pct,
+                op_pct=self.op_pct,
+                op_quality=Quality.GOOD,
+                mode=self.mode,
+                guard=guard,
+                plc_clock_ms=self.clock_ms(t_s) if self.has_clock else None,
+                boot_count=self.boot_count,
+            )
+        )
+
+    def write(self, t_s: float, command: Command) -> None:
+        self.writes.append((t_s, command))
+        match command:
+            case ClaimLoop():
+                if self.holder == 0:
+                    self.holder, self.state = command.token, GuardState.ARMED
+                self.echo = command.heartbeat
+            case DriveOutput():
+                self.echo = command.heartbeat
+                is_newer = command.sequence != self.sequence and self.state is GuardState.ARMED
+                if not self.has_guard or is_newer:
+                    self.sequence = command.sequence
+                    self.drive(t_s, command.op_pct)
+            case SetMode():
+                self.mode = command.mode
+            case SetSetpoint():
+                self.sp_pct = command.sp_pct
+            case ReleaseLoop():
+                self.holder, self.state = 0, GuardState.IDLE
+            case HandBack():
+                raise AssertionError("the shell performs a hand-back")
+
+    def drive(self, t_s: float, op_pct: float) -> None:
+        self.op_pct = op_pct
+        self.effects += 1
+        self.effect_ms = self.clock_ms(t_s)
+        self.plant.drive(t_s, op_pct)
+
+
+Outcome = Callable[[float, Command], WriteOutcome]
+
+
+@dataclass
+class Bench:
+    """The shell in virtual time: reads on a grid, steps, gates, writes after ``latency_s`` and reports."""
+
+    plc: Plc
+    experiment: Experiment
+    latency_s: float = 0.0
+    outcome: Outcome = lambda t_s, command: WriteOutcome.APPLIED
+    t_s: float = 0.0
+    events: list[Event] = field(default_factory=list)
+    issued: list[tuple[Phase, Command]] = field(default_factory=list)
+
+    def feed(self, event: Event) -> None:
+        self.events.append(event)
+        self.experiment, commands = step(self.experiment, event)
+        for command in commands:
+            assert gate(self.experiment, command) is None
+            self.issued.append((self.experiment.phase, command))
+            if isinstance(command, HandBack):
+                self._hand_back()
+            else:
+                self._perform(command)
+
+    def _perform(self, command: Command) -> None:
+        at_s = self.t_s + self.latency_s
+        outcome = self.outcome(at_s, command)
+        if outcome is not WriteOutcome.REFUSED:
+            self.plc.write(at_s, command)
+        self.feed(Written(self.t_s, command, WriteReport(outcome, Stamp(self.t_s, at_s))))
+
+    def _hand_back(self) -> None:
+        plan, held = self.experiment.plan, self.experiment.held
+        as_found = self.experiment.as_found
+        assert as_found is not None
+        done = hand_back_overdue(as_found, "not verified in time")
+        until_s = self.t_s + plan.hand_back_within_s
+        while self.t_s < until_s:
+            self.t_s += plan.scan_s
+            answer = next_hand_back_step(plan, as_found, held, self.plc.read(self.t_s))
+            if isinstance(answer, HandBackDone):
+                done = answer
+                break
+            held = answer.held
+            for command in answer.commands:
+                assert gate_hand_back(as_found, plan.token, command) is None
+                self.plc.write(self.t_s, command)
+        self.feed(HandBackEnded(self.t_s, done.result, done.detail))
+
+    def scan(self) -> None:
+        self.feed(SampleArrived(self.t_s, self.plc.read(self.t_s)))
+        self.t_s += self.experiment.plan.scan_s
+
+    def run(self, at_most_s: float = 4000.0, until: Callable[[Experiment], bool] = lambda e: e.is_over) -> Experiment:
+        if self.experiment.phase is Phase.IDLE:
+            self.feed(Started(self.t_s))
+        while not until(self.experiment) and self.t_s < at_most_s:
+            self.scan()
+        return self.experiment
+
+
+LIMITS = Limits(
+    step_up_pct=10.0,
+    step_down_pct=10.0,
+    op_low_pct=10.0,
+    op_high_pct=90.0,
+    pv_low_pct=5.0,
+    pv_high_pct=95.0,
+    op_move_s=0.5,
+)
+
+
+def plan_for(limits: Limits = LIMITS, relay: RelayPlan | None = None, **changes: object) -> TestPlan:
+    """A plan without guard, in seconds of a bench."""
+    plan = TestPlan(
+        loop="TIC-204",
+        action=ControlAction.REVERSE,
+        limits=limits,
+        relay=relay or RelayPlan(step_up_pct=10.0, step_down_pct=10.0, hysteresis_pct=0.5),
+        convergence=ConvergencePlan(),
+        scan_s=0.1,
+        plc_scan_s=0.01,
+        has_guard=False,
+        token=TOKEN,
+        accepts_no_guard=True,
+        look_around_s=1.0,
+        baseline_s=2.0,
+    )
+    return replace(plan, **changes)  # type: ignore[arg-type]  # the tests name the plan's own fields
+
+
+def bench(plan: TestPlan, plant: Plant | None = None, latency_s: float = 0.0, **plc: object) -> Bench:
+    """A bench with the plan's PLC, at rest."""
+    controller = Plc(plant or three_lags(), has_guard=plan.has_guard, **plc)  # type: ignore[arg-type]  # as above
+    return Bench(controller, begin(plan), latency_s)
+
+
+def result_of(experiment: Experiment) -> HandBackResult | None:
+    """How the hand-back of an experiment ended."""
+    return None if experiment.hand_back is None else experiment.hand_back.result
