@@ -8,17 +8,39 @@ import sys
 from collections.abc import Callable, Mapping
 from pathlib import Path
 
+from autotune.confirmed_write.phases import TRANSITIONS
 from autotune.experiment import phases
+from autotune.experiment.interlocks import TripCode
 
 DOCUMENT = Path(__file__).parents[2] / "DEVELOPERS.md"
 
 
-def _as_diagram(mermaid: str) -> str:
-    return f"```mermaid\n{mermaid.strip()}\n```"
+def draw_experiment() -> str:
+    """The phases of a test, as a Mermaid state diagram."""
+    return f"```mermaid\n{phases.to_mermaid().strip()}\n```"
+
+
+def draw_confirmed_write() -> str:
+    """The phases of a write of settings, as a Mermaid state diagram; waiting in a phase is left out."""
+    arrows = [
+        f"    {phase.name} --> {to.name}: {trigger.value}"
+        for phase, ways in TRANSITIONS.items()
+        for trigger, to in ways.items()
+        if to is not phase
+    ]
+    return "\n".join(["```mermaid", "stateDiagram-v2", f"    [*] --> {next(iter(TRANSITIONS)).name}", *arrows, "```"])
+
+
+def draw_trips() -> str:
+    """Every trip code with what it means and what to do next, as a table."""
+    rows = [f"| `{code.name}` | {code.meaning} | {code.remedy} |" for code in TripCode]
+    return "\n".join(["| code | it means | do |", "| --- | --- | --- |", *rows])
 
 
 PARTS: Mapping[str, Callable[[], str]] = {
-    "experiment": lambda: _as_diagram(phases.to_mermaid()),
+    "experiment": draw_experiment,
+    "confirmed_write": draw_confirmed_write,
+    "trips": draw_trips,
 }
 
 

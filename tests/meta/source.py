@@ -43,7 +43,7 @@ def modules(*folders: str) -> tuple[Path, ...]:
 def texts() -> Iterator[Path]:
     """Every text file that belongs to the repository."""
     for path in sorted(ROOT.iterdir()):
-        if path.is_file():
+        if path.is_file() and (path.suffix in TEXT_SUFFIXES and not path.name.startswith(".coverage")):
             yield path
         elif path.name in {*ROOMS, "config", ".ci"}:
             yield from (

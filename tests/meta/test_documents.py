@@ -31,4 +31,10 @@ def test_a_stale_part_is_seen_and_its_surroundings_stay() -> None:
 @pytest.mark.parametrize("name", PARTS)
 def test_a_part_without_its_markers_is_an_error(name: str) -> None:
     with pytest.raises(LookupError, match=name):
-        with_parts("no markers here")
+        with_parts("no markers here", {name: PARTS[name]})
+
+
+@pytest.mark.parametrize("name", PARTS)
+def test_a_part_is_drawn_between_its_markers(name: str) -> None:
+    empty = f"<!-- generated: {name} -->\n<!-- end -->\n"
+    assert len(with_parts(empty, {name: PARTS[name]}).splitlines()) > len(empty.splitlines()) + 10

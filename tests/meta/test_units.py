@@ -16,6 +16,10 @@ EXCEPTIONS = {
     "autotune/loop/settings.py BlockFields.*": "in the settings field's own unit, which the block's description tells",
     "autotune/loop/settings.py BlockDescription.*_off": "in the settings field's own unit",
     "autotune/confirmed_write/plan.py FieldLimit.*": "in the settings field's own unit",
+    "autotune/confirmed_write/reasons.py not_held(*)": "numbers of a settings field, in the field's own unit",
+    "autotune/experiment/trace.py Trace.recent": "pairs of t_s and pv_pct",
+    "autotune/identify/fourier.py joined_mean -> float": "in the unit of the samples that it is given",
+    "autotune/identify/shapes.py response(x)": "a frequency over another, as the docstring says",
     "autotune/experiment/plan.py RelayPlan.hysteresis_per_noise": "a ratio; its name says of what to what",
 }
 

@@ -1,7 +1,7 @@
 """Which numbers of the pure rooms carry no unit in their name.
 
-Looked at: the fields of every class, and the parameters and returns of every public function, whose
-annotation is a float or an ``Interval``, bare, optional or in a tuple, list or sequence.
+Looked at: the fields of every public class, and the parameters and returns of every public function,
+whose annotation is a float or an ``Interval``, bare, optional or in a tuple, list or sequence.
 """
 
 import ast
@@ -21,6 +21,7 @@ DIMENSIONLESS = (
     "level", "confidence",  # claimed coverage
     "weight",  # 0 .. 1
     "sensitivity",  # peak of |S| or |T|
+    "number",  # in a controller's settings field, in that field's own unit
 )  # fmt: skip
 
 QUALIFIERS = ("at_most", "at_least", "low", "high", "best")
@@ -59,12 +60,14 @@ def numbers_without_unit(tree: ast.Module) -> Iterator[str]:
 
 def _in_body(body: list[ast.stmt], prefix: str) -> Iterator[str]:
     for node in body:
+        if isinstance(node, ast.ClassDef | ast.FunctionDef | ast.AsyncFunctionDef) and node.name.startswith("_"):
+            continue
         if isinstance(node, ast.ClassDef):
             yield from _in_body(node.body, f"{prefix}{node.name}.")
         elif isinstance(node, ast.AnnAssign) and isinstance(node.target, ast.Name):
             if is_number(node.annotation) and not has_unit(node.target.id):
                 yield f"{prefix}{node.target.id}"
-        elif isinstance(node, ast.FunctionDef | ast.AsyncFunctionDef) and not node.name.startswith("_"):
+        elif isinstance(node, ast.FunctionDef | ast.AsyncFunctionDef):
             yield from _in_signature(node, f"{prefix}{node.name}")
 
 
