@@ -17,9 +17,10 @@ from autotune.service.clock import WallClock, utc_now
 from autotune.service.journal_codec import to_json
 from autotune.service.reserve import Reserve
 
-LineKind = Literal["plan", "event", "command", "phase", "as_found", "note", "end"]
-"""``plan`` the whole plan; ``event`` before it is stepped; ``command`` before it is performed, hand-back included;
-``phase`` its new name; ``as_found`` before the first write; ``note`` a text or mapping; ``end`` how it ended."""
+LineKind = Literal["plan", "write_plan", "event", "command", "phase", "as_found", "note", "end"]
+"""``plan`` of a test or ``write_plan`` of a write of settings, whole; ``event`` before it is stepped;
+``command`` before it is performed, those of a hand-back too; ``phase`` its new name; ``as_found`` before
+the first write; ``note`` a text or mapping; ``end`` how it ended."""
 
 Sync = Callable[[int], None]
 
@@ -46,7 +47,11 @@ class RawFile(Protocol):
         ...
 
     def truncate(self, size: int, /) -> int:
-        """Cut the file to ``size`` bytes."""
+        """Cut the file to ``size`` bytes; where the next write goes is not changed by it."""
+        ...
+
+    def seek(self, place: int, /) -> int:
+        """Let the next write go to ``place``."""
         ...
 
     def fileno(self) -> int:
@@ -167,6 +172,7 @@ class FileJournal:
     def _cut_back(self) -> None:
         try:
             self._raw.truncate(self._size_bytes)
+            self._raw.seek(self._size_bytes)
         except (OSError, ValueError):
             self._raw.close()  # half a line stands at the end; nothing may follow it
 

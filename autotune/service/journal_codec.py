@@ -15,7 +15,9 @@ from enum import Enum
 from types import MappingProxyType, ModuleType
 from typing import Any
 
-from autotune.confirmed_write import plan as confirmed_write_plan
+from autotune.confirmed_write import commands as write_commands
+from autotune.confirmed_write import events as write_events
+from autotune.confirmed_write import plan as write_plan
 from autotune.errors import JournalError
 from autotune.experiment import commands, events
 from autotune.experiment import plan as experiment_plan
@@ -34,7 +36,9 @@ _MODULES = (
     commands,
     events,
     experiment_plan,
-    confirmed_write_plan,
+    write_commands,
+    write_events,
+    write_plan,
 )
 
 
@@ -92,7 +96,7 @@ def from_json(coded: object) -> Any:
     if not isinstance(coded, dict) or len(coded) != 1:
         raise JournalError(f"not an entry of a journal: {str(coded)[:80]}")
     ((tag, content),) = coded.items()
-    if tag == "float" and content in _ODD_FLOATS:
+    if tag == "float" and isinstance(content, str) and content in _ODD_FLOATS:
         return _ODD_FLOATS[content]
     if tag == "map" and isinstance(content, dict):
         return {key: from_json(part) for key, part in content.items()}

@@ -6,30 +6,33 @@ from datetime import datetime
 from pathlib import Path
 from typing import TypeVar
 
+from autotune.confirmed_write.commands import ReadSettings
+from autotune.confirmed_write.plan import WritePlan
 from autotune.errors import JournalError
-from autotune.experiment.commands import Command, DriveOutput, SetMode
+from autotune.experiment.commands import DriveOutput, SetMode
 from autotune.experiment.plan import TestPlan
 from autotune.loop.limits import AsFound
 from autotune.service.journal_reading import JournalLine, is_ended, read_journal
-from autotune.service.journal_replay import replay
 
 _T = TypeVar("_T")
 
 
 @dataclass(frozen=True, slots=True)
 class OpenIntent:
-    """A test that touched its loop and whose end was never written: the loop may still be as the test left it.
+    """A test or a write of settings that touched its loop and whose end was never written.
 
-    ``as_found`` is what to give back; ``last_output`` and ``last_mode`` are our last writes (``None``: never
-    written); ``last_utc`` is the last line's instant.  ``fault`` says why the journal can't be read; then
-    nothing else is known and a person must look.
+    A test has ``plan`` and ``as_found``, what to give back; ``last_output`` and ``last_mode`` are its last
+    writes (``None``: never written).  A write of settings has ``write_plan``, which holds its as-found.
+    ``last_command`` is the last write of either, begun if not done; ``last_utc`` is the last line's instant.
+    ``fault`` says why the journal can't be read; then nothing else is known and a person must look.
     """
 
     file: Path
-    sheet_id: str
+    journal_id: str
     plan: TestPlan | None = None
+    write_plan: WritePlan | None = None
     as_found: AsFound | None = None
-    last_command: Command | None = None
+    last_command: object = None
     last_output: DriveOutput | None = None
     last_mode: SetMode | None = None
     started_utc: datetime | None = None
@@ -39,9 +42,10 @@ class OpenIntent:
 
 
 def open_intents(data_dir: Path) -> tuple[OpenIntent, ...]:
-    """Every journal without an ``end`` whose test had begun to write, oldest name first.
+    """Every journal without an ``end`` that had begun to write to its loop, in order of names.
 
     A journal that can't be read is among them, with its ``fault``: silence would hide a touched loop.
+    A test that another process is just running has no ``end`` either: hold the loop's lock before you act.
     """
     files = sorted((data_dir / "journals").glob("*.jsonl"))
     found = (_open_intent(file) for file in files if not is_ended(file))
@@ -53,17 +57,19 @@ def _open_intent(file: Path) -> OpenIntent | None:
         journal = read_journal(file)
     except JournalError as fault:
         return OpenIntent(file, file.stem, fault=str(fault))
-    kinds = {line.kind for line in journal.lines}
-    if "end" in kinds or "command" not in kinds:
+    is_ended_within = any(line.kind == "end" for line in journal.lines)
+    commands = [
+        line.payload for line in journal.lines if line.kind == "command" and not isinstance(line.payload, ReadSettings)
+    ]
+    if is_ended_within or not commands:
         return None
-    commands = [line.payload for line in journal.lines if line.kind == "command"]
-    last_command = commands[-1]
     return OpenIntent(
         file,
         file.stem,
         plan=next(_payloads(journal.lines, "plan", TestPlan), None),
-        as_found=_as_found(journal.lines),
-        last_command=last_command if isinstance(last_command, Command) else None,
+        write_plan=next(_payloads(journal.lines, "write_plan", WritePlan), None),
+        as_found=next(_payloads(journal.lines, "as_found", AsFound), None),
+        last_command=commands[-1],
         last_output=next((c for c in reversed(commands) if isinstance(c, DriveOutput)), None),
         last_mode=next((c for c in reversed(commands) if isinstance(c, SetMode)), None),
         started_utc=journal.lines[0].utc,
@@ -74,9 +80,3 @@ def _open_intent(file: Path) -> OpenIntent | None:
 
 def _payloads(lines: Sequence[JournalLine], kind: str, payload_type: type[_T]) -> Iterator[_T]:
     return (line.payload for line in lines if line.kind == kind and isinstance(line.payload, payload_type))
-
-
-def _as_found(lines: Sequence[JournalLine]) -> AsFound | None:
-    """As the journal says, else as the replayed test knew it."""
-    said = next(_payloads(lines, "as_found", AsFound), None)
-    return said if said is not None else replay(lines)[0].as_found

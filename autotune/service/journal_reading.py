@@ -79,6 +79,7 @@ def resume_journal(file: Path, *, wall_clock: WallClock = utc_now, sync: Sync = 
         raw.seek(journal.size_bytes)
         rest = raw.read()
         raw.truncate(journal.size_bytes)
+        raw.seek(journal.size_bytes)
     except OSError as fault:
         raise JournalError(f"{file}: {fault.strerror}; mend its rights") from fault
     resumed = FileJournal(
@@ -121,7 +122,7 @@ def _fields(piece: bytes) -> dict[str, object] | None:
     if not piece.endswith(b"\n"):
         return None
     try:
-        fields = json.loads(piece)
+        fields = json.loads(piece, parse_constant=_no_constant)
     except ValueError:
         return None
     return fields if isinstance(fields, dict) and fields.keys() == {"n", "utc", "t_s", "kind", "payload"} else None
@@ -135,3 +136,7 @@ def _line(fields: dict[str, object], where: str) -> JournalLine:
         return JournalLine(n, datetime.fromisoformat(utc), float(t_s), kind, from_json(fields["payload"]))
     except (JournalError, ValueError) as fault:
         raise JournalError(f"{where}: {fault}") from fault
+
+
+def _no_constant(word: str) -> None:
+    raise ValueError(f"{word} is no number of JSON")
