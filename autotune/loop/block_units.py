@@ -34,7 +34,8 @@ SINGLE_PRECISION_RATIO = 1e-6
 """Two field numbers closer than this are one number: a controller may hold it in 32 bits (IEEE 754)."""
 
 _STEP_SLACK = 1e-9
-"""A number this close to a whole step of its field is on the step."""
+_STEP_SLACK_RATIO = 1e-12
+"""A number this close to a whole step of its field is on the step (the ratio: double precision itself)."""
 
 _INTEGRAL_TIMES = (IntegralKind.TIME_S, IntegralKind.TIME_MIN)
 _INTEGRAL_REPEATS = (IntegralKind.REPEATS_PER_S, IntegralKind.REPEATS_PER_MIN)
@@ -284,7 +285,8 @@ def _on_step(exact: float, resolution: float, is_weaker_when_bigger: bool) -> fl
     if resolution == 0.0:
         return exact
     steps = abs(exact) / resolution
-    whole = ceil(steps - _STEP_SLACK) if is_weaker_when_bigger else floor(steps + _STEP_SLACK)
+    slack = _STEP_SLACK + _STEP_SLACK_RATIO * steps
+    whole = ceil(steps - slack) if is_weaker_when_bigger else floor(steps + slack)
     magnitude = float(whole * Decimal(repr(resolution)))  # 3 x 0.1 is to read 0.3, as on the panel
     return magnitude if exact > 0.0 else -magnitude
 
