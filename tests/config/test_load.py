@@ -84,10 +84,9 @@ def test_modes_are_told_both_ways(example: Configuration) -> None:
     assert dict(codes.read)[6] is LoopMode.LOCAL
     assert dict(codes.write) == {LoopMode.MAN: 0, LoopMode.AUTO: 1, LoopMode.CAS: 2, LoopMode.REMOTE: 3}
     flow = loop_of(example, "FIC-101").mode_codes
-    assert (dict(flow.read), dict(flow.write)) == (
-        {1: LoopMode.MAN, 2: LoopMode.AUTO},
-        {LoopMode.MAN: 11, LoopMode.AUTO: 12},
-    )
+    modes = (LoopMode.MAN, LoopMode.AUTO, LoopMode.CAS, LoopMode.REMOTE)
+    assert dict(flow.read) == dict(zip((1, 2, 3, 4), modes, strict=True))
+    assert dict(flow.write) == dict(zip(modes, (11, 12, 13, 14), strict=True))
 
 
 def test_a_block_holds_only_what_is_told(example: Configuration) -> None:

@@ -121,8 +121,8 @@ MISTAKES = (
     # Modes and guard
     mistake("two modes with one code", "CAS = 2 ", "CAS = 1 ", f"{T}.mode_codes.CAS", "already the code of AUTO", "its own code"),
     mistake("no code of manual", "MAN = 1 ", "# ", f"{F}.mode_codes.MAN", "missing", "code of manual"),
-    mistake("only manual", "AUTO = 2  ", "# ", f"{F}.mode_codes.AUTO", "no mode but manual", "the code of automatic"),
-    mistake("a mode asked for but never read", "AUTO = 12 ", "AUTO = 12\nCAS = 13 ", f"{F}.mode_request_codes.CAS", "not read back", "add CAS to [loop.mode_codes]"),
+    Mistake("only manual", (("AUTO = 2  ", "# "), ("CAS = 3  ", "# "), ("REMOTE = 4  ", "# ")), f"{F}.mode_codes.AUTO", "no mode but manual", "the code of automatic"),
+    mistake("a mode asked for but never read", "CAS = 3  ", "# ", f"{F}.mode_request_codes.CAS", "not read back", "add CAS to [loop.mode_codes]"),
     mistake("no guard and no consent", 'without_guard = "with consent"          # only', '# ', f"{F}.guard", "missing", 'without_guard = "with consent"'),
     mistake("a guard without its tags", "heartbeat_echo = {", "# {", f"{T}.tags.heartbeat_echo", "[loop.guard] is there", "add the tag heartbeat_echo"),
     mistake("guard tags with a gap", "op_request = { address = 35 }", "op_request = { address = 36 }", f"{T}.tags.op_request.address", "does not follow sequence", "side by side"),
