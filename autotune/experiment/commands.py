@@ -7,10 +7,15 @@ from autotune.loop.mode import LoopMode
 
 @dataclass(frozen=True, slots=True)
 class ClaimLoop:
-    """Ask the PLC's guard for the loop: write ``token`` as holder request with a first heartbeat."""
+    """Ask the PLC's guard for the loop, or keep the claim alive: ``token`` as holder request, and a heartbeat.
+
+    ``sequence`` is that of the last move (0 before the first one).  It has to be in the PLC's mailbox no later than
+    the request: the guard takes what it finds there when it arms as old, and only what is newer as a move.
+    """
 
     token: int
     heartbeat: int
+    sequence: int = 0
 
 
 @dataclass(frozen=True, slots=True)

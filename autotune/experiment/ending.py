@@ -4,6 +4,7 @@ from dataclasses import replace
 
 from autotune.experiment.commands import Command, HandBack, ReleaseLoop
 from autotune.experiment.events import HandBackEnded, HandBackResult
+from autotune.experiment.held import may_release
 from autotune.experiment.interlocks import TripCode, to_trip
 from autotune.experiment.phases import Trigger, next_phase
 from autotune.experiment.state import EndKind, Experiment, Stage
@@ -58,11 +59,10 @@ def end_early(experiment: Experiment, by: str) -> Step:
 def release(experiment: Experiment, sample: Sample, sign: str) -> Step:
     """The loop is somebody else's now (S3): write nothing to it.
 
-    Only our token goes back, and only where the PLC still names us as holder.
+    Only our token goes back, and only while the PLC names us or nobody as holder.
     """
     experiment = _left(experiment, Trigger.TAKEN, EndKind.TAKEN, sign)
-    is_still_holder = sample.guard is not None and sample.guard.holder == experiment.plan.token
-    return experiment, (ReleaseLoop(),) if is_still_holder else ()
+    return experiment, (ReleaseLoop(),) if may_release(sample.guard, experiment.plan.token) else ()
 
 
 def close(experiment: Experiment, ended: HandBackEnded) -> Step:

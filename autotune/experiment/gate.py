@@ -13,6 +13,9 @@ from autotune.loop.limits import AsFound
 from autotune.loop.mode import LoopMode
 from autotune.loop.outcome import Refusal
 
+ROUNDING_RATIO = 1e-9
+"""What the sums of a ramp may lose to rounding."""
+
 REMEDY = "nothing was sent; report this with the journal"
 
 
@@ -59,6 +62,11 @@ def _judge_output(experiment: Experiment, as_found: AsFound, command: DriveOutpu
         return _refusal("GATE_OUTPUT", f"output {command.op_pct} % is outside {low_pct} .. {high_pct} %")
     if experiment.phase is Phase.BASELINE and command.op_pct != as_found.op_pct:
         return _refusal("GATE_OUTPUT", "the baseline is held at the output as found")
+    rate, before = experiment.plan.limits.op_rate_pct_per_s, experiment.recording.moves.last
+    if rate is not None and before is not None and command.op_pct != as_found.op_pct:
+        reach_pct = rate * experiment.plan.scan_s * (1.0 + ROUNDING_RATIO)
+        if not abs(command.op_pct - before.op_pct) <= reach_pct:
+            return _refusal("GATE_RATE", f"output {command.op_pct} % after {before.op_pct} % is too fast")
     return _judge_token(experiment, command.token)
 
 

@@ -10,7 +10,7 @@ from math import isfinite
 
 from autotune.experiment.commands import Command, ReleaseLoop, SetSetpoint
 from autotune.experiment.events import HandBackResult
-from autotune.experiment.held import Held, ask_mode, claim, confirmed, drive, is_ours, is_released
+from autotune.experiment.held import Held, ask_mode, claim, confirmed, drive, is_ours, is_released, may_release
 from autotune.experiment.plan import TestPlan
 from autotune.experiment.takeover import has_sp_changed, sign_of_takeover
 from autotune.loop.limits import AsFound
@@ -108,8 +108,8 @@ def _verify_only(plan: TestPlan, as_found: AsFound, held: Held, sample: Sample) 
 
 
 def _release_once(held: Held, sample: Sample, done: HandBackDone) -> HandBackStep:
-    """Ask once for the token to be released; the loop itself is settled, so nothing waits for it."""
-    if is_released(sample.guard, held.token) or held.has_release_been_asked:
+    """Take our request back once, even where the guard has let us go: else it would arm for us at the next chance."""
+    if held.has_release_been_asked or not may_release(sample.guard, held.token):
         return done
     return HandBackWrites((ReleaseLoop(),), replace(held, has_release_been_asked=True))
 

@@ -47,7 +47,7 @@ class Held:
 def claim(held: Held) -> tuple[Held, ClaimLoop]:
     """Ask the guard for the loop, or keep the claim alive: the next heartbeat."""
     held = replace(held, heartbeat=(held.heartbeat + 1) % WORD)
-    return held, ClaimLoop(held.token, held.heartbeat)
+    return held, ClaimLoop(held.token, held.heartbeat, held.sequence)
 
 
 def ask_mode(held: Held, mode: LoopMode, reading: LoopMode) -> tuple[Held, SetMode]:
@@ -88,6 +88,11 @@ def confirmed(held: Held, sample: Sample, resolution_pct: float) -> Held:
 def is_ours(guard: GuardView, token: int) -> bool:
     """Whether the guard is armed and, as far as the PLC tells, holds the loop for us."""
     return guard.state is GuardState.ARMED and guard.holder in (None, token)
+
+
+def may_release(guard: GuardView | None, token: int) -> bool:
+    """Whether our request may be taken back: the guard holds the loop for us or for nobody, not for another."""
+    return guard is not None and guard.holder in (None, 0, token)
 
 
 def is_released(guard: GuardView | None, token: int) -> bool:

@@ -337,7 +337,7 @@ def _band(pv_pct: float, limits: Limits) -> str:
     return f"PV {pv_pct:.2f} %, limits {limits.pv_low_pct:.2f} .. {limits.pv_high_pct:.2f} %"
 
 
-OF_THE_PLC: tuple[Interlock, ...] = (plc_restarted, guard_gave_back, stop_pressed)
+OF_THE_PLC: tuple[Interlock, ...] = (plc_restarted, stop_pressed, guard_gave_back)
 """Judged before whose loop it is: what the PLC itself did to the loop is nobody's takeover."""
 
 OF_THE_CLOCK: tuple[Interlock, ...] = (link_lost, take_over_late, took_too_long, no_switch)

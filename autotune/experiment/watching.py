@@ -6,7 +6,7 @@ from autotune.experiment import recording, trace
 from autotune.experiment.commands import ClaimLoop, SetMode
 from autotune.experiment.deadlines import end_due_s, switch_due_s, take_over_due_s, view_due_s
 from autotune.experiment.ending import Step, release, trip
-from autotune.experiment.held import confirmed
+from autotune.experiment.held import confirmed, is_ours
 from autotune.experiment.interlocks import (
     OF_THE_CLOCK,
     OF_THE_LOOP,
@@ -105,7 +105,7 @@ def _shows(experiment: Experiment, sample: Sample, unheard: Unheard) -> bool:
     """Whether a reading shows that an unheard write has landed."""
     command = unheard.command
     if isinstance(command, ClaimLoop):
-        return sample.guard is not None and sample.guard.holder == command.token
+        return sample.guard is not None and is_ours(sample.guard, command.token)
     if isinstance(command, SetMode):
         return sample.mode is command.mode
     resolution_pct = experiment.plan.limits.op_resolution_pct

@@ -33,6 +33,8 @@ from autotune.loop.mode import ControlAction, LoopMode
 from autotune.loop.quality import Quality
 from autotune.loop.sample import GuardState, GuardView, Sample, Stamp
 from autotune.loop.write import WriteOutcome, WriteReport
+from simulator.guard import Guard, GuardInputs, GuardLimits
+from simulator.guard import GuardState as PlcGuardState
 
 TOKEN = 4711
 
@@ -82,9 +84,20 @@ def three_lags(gain: float = 1.0, op_pct: float = 50.0, delay_s: float = 0.0) ->
     return Plant([[-1, 0, 0], [1, -1, 0], [0, 1, -1]], [gain, 0, 0], [0, 0, 1], delay_s, op_pct)
 
 
+MODE_CODES = {LoopMode.MAN: 0, LoopMode.AUTO: 1}
+GUARD_STATES = {
+    PlcGuardState.IDLE: GuardState.IDLE,
+    PlcGuardState.ARMED: GuardState.ARMED,
+    PlcGuardState.GAVE_BACK: GuardState.GAVE_BACK,
+}
+
+
 @dataclass
 class Plc:
-    """The block and the guard, as far as a test meets them."""
+    """The block, the mailbox and the soft plant's own guard, scanned at every read and after every write.
+
+    ``mailbox_sequence`` is what an earlier test left; ``is_guard_stopped`` stops the guard's scan, as a PLC in stop.
+    """
 
     plant: Plant
     rest_pct: float = 40.0
@@ -93,50 +106,78 @@ class Plc:
     op_pct: float = 50.0
     has_guard: bool = False
     sp_tracks: bool = False
-    state: GuardState = GuardState.IDLE
-    holder: int = 0
-    echo: int = 0
-    sequence: int = 0
-    effects: int = 0
-    effect_ms: int = 0
+    is_enabled: bool = True
+    is_stop_pressed: bool = False
+    is_guard_stopped: bool = False
+    is_pv_failed: bool = False
+    mailbox_sequence: int = 0
     boot_count: int | None = None
     has_clock: bool = False
     clock_from_ms: int = 0
-    t_s: float = 0.0
     noise: Callable[[float], float] = lambda t_s: 0.0
     change: Callable[[Sample], Sample] = lambda sample: sample
     writes: list[tuple[float, Command]] = field(default_factory=list)
 
+    def __post_init__(self) -> None:
+        self.guard = Guard(GuardLimits(0.0, 100.0, -1e9, 1e9))
+        self.request, self.heartbeat, self.op_request_pct = 0, 0, 0.0
+        self._scan(0.0, 0.0, is_enable_pressed=False)
+        self._scan(0.0, 0.0, is_enable_pressed=self.is_enabled)
+
     def clock_ms(self, t_s: float) -> int:
         return (self.clock_from_ms + round(1000.0 * t_s)) % 2**32
 
+    def _scan(self, t_s: float, pv_pct: float, *, is_enable_pressed: bool = False) -> None:
+        if self.is_guard_stopped:
+            return
+        given = self.guard.scan(
+            GuardInputs(
+                clock_ms=self.clock_ms(t_s),
+                is_enable_pressed=is_enable_pressed,
+                is_stop_pressed=self.is_stop_pressed,
+                holder_request=self.request,
+                heartbeat=self.heartbeat,
+                sequence=self.mailbox_sequence,
+                op_request_pct=self.op_request_pct,
+                pv_eu=pv_pct,
+                is_pv_failed=self.is_pv_failed,
+                op_pct=self.op_pct,
+                sp_eu=self.sp_pct,
+                mode=MODE_CODES.get(self.mode, 9),
+            )
+        )
+        if given.op_pct is not None:
+            self.move(t_s, given.op_pct)
+        if given.sp_eu is not None:
+            self.sp_pct = given.sp_eu
+        if given.mode is not None:
+            self.mode = LoopMode.MAN if given.mode == MODE_CODES[LoopMode.MAN] else LoopMode.AUTO
+
     def read(self, t_s: float) -> Sample:
-        self.t_s = t_s
         pv_pct = self.rest_pct + self.plant.pv_at(t_s) + self.noise(t_s)
         if self.sp_tracks and self.mode is LoopMode.MAN:
             self.sp_pct = pv_pct
-        guard = None
-        if self.has_guard:
-            guard = GuardView(
-                state=self.state,
-                holder=self.holder,
-                heartbeat_echo=self.echo,
-                is_enabled=True,
-                is_stop_pressed=False,
-                op_effect_count=self.effects,
-                op_effect_ms=self.effect_ms,
-            )
+        self._scan(t_s, pv_pct)
+        guard = GuardView(
+            state=GUARD_STATES[self.guard.state],
+            holder=self.guard.holder,
+            heartbeat_echo=self.guard.heartbeat_echo,
+            is_enabled=self.guard.is_enabled,
+            is_stop_pressed=self.is_stop_pressed,
+            op_effect_count=self.guard.op_effect_count,
+            op_effect_ms=self.guard.op_effect_ms,
+        )
         return self.change(
             Sample(
                 t_s=t_s,
                 taken=Stamp.at(t_s),
-                pv_pct=pv_pct,
-                pv_quality=Quality.GOOD,
+                pv_pct=None if self.is_pv_failed else pv_pct,
+                pv_quality=Quality.BAD if self.is_pv_failed else Quality.GOOD,
                 sp_pct=self.sp_pct,
                 op_pct=self.op_pct,
                 op_quality=Quality.GOOD,
                 mode=self.mode,
-                guard=guard,
+                guard=guard if self.has_guard else None,
                 plc_clock_ms=self.clock_ms(t_s) if self.has_clock else None,
                 boot_count=self.boot_count,
             )
@@ -146,28 +187,26 @@ class Plc:
         self.writes.append((t_s, command))
         match command:
             case ClaimLoop():
-                if self.holder == 0:
-                    self.holder, self.state = command.token, GuardState.ARMED
-                self.echo = command.heartbeat
+                self.mailbox_sequence = command.sequence
+                self.request, self.heartbeat = command.token, command.heartbeat
+            case DriveOutput() if self.has_guard:
+                self.request, self.heartbeat = command.token, command.heartbeat
+                self.op_request_pct, self.mailbox_sequence = command.op_pct, command.sequence
             case DriveOutput():
-                self.echo = command.heartbeat
-                is_newer = command.sequence != self.sequence and self.state is GuardState.ARMED
-                if not self.has_guard or is_newer:
-                    self.sequence = command.sequence
-                    self.drive(t_s, command.op_pct)
+                self.move(t_s, command.op_pct)
             case SetMode():
                 self.mode = command.mode
             case SetSetpoint():
                 self.sp_pct = command.sp_pct
             case ReleaseLoop():
-                self.holder, self.state = 0, GuardState.IDLE
+                self.request = 0
             case HandBack():
                 raise AssertionError("the shell performs a hand-back")
+        self._scan(t_s, self.rest_pct)
 
-    def drive(self, t_s: float, op_pct: float) -> None:
+    def move(self, t_s: float, op_pct: float) -> None:
+        """The block's output, by whoever may move it."""
         self.op_pct = op_pct
-        self.effects += 1
-        self.effect_ms = self.clock_ms(t_s)
         self.plant.drive(t_s, op_pct)
 
 
