@@ -129,6 +129,21 @@ def test_notes_and_recoveries_are_added_with_their_own_hashes() -> None:
         assert entry.hash in page
 
 
+def test_what_is_not_known_is_left_out_or_said_but_never_guessed() -> None:
+    one = sheet()
+    assert one.as_found is not None
+    bare = one.as_found.model_copy(update={"settings": (), "sp_pct": None, "sp_eu": None, "pv_eu": None})
+    proposal = one.proposals[0].model_copy(update={"gain_factor": None, "rounding_pct": None})
+    met = recovery(one).model_copy(update={"present": None})
+    written = change(one).model_copy(update={"op_bump_pct": None})
+    page = _page(met, written, as_found=bare, proposals=(proposal,), journal_digest=None)
+    assert "Setpoint        not known" in page
+    assert "PV              59.9 %\n" in page
+    assert "Journal         not kept" in page
+    for phrase in ("as it was met", "times the present one", "rounding changed", "the output moved", "None"):
+        assert phrase not in page
+
+
 def test_it_is_signed_by_three() -> None:
     signed = [line.split()[0] for line in _page().splitlines() if "date ...." in line]
     assert signed == ["Tested", "Witnessed", "Accepted"]

@@ -46,12 +46,13 @@ WRITE_PLAN = WritePlan("TIC-204", "a-rule", BlockFields(1.5, 0.8, None), BlockFi
 class SmallDisk:
     """An unbuffered file on a disk with so much room; writes what fits, as a real one does."""
 
-    def __init__(self, file: Path, room_bytes: int) -> None:
+    def __init__(self, file: Path, room_bytes: int, *, is_loud: bool = True) -> None:
         self._raw = file.open("xb", buffering=0)
         self.room_bytes = room_bytes
+        self.is_loud = is_loud  # a silent one tells a full disk only by writing nothing
 
     def write(self, line: bytes, /) -> int:
-        if self.room_bytes == 0:
+        if self.room_bytes == 0 and self.is_loud:
             raise OSError(errno.ENOSPC, os.strerror(errno.ENOSPC))
         written = self._raw.write(line[: self.room_bytes])
         self.room_bytes -= written
@@ -178,6 +179,21 @@ def test_a_durable_line_that_may_not_be_on_the_disk_is_told(tmp_path: Path) -> N
     journal.close()
 
 
+def test_a_disk_that_is_found_full_only_by_a_sync_frees_the_reserve_too(tmp_path: Path) -> None:
+    faults: list[OSError] = []
+
+    def sync(descriptor: int) -> None:
+        if faults:
+            raise faults.pop()
+
+    journal = FileJournal.create(tmp_path, ID, sync=sync, reserve_bytes=1000)
+    faults.append(OSError(errno.ENOSPC, os.strerror(errno.ENOSPC)))
+    with pytest.raises(JournalError, match="line 1 may not be on the disk: the disk is full; free some space"):
+        journal.record("plan", PLAN, t_s=0.0, durable=True)
+    assert not journal.file.with_suffix(".reserve").exists()
+    journal.close()
+
+
 def test_a_closed_journal_takes_no_line_and_may_be_closed_again(journal: FileJournal) -> None:
     journal.close()
     journal.close()
@@ -199,10 +215,13 @@ def test_the_reserve_takes_its_space_before_the_test_and_goes_with_its_end(journ
     assert not reserve.exists()
 
 
+@pytest.mark.parametrize("is_loud", [True, False])
 @pytest.mark.parametrize("room_bytes", [0, 1, 60, 119])
-def test_on_a_full_disk_the_reserve_takes_the_line_and_the_test_is_told_once(tmp_path: Path, room_bytes: int) -> None:
+def test_on_a_full_disk_the_reserve_takes_the_line_and_the_test_is_told_once(
+    tmp_path: Path, room_bytes: int, is_loud: bool
+) -> None:
     file = tmp_path / "small.jsonl"
-    disk = SmallDisk(file, room_bytes)
+    disk = SmallDisk(file, room_bytes, is_loud=is_loud)
     journal = FileJournal(file, disk, DiskReserve(tmp_path / "small.reserve", 1000, disk), wall_clock=lambda: NOON)
     with pytest.raises(JournalError, match=r"small\.jsonl: the disk is full; the reserve was used to write on"):
         journal.record("event", AbortAsked(0.0, "the operator at the skid, with a long name"), t_s=0.0)
@@ -428,6 +447,13 @@ def test_an_unreadable_journal_is_an_open_intent_with_its_fault(tmp_path: Path) 
     assert intent.plan is None
     assert intent.fault is not None
     assert "unknown tag" in intent.fault
+
+
+def test_what_stands_where_a_journal_should_is_an_open_intent_with_its_fault(tmp_path: Path) -> None:
+    (tmp_path / "journals" / f"{ID}.jsonl").mkdir(parents=True)
+    (intent,) = open_intents(tmp_path)
+    assert intent.fault is not None
+    assert "Is a directory; mend its rights" in intent.fault
 
 
 def test_no_journals_at_all_are_no_open_intents(tmp_path: Path) -> None:
