@@ -24,7 +24,7 @@ from filelock import FileLock, Timeout
 from autotune.errors import LoopBusy
 from autotune.service.clock import WallClock, utc_now
 
-LockedThing = Literal["loop", "endpoint"]
+LockedThing = Literal["loop", "endpoint", "unit"]
 
 # Held by the process, not by the thread that happened to take it: any thread may release.
 _AT_ONCE: dict[str, Any] = {"timeout": 0, "thread_local": False}

@@ -1,0 +1,141 @@
+"""Findings and proposals as a person compares them, and as data."""
+
+from math import tau
+
+from rich.table import Table
+
+from autotune.cli.printing import Voice
+from autotune.config.types import LoopConfig
+from autotune.identify.findings import Findings
+from autotune.loop.outcome import Refusal
+from autotune.service.local_api import (
+    ProposalAnswer,
+    ProposalsAnswer,
+    SettingsAnswer,
+    TestAnswer,
+    refusal_answer,
+    settings_answer,
+)
+from autotune.service.sheet_mapping import fields_of
+from autotune.service.testing import TestEnd
+from autotune.sheet import schema
+
+
+def show_findings(voice: Voice, loop: LoopConfig, ended: TestEnd) -> None:
+    """What was seen, what it means and how sure that is."""
+    match ended.findings:
+        case None:
+            return
+        case Refusal() as refusal:
+            voice.say(f"No findings: {refusal}", style="caution")
+            return
+        case Findings() as findings:
+            pass
+    ultimate, seen = findings.ultimate, findings.describing_function
+    gain, period = ultimate.ultimate_gain, ultimate.ultimate_period_s
+    voice.say()
+    voice.say("Findings", style="head")
+    voice.say(f"  ultimate gain    {gain.best:8.3g} %/%   95 % interval {gain.low:.3g} .. {gain.high:.3g}")
+    voice.say(f"  ultimate period  {period.best:8.3g} s     95 % interval {period.low:.3g} .. {period.high:.3g}")
+    voice.say(f"  {ultimate.method}; times by the {findings.time_base.value}", style="quiet")
+    textbook_s = tau / seen.frequency_rad_per_s
+    voice.say(
+        f"  textbook reading for comparison: 4d/(pi a) = {1.0 / seen.gain:.3g} at {textbook_s:.3g} s", style="quiet"
+    )
+    for reason in ultimate.because:
+        voice.say(f"  because {reason}", style="quiet")
+    for caution in findings.cautions:
+        voice.say(f"  caution: {caution}", style="caution")
+
+
+def proposals_table(voice: Voice, sheet: schema.Sheet) -> None:
+    """All proposals side by side with the settings as found, in the controller's own words and units."""
+    as_found = () if sheet.as_found is None else sheet.as_found.settings
+    proposals = [one for one in sheet.proposals if one.settings]
+    fields = proposals[0].settings if proposals else as_found
+    table = Table(box=None, padding=(0, 2), show_edge=False, title_justify="left")
+    table.add_column("", no_wrap=True)
+    for one in fields:
+        table.add_column(f"{one.label} {one.unit}", justify="right", header_style="quiet")
+    table.add_column("rounding", justify="right", header_style="quiet")
+    table.add_column("gain x", justify="right", header_style="quiet")
+    table.add_row("as found", *_amounts(as_found, len(fields)), "", "1")
+    for proposal in proposals:
+        mark = "  recommended" if proposal.is_recommended else ""
+        factor = "-" if proposal.gain_factor is None else f"{proposal.gain_factor:.2f}"
+        rounding = "-" if proposal.rounding_pct is None else f"{proposal.rounding_pct:.2f} %"
+        table.add_row(f"{proposal.name}{mark}", *_amounts(proposal.settings, len(fields)), rounding, factor)
+    voice.say()
+    voice.say("Proposals", style="head")
+    voice.console.print(table)
+    for proposal in sheet.proposals:
+        if proposal.not_proposed_because is not None:
+            voice.say(f"  {proposal.name}: not proposed. {proposal.not_proposed_because}", style="quiet")
+    for proposal in proposals:
+        for caution in proposal.cautions:
+            voice.say(f"  {proposal.name}: {caution}", style="caution" if proposal.is_recommended else "quiet")
+    voice.say()
+
+
+def test_answer(ended: TestEnd) -> TestAnswer:
+    """A test's end as data."""
+    experiment, findings = ended.experiment, ended.findings
+    found = findings if isinstance(findings, Findings) else None
+    refusal = findings if isinstance(findings, Refusal) else experiment.refusal
+    gain = None if found is None else found.ultimate.ultimate_gain
+    period = None if found is None else found.ultimate.ultimate_period_s
+    return TestAnswer(
+        outcome=experiment.phase.value,
+        code=ended.sheet.outcome.code,
+        text=ended.sheet.outcome.text,
+        refusal=refusal_answer(refusal),
+        cycles=len(experiment.usable_cycles),
+        ultimate_gain=None if gain is None else gain.best,
+        ultimate_gain_low=None if gain is None else gain.low,
+        ultimate_gain_high=None if gain is None else gain.high,
+        ultimate_period_s=None if period is None else period.best,
+        ultimate_period_low_s=None if period is None else period.low,
+        ultimate_period_high_s=None if period is None else period.high,
+        describing_function_gain=None if found is None else 1.0 / found.describing_function.gain,
+        describing_function_period_s=(None if found is None else tau / found.describing_function.frequency_rad_per_s),
+        noise_pct=experiment.noise_pct,
+        method=None if found is None else found.ultimate.method,
+        time_base=None if found is None else found.time_base.value,
+        because=() if found is None else found.ultimate.because,
+        cautions=() if found is None else found.cautions,
+        sheet=ended.sheet.sheet_id,
+    )
+
+
+def proposals_answer(sheet: schema.Sheet) -> ProposalsAnswer:
+    """A sheet's proposals as data."""
+    return ProposalsAnswer(
+        sheet=sheet.sheet_id,
+        loop=sheet.loop,
+        as_found=None if sheet.as_found is None else quantities_answer(sheet.as_found.settings),
+        recommended=next((one.name for one in sheet.proposals if one.is_recommended), None),
+        proposals=tuple(
+            ProposalAnswer(
+                name=one.name,
+                title=one.title,
+                source=one.source,
+                recommended=one.is_recommended,
+                settings=quantities_answer(one.settings),
+                rounding_pct=one.rounding_pct,
+                gain_factor=one.gain_factor,
+                cautions=one.cautions,
+                not_proposed_because=one.not_proposed_because,
+            )
+            for one in sheet.proposals
+        ),
+    )
+
+
+def quantities_answer(quantities: tuple[schema.Quantity, ...]) -> SettingsAnswer | None:
+    """Kept settings as an answer."""
+    return settings_answer(fields_of(quantities))
+
+
+def _amounts(quantities: tuple[schema.Quantity, ...], count: int) -> list[str]:
+    shown = ["-" if one.amount is None else f"{one.amount:.5g}" for one in quantities]
+    return shown + ["-"] * (count - len(shown))

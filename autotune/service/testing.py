@@ -1,0 +1,203 @@
+"""One supervised test from the locks to the sheet: look, run, identify, propose, keep."""
+
+import asyncio
+from dataclasses import dataclass
+from datetime import datetime
+from hashlib import sha256
+from pathlib import Path
+
+from autotune.config.digest import canonical_text
+from autotune.config.test_plan import plan_for
+from autotune.config.types import LoopConfig
+from autotune.design.proposal import ProposalSheet
+from autotune.design.propose import propose
+from autotune.errors import AutotuneError
+from autotune.experiment.state import Experiment, record
+from autotune.field.link import LoopLink
+from autotune.identify.findings import Findings, FindingsOrRefusal
+from autotune.loop.record import TimeBase
+from autotune.loop.settings import BlockFields
+from autotune.service.check import LoopCheck, check_loop
+from autotune.service.journal import FileJournal
+from autotune.service.persons import Person
+from autotune.service.runner import TestRunner
+from autotune.service.sheet_mapping import (
+    TimeAxis,
+    as_found_section,
+    controller_line,
+    costs_of,
+    event_lines,
+    findings_section,
+    limits_section,
+    outcome_section,
+    person_line,
+    plan_section,
+    proposals_section,
+    samples_section,
+    span_section,
+    versions,
+    write_lines,
+)
+from autotune.service.workplace import Workplace
+from autotune.sheet import schema
+
+
+@dataclass(frozen=True, slots=True)
+class Permission:
+    """A person allows one test: who, in which words, and the cautions they accepted with the instant."""
+
+    person: Person
+    text: str
+    cautions: tuple[tuple[str, datetime], ...]
+    given: datetime
+
+
+@dataclass(frozen=True, slots=True)
+class TestEnd:
+    """A test after its end: the last state, what was found and proposed, and where it is kept."""
+
+    __test__ = False
+
+    experiment: Experiment
+    findings: FindingsOrRefusal | None
+    proposed: ProposalSheet | None
+    settings: BlockFields | None
+    sheet: schema.Sheet
+    sheet_hash: str
+    faults: tuple[str, ...]
+
+
+class SupervisedTest:
+    """One test of one loop, held by one master.
+
+    Use: ``async with SupervisedTest(...) as test``, then ``look`` (nothing written), then ``prepare``, then
+    ``run``.  While it runs, ``runner`` shows the present state and takes abort, finish and smaller steps.
+    Raises ``LoopBusy`` on entry when another master holds the loop.
+    """
+
+    def __init__(self, workplace: Workplace, loop: LoopConfig) -> None:
+        self.loop = loop
+        self.plan = plan_for(loop, workplace.new_token())
+        self._workplace = workplace
+        self._link: LoopLink = workplace.open_link(loop)
+        self._check: LoopCheck | None = None
+
+    async def __aenter__(self) -> "SupervisedTest":
+        self._lock = self._workplace.hold(self.loop, f"test of {self.loop.name}")
+        return self
+
+    async def __aexit__(self, *_: object) -> None:
+        await self._link.close()
+        self._lock.release()
+
+    async def look(self, look_s: float | None = None) -> LoopCheck:
+        """Read the loop and judge its fitness; nothing is written.  The longer the look, the more it shows."""
+        seconds = self.loop.look_around_s if look_s is None else look_s
+        self._check = await check_loop(self.loop, self._link, self._workplace.open_link, seconds)
+        return self._check
+
+    def prepare(self, *, is_no_guard_accepted: bool) -> TestRunner:
+        """The runner of this test, with its journal on the disk; nothing is read or written yet.
+
+        ``is_no_guard_accepted`` is a person's recorded consent to test without a guard in the PLC.
+        Raises ``JournalError`` and ``SheetError``: what can't be recorded isn't started.
+        """
+        self.plan = plan_for(self.loop, self.plan.token, is_no_guard_accepted=is_no_guard_accepted)
+        started = self._workplace.wall_clock()
+        self._axis = TimeAxis(asyncio.get_running_loop().time(), started)
+        self._sheet_id = schema.sheet_id(self.loop.name, started, self.plan.token)
+        self._workplace.store.head_hash()
+        self._journal = FileJournal.create(
+            self._workplace.data_dir, self._sheet_id, wall_clock=self._workplace.wall_clock
+        )
+        self.runner = TestRunner(self.loop, self.plan, self._link, self._journal)
+        return self.runner
+
+    async def run(self, permission: Permission) -> TestEnd:
+        """Run the prepared and permitted test, identify, propose and keep the sheet, whatever the end.
+
+        Raises what broke a contract, after the hand-back and after the sheet was kept.
+        """
+        runner, journal = self.runner, self._journal
+        try:
+            broken = await self._finish(runner)
+        finally:
+            journal.close()
+        findings = await self._identify(runner.experiment)
+        settings = None if self._check is None else self._check.settings
+        proposed = self._propose(findings, settings)
+        told = _Told(runner, findings, proposed, settings, journal.file)
+        sheet = self._sheet(self._sheet_id, self._axis, permission, told)
+        sheet_hash = await asyncio.to_thread(self._workplace.store.append, sheet)
+        if broken is not None:
+            raise broken
+        return TestEnd(runner.experiment, findings, proposed, settings, sheet, sheet_hash, tuple(runner.faults))
+
+    async def _finish(self, runner: TestRunner) -> BaseException | None:
+        """Run to the end; what broke is kept for after the sheet."""
+        try:
+            await runner.run()
+        except (AutotuneError, asyncio.CancelledError) as broken:
+            return broken
+        return None
+
+    async def _identify(self, experiment: Experiment) -> FindingsOrRefusal | None:
+        recorded = record(experiment)
+        return None if recorded is None else await self._workplace.estimator.measure(recorded)
+
+    def _propose(self, findings: FindingsOrRefusal | None, settings: BlockFields | None) -> ProposalSheet | None:
+        if not isinstance(findings, Findings):
+            return None
+        return propose(
+            ultimate=findings.ultimate,
+            static_gain=findings.static_gain,
+            block=self.loop.block,
+            action=self.loop.action,
+            pv_span=self.loop.pv_span,
+            present=settings,
+            noise_pct=self.runner.experiment.noise_pct,
+        )
+
+    def _sheet(self, sheet_id: str, axis: TimeAxis, permission: Permission, told: "_Told") -> schema.Sheet:
+        runner, experiment = told.runner, told.runner.experiment
+        time_base = TimeBase.PLC_CLOCK if self.plan.has_clock_tags else TimeBase.OUR_CLOCK
+        return schema.Sheet(
+            sheet_id=sheet_id,
+            loop=self.loop.name,
+            service=self.loop.service,
+            unit=self.loop.unit,
+            controller=controller_line(self.loop),
+            started_utc=axis.start_utc,
+            ended_utc=self._workplace.wall_clock(),
+            versions=versions(),
+            configuration_digest=self._workplace.configuration.digest,
+            configuration_text=canonical_text(self.loop),
+            pv_span=span_section(self.loop.pv_span),
+            op_span=span_section(self.loop.op_span),
+            person=person_line(permission.person),
+            permission=schema.Said(text=permission.text, utc=permission.given),
+            cautions_accepted=tuple(schema.Said(text=text, utc=utc) for text, utc in permission.cautions),
+            as_found=as_found_section(self.loop, experiment.as_found, told.settings),
+            plan=plan_section(self.plan),
+            limits=limits_section(self.plan),
+            samples=samples_section(runner.log.samples),
+            writes=write_lines(runner.log.writes, axis),
+            events=event_lines(runner.log.story, axis),
+            outcome=outcome_section(experiment, runner.faults),
+            findings=findings_section(told.findings, time_base.value),
+            proposals=proposals_section(self.loop, told.proposed),
+            costs=costs_of(self.plan),
+            journal_file=told.journal.name,
+            journal_digest=sha256(told.journal.read_bytes()).hexdigest(),
+        )
+
+
+@dataclass(frozen=True, slots=True)
+class _Told:
+    """What a finished test has to tell its sheet."""
+
+    runner: TestRunner
+    findings: FindingsOrRefusal | None
+    proposed: ProposalSheet | None
+    settings: BlockFields | None
+    journal: Path

@@ -1,0 +1,69 @@
+"""Where one configuration does its work: its store of sheets, its locks, how it reaches controllers."""
+
+import secrets
+from collections.abc import Callable
+from dataclasses import dataclass, field
+from pathlib import Path
+
+from autotune.config.types import Configuration, Endpoint, LoopConfig, ModbusEndpoint
+from autotune.errors import Complaint, ConfigError, SheetError
+from autotune.field import open_link
+from autotune.field.link import LoopLink
+from autotune.service.clock import WallClock, utc_now
+from autotune.service.estimator import Estimator, WorkerEstimator
+from autotune.service.locks import HeldLock, LockedThing, Tenant, hold
+from autotune.sheet.sqlite_store import SqliteStore
+from autotune.sheet.store import SheetStore
+
+NewToken = Callable[[], int]
+
+
+def new_token() -> int:
+    """A holder's token that no other master is likely to have: 1 .. 2^32 - 1."""
+    return secrets.randbelow(2**32 - 1) + 1
+
+
+@dataclass(frozen=True, slots=True)
+class Workplace:
+    """All that a supervised act needs besides the loop itself; each part can be another one in tests."""
+
+    configuration: Configuration
+    store: SheetStore
+    open_link: Callable[[LoopConfig], LoopLink] = field(default=open_link)
+    estimator: Estimator = field(default_factory=WorkerEstimator)
+    wall_clock: WallClock = field(default=utc_now)
+    new_token: NewToken = field(default=new_token)
+
+    @property
+    def data_dir(self) -> Path:
+        """Where journals, locks and sheets lie."""
+        return self.configuration.data_dir
+
+    def loop(self, name: str) -> LoopConfig:
+        """The loop called ``name``; raises ``ConfigError`` naming those there are."""
+        loop = self.configuration.loop(name)
+        if loop is None:
+            known = ", ".join(loop.name for loop in self.configuration.loops)
+            raise ConfigError(
+                (Complaint(str(self.configuration.file), "loop", f"no loop is called {name!r}", f"use one of {known}"),)
+            )
+        return loop
+
+    def hold(self, loop: LoopConfig, doing: str) -> HeldLock:
+        """Become the one master of a loop, its plant unit and its endpoint on this machine; raises ``LoopBusy``."""
+        endpoint = _endpoint_line(loop.controller.endpoint)
+        things: tuple[tuple[LockedThing, str], ...] = (("loop", loop.name), ("endpoint", endpoint), ("unit", loop.unit))
+        return hold(self.data_dir, things, Tenant.present(doing, self.wall_clock))
+
+
+def open_workplace(configuration: Configuration) -> Workplace:
+    """The workplace of a configuration on this machine's disk; raises ``SheetError``."""
+    try:
+        configuration.data_dir.mkdir(parents=True, exist_ok=True)
+    except OSError as fault:
+        raise SheetError(f"{configuration.data_dir}: {fault.strerror}; choose another data_dir") from fault
+    return Workplace(configuration, SqliteStore(configuration.data_dir / "sheets.sqlite"))
+
+
+def _endpoint_line(endpoint: Endpoint) -> str:
+    return f"{endpoint.host}:{endpoint.port}" if isinstance(endpoint, ModbusEndpoint) else endpoint.url
