@@ -1,6 +1,9 @@
 """The files that come with the program are found, right, complete and explained."""
 
 import re
+import shutil
+import subprocess
+import sys
 import tomllib
 from pathlib import Path
 from typing import Any, get_args
@@ -147,3 +150,14 @@ def test_types_fill_as_many_registers_as_their_bits_need() -> None:
 
 def test_the_files_are_found_in_the_source_tree() -> None:
     assert bundled_path("rehearsal.toml").parent == Path(__file__).parents[2] / "config"
+
+
+def test_the_files_are_found_beside_an_installed_program(tmp_path: Path) -> None:
+    root = Path(__file__).parents[2]
+    shutil.copytree(root / "autotune", tmp_path / "autotune", ignore=shutil.ignore_patterns("__pycache__"))
+    shutil.copytree(root / "config", tmp_path / "autotune" / "bundled_config")  # as the wheel lays them
+    look = "from autotune.config.bundled import bundled_path; print(bundled_path('rehearsal.toml'))"
+    found = subprocess.run(
+        [sys.executable, "-c", look], cwd=tmp_path, capture_output=True, text=True, check=True
+    )
+    assert Path(found.stdout.strip()) == tmp_path / "autotune" / "bundled_config" / "rehearsal.toml"
