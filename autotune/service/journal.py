@@ -17,10 +17,11 @@ from autotune.service.clock import WallClock, utc_now
 from autotune.service.journal_codec import to_json
 from autotune.service.reserve import Reserve
 
-LineKind = Literal["plan", "write_plan", "event", "command", "phase", "as_found", "note", "end"]
+LineKind = Literal["plan", "write_plan", "event", "command", "phase", "as_found", "note", "resumed", "end"]
 """``plan`` of a test or ``write_plan`` of a write of settings, whole; ``event`` before it is stepped;
 ``command`` before it is performed, those of a hand-back too; ``phase`` its new name; ``as_found`` before
-the first write; ``note`` a text or mapping; ``end`` how it ended."""
+the first write; ``note`` a text or mapping; ``resumed`` a later process goes on, with another clock;
+``end`` how it ended."""
 
 Sync = Callable[[int], None]
 

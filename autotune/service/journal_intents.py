@@ -3,6 +3,7 @@
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from datetime import datetime
+from itertools import takewhile
 from pathlib import Path
 from typing import TypeVar
 
@@ -23,7 +24,8 @@ class OpenIntent:
 
     A test has ``plan`` and ``as_found``, what to give back; ``last_output`` and ``last_mode`` are its last
     writes (``None``: never written).  A write of settings has ``write_plan``, which holds its as-found.
-    ``last_command`` is the last write of either, begun if not done; ``last_utc`` is the last line's instant.
+    ``last_command`` is the last write of either, begun if not done.  ``last_utc`` is the last line of the
+    process that died: looking at an intent again makes it no younger.  ``journal_id`` is the name of its file.
     ``fault`` says why the journal can't be read; then nothing else is known and a person must look.
     """
 
@@ -73,7 +75,7 @@ def _open_intent(file: Path) -> OpenIntent | None:
         last_output=next((c for c in reversed(commands) if isinstance(c, DriveOutput)), None),
         last_mode=next((c for c in reversed(commands) if isinstance(c, SetMode)), None),
         started_utc=journal.lines[0].utc,
-        last_utc=journal.lines[-1].utc,
+        last_utc=[line.utc for line in takewhile(lambda line: line.kind != "resumed", journal.lines)][-1],
         torn=journal.torn,
     )
 

@@ -71,7 +71,8 @@ def read_journal_text(text: str) -> JournalText:
 def resume_journal(file: Path, *, wall_clock: WallClock = utc_now, sync: Sync = os.fsync) -> FileJournal:
     """Go on writing a journal after our own death, to record the recovery and the end.
 
-    Half a line at the end is cut off and kept as a note.  Raises ``JournalError``.
+    The first line says ``resumed``, with half a line that stood at the end (``None``: there was none); that
+    half is cut off.  Raises ``JournalError``.
     """
     journal = read_journal(file)
     try:
@@ -91,10 +92,9 @@ def resume_journal(file: Path, *, wall_clock: WallClock = utc_now, sync: Sync = 
         wall_clock=wall_clock,
         sync=sync,
     )
-    if rest:
-        t_s = journal.lines[-1].t_s if journal.lines else 0.0
-        torn = {"torn line": rest.decode("ascii", errors="backslashreplace")}
-        resumed.record("note", torn, t_s=t_s, durable=True)
+    last_s = journal.lines[-1].t_s if journal.lines else 0.0
+    torn = rest.decode("ascii", errors="backslashreplace") if rest else None
+    resumed.record("resumed", torn, t_s=last_s, durable=True)
     return resumed
 
 

@@ -1,6 +1,7 @@
 """A journal run through the machine again: the same events give the same commands."""
 
 from collections.abc import Iterable
+from itertools import takewhile
 
 from autotune.errors import JournalError
 from autotune.experiment.commands import Command
@@ -14,11 +15,12 @@ from autotune.service.journal_reading import JournalLine
 def replay(lines: Iterable[JournalLine]) -> tuple[Experiment, tuple[Command, ...]]:
     """The experiment as the journal's last event left it, and every command it gave on the way.
 
+    What a later process did after a ``resumed`` line is not the machine's and is left out.
     Raises ``JournalError`` where the plan is missing, ``IllegalEvent`` where the machine no longer takes an event.
     """
     experiment: Experiment | None = None
     commands: list[Command] = []
-    for line in lines:
+    for line in takewhile(lambda line: line.kind != "resumed", lines):
         if line.kind == "plan" and isinstance(line.payload, TestPlan):
             experiment = begin(line.payload)
         elif line.kind == "event" and isinstance(line.payload, Event):

@@ -348,7 +348,7 @@ def test_a_missing_journal_is_told(tmp_path: Path) -> None:
         read_journal(tmp_path / "none.jsonl")
 
 
-def test_a_resumed_journal_goes_on_and_keeps_the_torn_line_as_a_note(tmp_path: Path) -> None:
+def test_a_resumed_journal_goes_on_and_keeps_the_torn_line(tmp_path: Path) -> None:
     journal = FileJournal.create(tmp_path, ID, reserve_bytes=10)
     journal.record("plan", PLAN, t_s=0.0)
     journal.record("command", SetMode(LoopMode.MAN), t_s=3.0)
@@ -359,8 +359,8 @@ def test_a_resumed_journal_goes_on_and_keeps_the_torn_line_as_a_note(tmp_path: P
     resumed.record("end", "STRANDED", t_s=4.0, durable=True)
     resumed.close()
     lines = read_journal(journal.file).lines
-    assert [(line.n, line.kind) for line in lines] == [(1, "plan"), (2, "command"), (3, "note"), (4, "end")]
-    assert lines[2].payload == {"torn line": '{"n":3,"utc'}
+    assert [(line.n, line.kind) for line in lines] == [(1, "plan"), (2, "command"), (3, "resumed"), (4, "end")]
+    assert lines[2].payload == '{"n":3,"utc'
     assert lines[2].t_s == 3.0
 
 
@@ -405,6 +405,18 @@ def test_a_test_that_died_after_its_first_write_is_an_open_intent(tmp_path: Path
     assert (intent.plan, intent.as_found) == (PLAN, FOUND)
     assert (intent.last_command, intent.last_output, intent.last_mode) == (MOVE, MOVE, SetMode(LoopMode.MAN))
     assert (intent.started_utc, intent.last_utc) == (NOON, NOON + timedelta(seconds=6))
+
+
+def test_looking_at_an_open_intent_again_makes_it_no_younger(tmp_path: Path) -> None:
+    file = _died(tmp_path, ID, ("plan", PLAN), ("as_found", FOUND), ("command", MOVE))
+    back = DriveOutput(42.0, 7, 4, 2)
+    for _ in range(2):  # two recoveries, an hour later, that could not confirm the hand-back
+        resumed = resume_journal(file, wall_clock=lambda: NOON + timedelta(hours=1))
+        resumed.record("command", back, t_s=0.5, durable=True)
+        resumed.close()
+    (intent,) = open_intents(tmp_path)
+    assert intent.last_utc == NOON + timedelta(seconds=2)
+    assert intent.last_output == back
 
 
 def test_a_torn_last_line_hides_no_open_intent(tmp_path: Path) -> None:

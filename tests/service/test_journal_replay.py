@@ -7,7 +7,7 @@ import pytest
 
 from autotune.errors import JournalError
 from autotune.experiment.commands import Command, HandBack
-from autotune.experiment.events import AbortAsked, ReadFailed, Started, Written
+from autotune.experiment.events import AbortAsked, HandBackEnded, HandBackResult, ReadFailed, Started, Written
 from autotune.experiment.phases import Phase
 from autotune.service.journal import MemoryJournal
 from autotune.service.journal_reading import JournalLine, read_journal, read_journal_text
@@ -55,6 +55,15 @@ def test_a_journal_cut_short_replays_to_where_it_was_cut() -> None:
     experiment, commands = replay(lines[: len(lines) // 2])
     assert experiment.t_s == lines[len(lines) // 2 - 1].t_s
     assert commands == tuple(command for _, command in run.issued)[: len(commands)]
+
+
+def test_what_a_later_process_recorded_is_not_replayed() -> None:
+    run = _was_aborted()
+    lines = _journalled(run)
+    later = HandBackEnded(0.1, HandBackResult.TAKEN, "found in other hands")  # on another clock
+    n, utc = len(lines), lines[-1].utc
+    resumed = (JournalLine(n + 1, utc, run.t_s, "resumed", None), JournalLine(n + 2, utc, 0.1, "event", later))
+    assert replay([*lines, *resumed]) == replay(lines)
 
 
 def test_a_journal_without_its_plan_can_not_be_replayed() -> None:
