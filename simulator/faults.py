@@ -71,7 +71,7 @@ def strike(wire: WireFaults, plc: Plc, words: Sequence[str]) -> None:
         fault.strike(wire, plc, words[1:])
     except (IndexError, KeyError, ValueError) as reason:
         usage = f"fault {words[0]} {fault.usage}".rstrip()
-        detail = {KeyError: f"no loop {reason}", IndexError: "something is missing"}.get(type(reason), str(reason))
+        detail = _complaint(reason)
         raise BadFault(f"{detail}; write: {usage}") from reason
 
 
@@ -82,6 +82,12 @@ def clear_all(wire: WireFaults, plc: Plc) -> None:
     for loop in plc.loops.values():
         loop.transmitter.fault = TransmitterFault.NONE
         loop.valve.fault = ValveFault.NONE
+
+
+def _complaint(reason: Exception) -> str:
+    if isinstance(reason, KeyError):
+        return f"no loop {reason}"
+    return "something is missing" if isinstance(reason, IndexError) else str(reason)
 
 
 def _counted(name: str) -> Callable[[WireFaults, Plc, Sequence[str]], None]:

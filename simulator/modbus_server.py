@@ -44,6 +44,7 @@ class PlantServer(ModbusTcpServer):
         unused = SimDevice(id=device_id, simdata=[SimData(0, count=1, datatype=DataType.REGISTERS)])
         super().__init__(unused, address=(host, port))
         self.wire = wire
+        self.registers = registers
         self.device_id = device_id
         # The requests only ask the context to get and set; ours does that on the live plant.
         self.context: ModbusServerContext = cast("ModbusServerContext", _PlantContext(registers, wire))
