@@ -9,7 +9,7 @@ end is loud: automatic isn't given back onto settings that nobody chose.
 
 from collections.abc import Callable
 from dataclasses import replace
-from typing import Any, cast
+from typing import Any, assert_never, cast
 
 from autotune.confirmed_write.commands import Command, ReadSettings, SetMode, SetSetpoint, WriteField
 from autotune.confirmed_write.confirmation import check_confirmation
@@ -97,6 +97,8 @@ def step(state: WriteState, event: Event) -> Step:
             return _go(state, Trigger.WAITED, ReadSettings(), read_at_s=None)
         case CancelAsked():
             return _go(state, Trigger.WAITED, cancelled_by=event.by)
+        case _:
+            assert_never(event)
 
 
 def _settings_read(state: WriteState, reading: SettingsRead) -> Step:
@@ -239,7 +241,7 @@ def _return(state: WriteState, reading: SettingsRead) -> Step:
         return _unverified(state, f"the loop is still in manual and was found in {state.mode_found.value}")
     if state.is_mode_acknowledged:
         return _wait(state, reading.t_s)
-    # Asked for and perhaps never heard: asking again is idempotent, and can't undo what a person did.
+    # Asked for and perhaps never heard; asking again is idempotent.
     return _go(state, Trigger.WAITED, SetMode(state.mode_found))
 
 
