@@ -4,6 +4,7 @@ import difflib
 import json
 import re
 from collections.abc import Mapping
+from copy import deepcopy
 from dataclasses import dataclass
 from typing import Any, get_args
 
@@ -106,6 +107,19 @@ def meant(word: str, known: list[str]) -> str:
     return f"did you mean `{close[0]}`? " if close else ""
 
 
+def without_unknown_keys(content: Mapping[str, Any], error: ValidationError) -> dict[str, Any]:
+    """The content without the keys that no table knows, so that the rest can be judged all the same."""
+    pruned = deepcopy(dict(content))
+    for detail in error.errors(include_url=False, include_input=False):
+        if detail["type"] == "extra_forbidden":
+            *way, last = detail["loc"]
+            here: Any = pruned
+            for part in way:
+                here = here[part]
+            del here[last]
+    return pruned
+
+
 def flaws_of(error: ValidationError, table: type[Table]) -> list[Flaw]:
     """Every fault that the rules of single keys found in a table of a file."""
     return [_flaw(detail, table) for detail in error.errors(include_url=False, include_context=True)]
@@ -122,7 +136,8 @@ def _flaw(detail: ErrorDetails, table: type[Table]) -> Flaw:
     about = _about(table, loc)
     if kind == "missing":
         return Flaw(loc, "missing", f"add {bare(str(loc[-1]))}: {about}")
-    return Flaw(loc, _fault(kind, content, context), f"write {about}")
+    names = [part for part in loc if isinstance(part, str)]
+    return Flaw(loc, _fault(kind, content, context), f"write {bare(names[-1]) if names else 'it'} as {about}")
 
 
 _WRONG_TYPE = {

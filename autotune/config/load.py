@@ -10,7 +10,7 @@ from pydantic import ValidationError
 from autotune.config.build import block_from, controller_from, loop_from
 from autotune.config.checks import controller_flaws, loop_flaws
 from autotune.config.checks_settings import block_flaws, site_flaws
-from autotune.config.complaints import Flaw, Section, flaws_of, meant, shown
+from autotune.config.complaints import Flaw, Section, flaws_of, meant, shown, without_unknown_keys
 from autotune.config.digest import configuration_digest
 from autotune.config.documents import Documents, Override, gather, read_table
 from autotune.config.numbers import Table
@@ -201,10 +201,16 @@ def _loop(loop: LoopTable, draft: _Draft, controllers: Mapping[str, Controller])
 
 
 def _table(documents: Documents, section: Section, table: type[T]) -> T | None:
+    """The table, or ``None`` where it is wrong; with unknown keys alone the rest is judged all the same."""
+    content = section.merged
     try:
-        return table.model_validate(section.merged)
+        return table.model_validate(content)
     except ValidationError as error:
         documents.complain(section, *flaws_of(error, table))
+        known = without_unknown_keys(content, error)
+    try:
+        return table.model_validate(known)
+    except ValidationError:
         return None
 
 

@@ -157,7 +157,5 @@ def test_the_files_are_found_beside_an_installed_program(tmp_path: Path) -> None
     shutil.copytree(root / "autotune", tmp_path / "autotune", ignore=shutil.ignore_patterns("__pycache__"))
     shutil.copytree(root / "config", tmp_path / "autotune" / "bundled_config")  # as the wheel lays them
     look = "from autotune.config.bundled import bundled_path; print(bundled_path('rehearsal.toml'))"
-    found = subprocess.run(
-        [sys.executable, "-c", look], cwd=tmp_path, capture_output=True, text=True, check=True
-    )
+    found = subprocess.run([sys.executable, "-c", look], cwd=tmp_path, capture_output=True, text=True, check=True)
     assert Path(found.stdout.strip()) == tmp_path / "autotune" / "bundled_config" / "rehearsal.toml"

@@ -49,14 +49,14 @@ MISTAKES = (
     mistake("a required key left out", "device_id = 1 ", "# ", "controller.plc1.device_id", "missing", "1 to 255"),
     mistake("an unknown key at the top", "data_dir =", "data_folder =", "data_folder", "unknown key", "data_dir"),
     mistake("no version", "schema_version = 1 ", "# ", "schema_version", "missing", "add schema_version: 1"),
-    mistake("a later version", "schema_version = 1 ", "schema_version = 2 ", "schema_version", "2 is not one of 1", "write 1"),
+    mistake("a later version", "schema_version = 1 ", "schema_version = 2 ", "schema_version", "2 is not one of 1", "as 1"),
     mistake("a key without its unit", "step_up_pct = 15.0", "step_up = 15.0", f"{T}.limits.step_up", "unknown key", "did you mean `step_up_pct`"),
     mistake("text for a number", "scan_s = 0.5 ", 'scan_s = "fast" ', f"{T}.scan_s", '"fast" is no number', "how often we read the loop, s"),
     mistake("a number in quotes", "port = 502", 'port = "502"', "controller.plc1.port", '"502" is no whole number', "TCP port"),
     mistake("true for a number", "dead_time_s = 15.0", "dead_time_s = true", f"{T}.limits.dead_time_s", "true is no number", "dead time"),
     mistake("a number for a text", 'unit = "pasteuriser"', "unit = 7", f"{T}.unit", "7 is no text in quotes", "plant unit"),
     mistake("a part of a register count", "registers_per_read = 125", "registers_per_read = 12.5", "controller.plc1.registers_per_read", "12.5 is no whole number", "1 to 125"),
-    mistake("not a number", "pv_high_eu = 88.0", "pv_high_eu = nan", f"{T}.limits.pv_high_eu", "nan", "write PV that ends a test"),
+    mistake("not a number", "pv_high_eu = 88.0", "pv_high_eu = nan", f"{T}.limits.pv_high_eu", "nan", "write pv_high_eu as PV that ends a test"),
     mistake("infinity", "test_within_s = 1800.0", "test_within_s = inf", f"{T}.limits.test_within_s", "inf", "longest test, s"),
     mistake("a negative time", "blanking_s = 1.0", "blanking_s = -1.0", f"{T}.relay.blanking_s", "at least 0", "between two switches, s"),
     mistake("a step of nothing", "step_up_pct = 8.0", "step_up_pct = 0.0", f"{T}.relay.step_up_pct", "above 0", "% of span"),
@@ -156,6 +156,8 @@ MISTAKES = (
     # Settings
     mistake("settings to write without their tags", 'write_settings = "never" ', 'write_settings = "in manual" ', f"{F}.tags.gain", "missing among the settings", "add the tag gain"),
     mistake("no tag for the derivative", "derivative = { address = 45 }", "# ", f"{T}.tags.derivative", "the block has a derivative", "has_derivative = false"),
+    mistake("a tag of a derivative that isn't there", 'block = "ideal-seconds" ', 'block = "band-minutes" ', f"{T}.tags.derivative", "has no derivative", "take the tag out"),
+    mistake("a site's range beyond the last address", "last = 9500", "last = 70000", "never_written[no. 1].first", "outside 1 .. 65536", "count as told", changed=SITE),
     mistake("settings limits upside down", "low = 2.0, high = 1800.0", "low = 1800.0, high = 2.0", f"{T}.settings_limits.integral.low", "not below high", "swap"),
     Mistake("a signed gain of either sign", (('sign = "action flag"', 'sign = "signed gain"'), ("low = 0.1, high = 10.0", "low = -0.1, high = 10.0")), f"{T}.settings_limits.gain.low", "either sign", "own side of 0"),
     Mistake("a band with a floor of 0", (('gain_kind = "gain" ', 'gain_kind = "proportional band" '), ("low = 0.1, high = 10.0", "low = 0.0, high = 10.0")), f"{T}.settings_limits.gain.low", "endless gain", "above 0"),
@@ -228,6 +230,13 @@ def test_all_mistakes_are_told_at_once(folder: Path) -> None:
     path.write_text(text, "utf-8")
     keys = {one.key for one in complaints_of(path)}
     assert {"controller.plc1.devise_id", f"{T}.limits.pv_low_eu", f"{F}.mode_codes.MAN"} <= keys
+
+
+def test_beside_an_unknown_key_the_rest_of_the_loop_is_judged_too(folder: Path) -> None:
+    path = folder / EXAMPLE
+    text = path.read_text("utf-8").replace("pv_low_eu = 70.0", "pv_low_eu = 90.0")
+    path.write_text(text.replace("blanking_s = 1.0", "blankin_s = 1.0"), "utf-8")
+    assert [one.key for one in complaints_of(path)] == [f"{T}.relay.blankin_s", f"{T}.limits.pv_low_eu"]
 
 
 def test_a_mistake_in_the_defaults_is_told_once_and_at_its_place(folder: Path) -> None:
@@ -307,6 +316,18 @@ def test_a_wrong_include_or_table_is_named(title: str, lines: str, key: str, fau
     (tmp_path / "main.toml").write_text(f"schema_version = 1\n{lines}\n", "utf-8")
     complaints = complaints_of(tmp_path / "main.toml")
     assert any(one.key == key and fault in one.fault for one in complaints), title
+
+
+def test_more_files_than_anybody_needs_are_refused(tmp_path: Path) -> None:
+    many = [f"part-{number}.toml" for number in range(101)]
+    for name in many:
+        (tmp_path / name).write_text("schema_version = 1\n", "utf-8")
+    (tmp_path / "main.toml").write_text(f"schema_version = 1\ninclude = {many}\n", "utf-8")
+    complaints = complaints_of(tmp_path / "main.toml")
+    assert [one.key for one in complaints if one.fault == "more than 100 files"] == [
+        "include[no. 100]",
+        "include[no. 101]",
+    ]
 
 
 def test_a_missing_file_of_site_limits_is_named(folder: Path) -> None:
