@@ -50,10 +50,10 @@ def with_parts(text: str, parts: Mapping[str, Callable[[], str]] = PARTS) -> str
     Raises ``LookupError`` when a part's markers, ``<!-- generated: NAME -->`` and ``<!-- end -->``, are missing.
     """
     for name, draw in parts.items():
-        places = [*re.finditer(rf"(?<=<!-- generated: {name} -->\n).*?(?=<!-- end -->)", text, re.DOTALL)]
+        places = [*re.finditer(rf"<!-- generated: {name} -->\n(.*?)<!-- end -->", text, re.DOTALL)]
         if len(places) != 1:
             raise LookupError(f"needs one <!-- generated: {name} --> ... <!-- end -->, has {len(places)}")
-        text = f"{text[: places[0].start()]}{draw()}\n{text[places[0].end() :]}"
+        text = f"{text[: places[0].start(1)]}{draw()}\n{text[places[0].end(1) :]}"
     return text
 
 
