@@ -44,8 +44,8 @@ def _run(coroutine: Coroutine[Any, Any, ExitCode]) -> None:
     raise typer.Exit(asyncio.run(coroutine))
 
 
-def _workplace(config: Path) -> Workplace:
-    return open_workplace(load(config))
+def _workplace(config: Path, *, may_create: bool = False) -> Workplace:
+    return open_workplace(load(config), may_create=may_create)
 
 
 @app.command()
@@ -69,7 +69,7 @@ def check(
     is_json: Json = False,
 ) -> None:
     """Check the files, then read each loop (nothing is written) and say what would stop a test."""
-    workplace = _workplace(config)
+    workplace = _workplace(config, may_create=True)
     loops = workplace.configuration.loops if loop is None else (workplace.loop(loop),)
     _run(checking.check(Voice(is_json=is_json), workplace, loops, look))
 
@@ -87,7 +87,7 @@ def test(
 ) -> None:
     """Run one supervised relay test: it moves a real output. Ctrl-C hands the loop back."""
     voice = Voice(is_json=is_json)
-    workplace = _workplace(config)
+    workplace = _workplace(config, may_create=True)
     described = workplace.loop(loop)
     if dry_run:
         _run(testing.dry_run(voice, workplace, described))

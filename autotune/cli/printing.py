@@ -24,7 +24,7 @@ class Voice:
 
     def say(self, text: str = "", style: str | None = None) -> None:
         """One paragraph for a person; never read as markup."""
-        self.console.print(text, style=style, markup=False)
+        self.console.print(text, style=style, markup=False, soft_wrap=not self.console.is_terminal)
 
     def answer(self, model: BaseModel | Mapping[str, object]) -> None:
         """The command's answer as one JSON object, when it was asked for."""

@@ -111,7 +111,7 @@ async def rehearse(voice: Voice, loop_name: str, *, is_scripted: bool) -> ExitCo
     with tempfile.TemporaryDirectory(prefix="autotune-rehearsal-") as folder:
         async with soft_plant() as (plant, port):
             overrides: dict[str, Override] = {"controller.skid.port": port, "data_dir": folder}
-            workplace = open_workplace(load(bundled_path("rehearsal.toml"), overrides))
+            workplace = open_workplace(load(bundled_path("rehearsal.toml"), overrides), may_create=True)
             return await _whole_job(voice, workplace, workplace.loop(loop_name), plant, operator)
 
 

@@ -97,7 +97,7 @@ async def confirmed_change(
     ended = await change.write(kind, sheet_id, plan, typed, person_at_the_terminal(operator.name))
     if not isinstance(ended, Refusal):
         phase = ended.state.phase
-        voice.say(f"{phase.value}. {_what_became(ended)}", style=_STYLES[phase])
+        voice.say(f"{phase.name}. {_what_became(ended)}", style=_STYLES[phase])
     return ended
 
 
@@ -121,7 +121,7 @@ def show_plan(voice: Voice, loop: LoopConfig, plan: WritePlan) -> None:
 def change_answer(ended: ChangeEnd) -> WriteAnswer:
     """A change's end as data."""
     return WriteAnswer(
-        outcome=ended.state.phase.value, read_back_equal=ended.is_read_back_equal, text=_what_became(ended)
+        outcome=ended.state.phase.name, read_back_equal=ended.is_read_back_equal, text=_what_became(ended)
     )
 
 

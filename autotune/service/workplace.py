@@ -56,13 +56,20 @@ class Workplace:
         return hold(self.data_dir, things, Tenant.present(doing, self.wall_clock))
 
 
-def open_workplace(configuration: Configuration) -> Workplace:
-    """The workplace of a configuration on this machine's disk; raises ``SheetError``."""
+def open_workplace(configuration: Configuration, *, may_create: bool) -> Workplace:
+    """The workplace of a configuration on this machine's disk.
+
+    ``may_create`` lets a first run begin a store of sheets; otherwise a missing store is an error, so that an
+    unmounted disk never looks like an empty archive.  Raises ``SheetError``.
+    """
+    file = configuration.data_dir / "sheets.sqlite"
+    if file.exists() or not may_create:
+        return Workplace(configuration, SqliteStore(file))
     try:
         configuration.data_dir.mkdir(parents=True, exist_ok=True)
     except OSError as fault:
         raise SheetError(f"{configuration.data_dir}: {fault.strerror}; choose another data_dir") from fault
-    return Workplace(configuration, SqliteStore(configuration.data_dir / "sheets.sqlite"))
+    return Workplace(configuration, SqliteStore.create(file))
 
 
 def _endpoint_line(endpoint: Endpoint) -> str:
