@@ -76,6 +76,38 @@ def test_a_whole_life_from_ready_over_panel_and_wire_to_quit() -> None:
         assert running.stderr.read() == ""
 
 
+def test_over_the_wire_the_guard_lends_moves_and_takes_back() -> None:
+    with plant("fast-loop") as running:
+        port = ready(running)["modbus_port"]
+        assert answer(running, "enable TIC-1") == {"ok": True}
+        while answer(running, "state TIC-1")["enable"] is not True:
+            pass
+        with socket.create_connection(("127.0.0.1", int(str(port))), timeout=5.0) as wire:
+
+            def write(address: int, *words: int) -> None:
+                body = struct.pack(">BBHHB", 1, 16, address, len(words), 2 * len(words))
+                body += struct.pack(f">{len(words)}H", *words)
+                wire.sendall(struct.pack(">HHH", 1, 0, len(body)) + body)
+                assert wire.recv(12, socket.MSG_WAITALL)[7] == 16
+
+            write(30, 0, 4711, 1, 1)
+            while read_registers(port, 12, 4) != (1, 0, 0, 4711):  # armed, no alarm, our token
+                pass
+            write(6, 0)
+            write(30, 0, 4711, 2, 2, 0x425C, 0)  # 55.0 with the next sequence number
+            while read_registers(port, 4, 2) != (0x425C, 0):
+                pass
+            begun_ms = int(str(answer(running, "state")["plc_clock_ms"]))
+        # From here nobody beats: the client has gone.
+        while read_registers(port, 12, 2) != (2, 1):
+            pass
+        state = answer(running, "state TIC-1")
+        assert (state["mode"], state["guard_state"]) == ("AUTO", "gave back")
+        ended_ms = int(str(answer(running, "state")["plc_clock_ms"]))
+        # The rig's timeout is 1.0 s after the last heartbeat, which came shortly before begun_ms.
+        assert 800 <= ended_ms - begun_ms <= 2000
+
+
 def test_the_end_of_stdin_ends_it_only_when_asked_to_and_a_termination_always() -> None:
     with plant("fast-loop", "--until-eof") as until_eof, plant("fast-loop") as going_on:
         ready(until_eof)

@@ -54,14 +54,20 @@ def test_with_its_noise_the_juice_skid_holds_every_setpoint_for_minutes() -> Non
         assert float(np.abs(deviation_pct).max()) < 1.0, name
 
 
-@pytest.mark.parametrize("name", ["TIC-204", "PIC-110", "FIC-101", "LIC-102", "TIC-310", "TIC-311"])
-def test_each_loop_of_the_juice_skid_rejects_a_load_as_found(name: str) -> None:
+def test_each_loop_of_the_juice_skid_rejects_a_load_as_found() -> None:
     plc = quiet("juice-skid")
-    loop = plc.loops[name]
-    loop.process.add_load_step(plc.t_s, 2.0)
-    run_scans(plc, 240.0)
-    # A FIC-101 with lost motion in its valve may hunt within it.
-    assert loop.process.output_pct == pytest.approx(loop.spec.to_pct(loop.spec.sp_eu), abs=0.15)
+    largest_pct = dict.fromkeys(plc.loops, 0.0)
+    for loop in plc.loops.values():
+        loop.process.add_load_step(plc.t_s, 2.0)
+    for _ in range(240):
+        run_scans(plc, 1.0)
+        for name, loop in plc.loops.items():
+            error_pct = loop.process.output_pct - loop.block.sp_pct
+            largest_pct[name] = max(largest_pct[name], abs(error_pct))
+    for name, loop in plc.loops.items():
+        assert largest_pct[name] > 0.2, name
+        # FIC-101 has lost motion in its valve and may hunt within it; TIC-311 follows what its master asks.
+        assert loop.process.output_pct == pytest.approx(loop.block.sp_pct, abs=0.15), name
 
 
 def test_a_block_that_is_executed_less_often_than_the_plc_scans_holds_in_between() -> None:

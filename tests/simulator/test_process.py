@@ -9,9 +9,9 @@ import numpy.typing as npt
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
-from scipy import signal
+from scipy import linalg, signal
 
-from simulator.process import Process, ProcessSpec
+from simulator.process import Process, ProcessSpec, matrix_exponential
 
 REFERENCE = Path(__file__).parents[1] / "reference"
 BATCH = json.loads((REFERENCE / "reference_batch.json").read_text())["processes"]
@@ -63,6 +63,14 @@ def test_each_process_of_the_reference_batch_answers_as_scipy_simulates_it(row: 
             process.set_input(step * grid_s, changes[step])
         outputs.append(process.output_pct)
     np.testing.assert_allclose(outputs, expected, atol=2e-7 * max(1.0, float(np.abs(expected).max())))
+
+
+@pytest.mark.parametrize("scale", [0.0, 1e-6, 0.3, 1.0, 7.0, 300.0])
+def test_the_matrix_exponential_is_scipys(scale: float) -> None:
+    chance = np.random.default_rng(11)
+    for size in (1, 3, 8):
+        stable = scale * (chance.normal(size=(size, size)) - 4.0 * np.eye(size))
+        np.testing.assert_allclose(matrix_exponential(stable), linalg.expm(stable), rtol=1e-10, atol=1e-12)
 
 
 def test_a_first_order_lag_with_dead_time_follows_its_closed_form_at_any_instant() -> None:
