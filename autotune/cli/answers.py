@@ -1,5 +1,6 @@
 """Findings and proposals as a person compares them, and as data."""
 
+from collections.abc import Sequence
 from math import tau
 
 from rich.table import Table
@@ -48,8 +49,11 @@ def show_findings(voice: Voice, loop: LoopConfig, ended: TestEnd) -> None:
         voice.say(f"  caution: {caution}", style="caution")
 
 
-def proposals_table(voice: Voice, sheet: schema.Sheet) -> None:
-    """All proposals side by side with the settings as found, in the controller's own words and units."""
+def proposals_table(voice: Voice, sheet: schema.Sheet, *, is_brief: bool = False) -> None:
+    """All proposals side by side with the settings as found, in the controller's own words and units.
+
+    ``is_brief`` tells the cautions of the recommended one only.  A caution that all share is told once.
+    """
     as_found = () if sheet.as_found is None else sheet.as_found.settings
     proposals = [one for one in sheet.proposals if one.settings]
     fields = proposals[0].settings if proposals else as_found
@@ -71,10 +75,19 @@ def proposals_table(voice: Voice, sheet: schema.Sheet) -> None:
     for proposal in sheet.proposals:
         if proposal.not_proposed_because is not None:
             voice.say(f"  {proposal.name}: not proposed. {proposal.not_proposed_because}", style="quiet")
+    _show_cautions(voice, [one for one in proposals if one.is_recommended or not is_brief])
+    if is_brief and len(proposals) > 1:
+        voice.say(f"  'autotune propose CONFIG {sheet.sheet_id}' tells what speaks against each of the others.")
+    voice.say()
+
+
+def _show_cautions(voice: Voice, proposals: Sequence[schema.Proposal]) -> None:
+    told: set[str] = set()
     for proposal in proposals:
         for caution in proposal.cautions:
-            voice.say(f"  {proposal.name}: {caution}", style="caution" if proposal.is_recommended else "quiet")
-    voice.say()
+            if caution not in told:
+                voice.say(f"  {proposal.name}: {caution}", style="caution" if proposal.is_recommended else "quiet")
+            told.add(caution)
 
 
 def test_answer(ended: TestEnd) -> TestAnswer:

@@ -125,7 +125,7 @@ def show_end(voice: Voice, loop: LoopConfig, ended: TestEnd) -> None:
     voice.say(f"{ended.experiment.phase.value}. {ended.sheet.outcome.text}", style=style)
     show_findings(voice, loop, ended)
     if ended.sheet.proposals:
-        proposals_table(voice, ended.sheet)
+        proposals_table(voice, ended.sheet, is_brief=True)
     voice.say(f"Sheet {ended.sheet.sheet_id}")
     voice.say(f"hash {ended.sheet_hash}", style="quiet")
 
