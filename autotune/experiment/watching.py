@@ -20,10 +20,13 @@ from autotune.experiment.takeover import sign_of_takeover
 from autotune.loop.limits import AsFound
 from autotune.loop.sample import Sample
 
-WRONG_HALVES = 2.0
+HALVES_AFTER_FIRST = 6.0
+HALVES_LATER = 2.0
 """How many longest half cycles PV may stay on the wrong side after a switch, per unit of 1 + step ratio.
 
-On an integrator the half cycle after the larger step lasts up to (1 + ratio) first halves.
+On an integrator the half cycle after the larger step lasts up to (1 + ratio) first halves.  From rest the first half
+is short: behind n equal lags PV starts as t^n, and comes back after t of (1 + t)^n = 2 t^n first halves, 2.4 for two
+lags and 11 for eight.
 """
 
 RECORDED = (Stage.HOLDING, Stage.FIRST_MOVE, Stage.CYCLING)
@@ -126,7 +129,10 @@ def _wrong_since_s(experiment: Experiment, sample: Sample, t_s: float) -> float 
 def _wrong_at_most_s(experiment: Experiment) -> float:
     """Inverse response and dead time as declared, and after the first switch what the halves so far explain."""
     limits, relay, half_s = experiment.plan.limits, experiment.relay, experiment.cycles.half_s
-    explained_s = 0.0 if relay is None or half_s is None else WRONG_HALVES * half_s * (1.0 + relay.step_ratio)
+    explained_s = 0.0
+    if relay is not None and half_s is not None:
+        halves = HALVES_AFTER_FIRST if relay.switches < 2 else HALVES_LATER
+        explained_s = halves * half_s * (1.0 + relay.step_ratio)
     return limits.inverse_response_s + limits.dead_time_s + explained_s
 
 
