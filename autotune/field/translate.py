@@ -5,7 +5,8 @@ from math import isfinite
 from autotune.config.types import DataType, LoopConfig, Tag
 from autotune.errors import WriteForbidden
 from autotune.experiment.commands import ClaimLoop, DriveOutput, ReleaseLoop, SetMode, SetSetpoint
-from autotune.field.codec import held_type, representable, to_eu
+from autotune.field.codec import held_type, representable
+from autotune.field.codec import to_eu as to_eu  # whoever shows raw values finds it beside the rest
 from autotune.field.link import RawValue, ReadReport
 from autotune.field.write_list import SETTINGS
 from autotune.loop.mode import LoopMode
@@ -13,19 +14,6 @@ from autotune.loop.quality import Quality
 from autotune.loop.sample import GuardState, GuardView, Sample, Stamp, WatchReading
 from autotune.loop.settings import BlockFields
 from autotune.loop.span import Span
-
-__all__ = [
-    "WireCommand",
-    "field_to_raw",
-    "held_fields",
-    "sample_tags",
-    "settings_tags",
-    "settings_to_raw",
-    "to_block_fields",
-    "to_eu",
-    "to_raw",
-    "to_sample",
-]
 
 WireCommand = ClaimLoop | SetMode | DriveOutput | SetSetpoint | ReleaseLoop
 """The commands that are one write each; a hand-back is several of them."""

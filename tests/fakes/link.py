@@ -6,6 +6,7 @@ landed.  Requests travel by timers of the running loop, so there is no task to l
 """
 
 import asyncio
+from collections import deque
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
 from enum import Enum
@@ -58,8 +59,9 @@ class FakeLink:
     ``qualities`` overrules the quality of a tag.  ``on_write`` is called with each write that lands, after
     the image has taken it; ``on_read`` just before the image is read.  ``latency_s`` is the time of every
     request's way there.  ``read_faults``, ``write_faults`` and ``connect_faults`` hit the request of that
-    number, counted from 1.  While ``is_reachable`` is ``False`` the cable is pulled.  A write that was
-    cancelled or missed on its way lands nevertheless, unless its fault says otherwise.
+    number, counted from 1; ``next_faults`` the next reads and writes, before those.  While ``is_reachable``
+    is ``False`` the cable is pulled.  A write that was cancelled or missed on its way lands nevertheless,
+    unless its fault says otherwise.
     """
 
     def __init__(self, loop: LoopConfig, image: Mapping[str, RawValue] | None = None) -> None:
@@ -72,6 +74,7 @@ class FakeLink:
         self.read_faults: dict[int, Fault] = {}
         self.write_faults: dict[int, Fault] = {}
         self.connect_faults: dict[int, Fault] = {}
+        self.next_faults: deque[Fault] = deque()
         self.log: list[LoggedRequest] = []
         self.held = asyncio.Event()
         self._released: list[Callable[[], None]] = []
@@ -187,6 +190,8 @@ class FakeLink:
         self.log.append(LoggedRequest(kind, _now_s(), names, values))
         if not self.is_reachable:
             return Fault(FaultKind.SILENT, lands=False)
+        if kind != "connect" and self.next_faults:
+            return self.next_faults.popleft()
         return faults.get(len(self.requests(kind)), Fault(FaultKind.LATE))
 
     async def _travel(self, fault: Fault, land: Callable[[], None]) -> float:

@@ -14,6 +14,8 @@ from autotune.field.link import RawValue, Reading, ReadReport
 from autotune.field.modbus.requests import plan_writes
 from autotune.field.translate import (
     WireCommand,
+    field_to_raw,
+    held_fields,
     sample_tags,
     settings_tags,
     settings_to_raw,
@@ -273,6 +275,15 @@ def test_settings_with_one_field_that_is_no_number_are_no_settings(
     gain: float | None, integral: float | None, derivative: float | None
 ) -> None:
     assert to_block_fields(PLAIN, fields_report(gain, integral, derivative)) is None
+
+
+def test_what_registers_will_hold_is_told_before_it_is_written() -> None:
+    loop = with_tags(PLAIN, {"integral": replace(holding(42, DataType.INT), scale=0.1)})
+    assert field_to_raw(loop, "integral", 12.34) == 123
+    held = held_fields(loop, BlockFields(2.5, 12.34, 3.0))
+    assert held == BlockFields(2.5, 123 * 0.1, 3.0)
+    assert settings_to_raw(loop, held) == settings_to_raw(loop, BlockFields(2.5, 12.34, 3.0))
+    assert held_fields(without_tags(loop, "derivative"), BlockFields(2.5, 12.0, None)).derivative is None
 
 
 @given(st.floats(0.125, 20.0, width=32), st.integers(1, 900), st.floats(0.0, 300.0, width=32))

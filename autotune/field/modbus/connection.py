@@ -35,7 +35,7 @@ class Answer:
 class Connection(asyncio.Protocol):
     """Use as the protocol of ``loop.create_connection``, once; a lost connection is never revived.
 
-    ``device`` names the device in every error; the transaction number starts at 1 and wraps at 16 bits.
+    ``device`` names the device in every error.
     """
 
     def __init__(self, device: str, device_id: int, timeout_s: float) -> None:
@@ -63,7 +63,7 @@ class Connection(asyncio.Protocol):
         if self._transport is None or not self.is_open:
             raise LinkClosed(f"{self._device} is not connected; nothing was sent")
         loop = asyncio.get_running_loop()
-        self._transaction = self._transaction % 0xFFFF + 1
+        self._transaction = next_transaction(self._transaction)
         question.transaction_id, question.dev_id = self._transaction, self._device_id
         frame = self._framer.buildFrame(question)
         self._question, self._reply = question, loop.create_future()
@@ -147,6 +147,11 @@ class Connection(asyncio.Protocol):
     def _set_option(self, level: int, option: int, setting: int | bytes) -> None:
         if self._transport is not None:
             self._transport.get_extra_info("socket").setsockopt(level, option, setting)
+
+
+def next_transaction(transaction: int) -> int:
+    """The number of the next transaction: 1 .. 65535 and round again; 0 is left to those who don't number."""
+    return transaction % 0xFFFF + 1
 
 
 def _fits(question: ModbusPDU, pdu: ModbusPDU, octets: bytes) -> bool:
