@@ -158,16 +158,17 @@ def _write_next(state: WriteState, trigger: Trigger, t_s: float) -> Step:
         trigger,
         WriteField(name, _number(state.plan.fields, name)),
         written=state.written + 1,
+        last_sent=name,
         give_up_s=_soon_s(state, t_s),
     )
 
 
 def _field_written(state: WriteState, event: FieldWritten) -> Step:
+    if state.phase not in (Phase.WRITING, Phase.PUTTING_BACK) or event.name != state.last_sent:
+        raise _illegal(state, event)
     if state.phase is Phase.PUTTING_BACK:
         # Whatever became of it on the wire: what the controller holds after a scan decides.
         return _go(state, Trigger.FIELD_WRITTEN, read_at_s=event.t_s + state.pace.settle_s)
-    if state.phase is not Phase.WRITING or event.name != state.plan.order[state.written - 1]:
-        raise _illegal(state, event)
     if event.report.outcome is WriteOutcome.REFUSED:
         refused = write_refused(event.name, event.report.detail)
         return _put_back(state, Trigger.FIELD_REFUSED, refused, event.t_s)
@@ -210,7 +211,7 @@ def _prove(state: WriteState, reading: SettingsRead) -> Step:
     if not reading.t_s < state.give_up_s:
         return _unverified(state, f"{' and '.join(left)} could not be put back")
     name = left[-1]  # backwards: what was strengthened last is weakened first
-    return _go(state, Trigger.FIELD_LEFT, WriteField(name, _number(plan.as_found, name)))
+    return _go(state, Trigger.FIELD_LEFT, WriteField(name, _number(plan.as_found, name)), last_sent=name)
 
 
 def _mode_set(state: WriteState, event: ModeSet) -> Step:
@@ -340,9 +341,8 @@ def _is_expected(state: WriteState, name: str, fields: BlockFields) -> bool:
 
 def _touched_by_others(state: WriteState, fields: BlockFields) -> bool:
     """Whether a field holds a number that can't come from us; the last one sent may hold anything."""
-    others = changed_fields(state.plan.as_found, fields)
-    sent = state.plan.order[: state.written]
-    return any(name not in sent or (name != sent[-1] and not _is_expected(state, name, fields)) for name in others)
+    others = [name for name in changed_fields(state.plan.as_found, fields) if name != state.last_sent]
+    return any(not _is_expected(state, name, fields) for name in others)
 
 
 def _number(fields: BlockFields, name: str) -> float:

@@ -27,7 +27,8 @@ class WritePace:
 class WriteState:
     """A write as it stands; made by ``begin``, moved by ``step``.
 
-    ``written`` counts the fields of ``plan.order`` that were sent.  ``mode_found`` goes back at the end;
+    ``written`` counts the fields of ``plan.order`` that were sent, ``last_sent`` names the last one, sent there
+    or back.  ``mode_found`` goes back at the end;
     ``mode_held`` is the mode that is to be seen now.  ``ends_at`` is the trigger of a good end.
     ``read_at_s`` is when to read again (``None``: a command is out).  ``op_held_pct`` is the output in
     manual.  ``last_read`` is the last good reading, ``because`` lists in order why it isn't ``WRITTEN``, or
@@ -41,6 +42,7 @@ class WriteState:
     give_up_s: float
     read_at_s: float | None = None
     written: int = 0
+    last_sent: str | None = None
     is_taken: bool = False
     cancelled_by: str | None = None
     is_mode_acknowledged: bool = False

@@ -308,6 +308,28 @@ def test_a_cancel_ends_as_it_began(phase: Phase) -> None:
     assert (controller.fields, controller.mode) == (OLD, AUTO)
 
 
+def test_a_write_that_shows_only_after_a_scan_is_not_mistaken_for_one_that_did_not_land() -> None:
+    """Cancelled at once after the first write, whose number shows 0.3 s later."""
+    controller = Controller(on_write=_on_write((APPLIED, False)))
+    written_s: list[float] = []
+
+    def interfere(state: WriteState) -> Event | None:
+        if state.phase is Phase.VERIFYING and not written_s:
+            written_s.append(controller.now_s)
+            return CancelAsked(controller.now_s, "A. Person")
+        return None
+
+    def show(plant: Controller, _: Command) -> None:
+        if written_s and len(plant.writes) == 1 and plant.now_s >= written_s[0] + 0.3:
+            plant.fields = replace(OLD, gain=1.5)
+
+    controller.on_command = show
+    state = run(controller, interfere=interfere)
+    assert (state.phase, _codes(state)) == (Phase.PUT_BACK, ["CANCELLED"])
+    assert controller.writes == [WriteField("gain", 1.5), WriteField("gain", 2.0)]
+    assert controller.fields == OLD
+
+
 def test_a_cancel_while_nothing_can_be_read_ends_at_once() -> None:
     controller = Controller(is_readable=False)
     state = run(controller, interfere=lambda _: CancelAsked(0.0, "A. Person"))
@@ -389,6 +411,20 @@ def test_settings_that_somebody_else_changes_meanwhile_are_left_alone(name: str)
     assert (state.phase, _codes(state)) == (Phase.UNVERIFIED, ["SETTINGS_DIFFER", "UNVERIFIED"])
     assert [write.name for write in controller.writes] == ["gain", "derivative"]
     assert controller.mode is MAN
+
+
+def test_a_setting_that_somebody_changes_after_it_was_put_back_is_left_alone() -> None:
+    def meddle(plant: Controller) -> None:
+        plant.fields = replace(plant.fields, derivative=7.0)
+
+    controller = Controller(
+        on_write=_on_write((APPLIED, True), (APPLIED, True), (REFUSED, False)),
+        on_command=_before(WriteField, 5, meddle),
+    )
+    state = run(controller)
+    assert (state.phase, _codes(state)) == (Phase.UNVERIFIED, ["WRITE_REFUSED", "UNVERIFIED"])
+    assert controller.fields.derivative == 7.0
+    assert "somebody else" in state.because[-1].reason
 
 
 # Loud
@@ -525,7 +561,7 @@ AWAITED: dict[Phase, set[type[Event]]] = {
 def test_an_event_that_is_not_awaited_is_our_fault_and_changes_nothing(phase: Phase, event: Event) -> None:
     begun, _ = started(Controller())
     ends_at = Trigger.SEEN_OLD if phase is Phase.RETURNING else Trigger.NOTHING_WRITTEN
-    state = replace(begun, phase=phase, written=1, mode_found=AUTO, mode_held=AUTO, ends_at=ends_at)
+    state = replace(begun, phase=phase, written=1, last_sent="gain", mode_found=AUTO, mode_held=AUTO, ends_at=ends_at)
     copy = replace(state)
     is_awaited = type(event) in AWAITED.get(phase, set())
     is_always = isinstance(event, TimePassed | CancelAsked) and phase not in TERMINAL_PHASES
@@ -539,9 +575,10 @@ def test_an_event_that_is_not_awaited_is_our_fault_and_changes_nothing(phase: Ph
 
 def test_an_answer_about_another_field_is_our_fault() -> None:
     begun, _ = started(Controller())
-    state = replace(begun, phase=Phase.WRITING, written=1)
-    with pytest.raises(IllegalEvent, match="FieldWritten is not awaited"):
-        step(state, FieldWritten(0.0, "integral", REPORT))
+    for phase in (Phase.WRITING, Phase.PUTTING_BACK):
+        state = replace(begun, phase=phase, written=1, last_sent="gain")
+        with pytest.raises(IllegalEvent, match="FieldWritten is not awaited"):
+            step(state, FieldWritten(0.0, "integral", REPORT))
 
 
 def test_a_tick_before_its_time_and_one_that_is_no_time_do_nothing() -> None:

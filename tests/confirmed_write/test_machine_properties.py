@@ -15,10 +15,11 @@ from autotune.confirmed_write.machine import begin, next_deadline_s, step
 from autotune.confirmed_write.phases import Phase
 from autotune.confirmed_write.plan import Confirmation
 from autotune.confirmed_write.state import WriteState
+from autotune.loop.block_units import number_of
 from autotune.loop.mode import LoopMode
 from autotune.loop.outcome import Refusal
 from autotune.loop.write import WriteOutcome
-from tests.confirmed_write.controller import APPLIED, PLAN, Controller
+from tests.confirmed_write.controller import APPLIED, OLD, PLAN, Controller
 
 
 class ConfirmedWrite(RuleBasedStateMachine):
@@ -36,13 +37,18 @@ class ConfirmedWrite(RuleBasedStateMachine):
         self.mode_read: LoopMode | None = None
 
     @initialize(
-        mode=st.sampled_from([LoopMode.AUTO, LoopMode.AUTO, LoopMode.MAN, LoopMode.CAS]),
-        in_manual=st.sampled_from([True, True, False]),
+        mode=st.sampled_from([LoopMode.AUTO] * 5 + [LoopMode.MAN] * 2 + [LoopMode.CAS]),
+        in_manual=st.sampled_from([True] * 5 + [False]),
         tracks=st.booleans(),
+        well_for=st.integers(0, 12),
     )
-    def find_the_loop(self, mode: LoopMode, in_manual: bool, tracks: bool) -> None:
+    def find_the_loop(self, mode: LoopMode, in_manual: bool, tracks: bool, well_for: int) -> None:
+        """Each run begins somewhere on the straight way, so that trouble comes at every place."""
         self.controller.mode = mode
         self.plan = replace(PLAN, write_in_manual=in_manual, sp_tracks_in_manual=tracks)
+        if well_for:
+            self.begin_with_a_valid_word()
+            self.all_goes_well(well_for)
 
     # Before: only a valid word starts a write
 
@@ -80,10 +86,14 @@ class ConfirmedWrite(RuleBasedStateMachine):
 
     # During: the controller answers, well or badly
 
-    @precondition(lambda self: bool(self.commands))
-    @rule()
-    def the_command_is_done(self) -> None:
-        self._perform(APPLIED, lands=True)
+    @precondition(lambda self: self._is_running())
+    @rule(moves=st.sampled_from([1, 2, 3, 40]))
+    def all_goes_well(self, moves: int) -> None:
+        for _ in range(moves):
+            if self.commands:
+                self._perform(APPLIED, lands=True)
+            elif self._is_running():
+                self.time_passes(0.0)
 
     @precondition(lambda self: isinstance(next(iter(self.commands), None), WriteField | SetMode))
     @rule(outcome=st.sampled_from(WriteOutcome), lands=st.sampled_from(["at once", "never", "late"]))
@@ -101,28 +111,23 @@ class ConfirmedWrite(RuleBasedStateMachine):
         self.controller.is_readable = True
 
     @precondition(lambda self: self._deadline_s() is not None)
-    @rule(late_s=st.sampled_from([0.0, 0.0, 0.0, 30.0]))
-    def time_passes(self, late_s: float) -> None:
-        if self.late is not None:
-            self.late()
-            self.late = None
-        deadline_s = self._deadline_s()
-        assert deadline_s is not None
-        assert self.state is not None
-        self.controller.now_s = max(self.controller.now_s, deadline_s) + late_s
-        self._take(step(self.state, TimePassed(self.controller.now_s)))
+    @rule()
+    def the_service_oversleeps(self) -> None:
+        self.time_passes(30.0)
 
     # People
 
     @precondition(lambda self: self._is_running())
-    @rule(mode=st.sampled_from([LoopMode.AUTO, LoopMode.MAN, LoopMode.CAS, LoopMode.NOT_KNOWN]))
-    def a_person_changes_the_mode(self, mode: LoopMode) -> None:
-        self.controller.set_mode(mode)
-
-    @precondition(lambda self: self._is_running())
-    @rule(name=st.sampled_from(["gain", "integral", "derivative"]), number=st.sampled_from([7.0, 2.0, 1.5]))
-    def a_person_changes_a_setting(self, name: str, number: float) -> None:
-        self.controller.fields = replace(self.controller.fields, **{name: number})
+    @rule(
+        mode=st.none() | st.sampled_from([LoopMode.AUTO, LoopMode.MAN, LoopMode.CAS, LoopMode.NOT_KNOWN]),
+        name=st.sampled_from(["gain", "integral", "derivative"]),
+        number=st.sampled_from([7.0, 2.0, 1.5]),
+    )
+    def a_person_changes_the_mode_or_a_setting(self, mode: LoopMode | None, name: str, number: float) -> None:
+        if mode is None:
+            self.controller.fields = replace(self.controller.fields, **{name: number})
+        else:
+            self.controller.set_mode(mode)
 
     @precondition(lambda self: self._is_running())
     @rule()
@@ -163,12 +168,24 @@ class ConfirmedWrite(RuleBasedStateMachine):
         if "MODE_TAKEN" not in [refusal.code for refusal in state.because]:
             assert state.last_read.mode is state.mode_found
 
+    def time_passes(self, late_s: float) -> None:
+        if self.late is not None:
+            self.late()
+            self.late = None
+        deadline_s = self._deadline_s()
+        assert deadline_s is not None
+        assert self.state is not None
+        self.controller.now_s = max(self.controller.now_s, deadline_s) + late_s
+        self._take(step(self.state, TimePassed(self.controller.now_s)))
+
     def _perform(self, outcome: WriteOutcome, lands: bool) -> None:
         (command,) = self.commands
         assert self.state is not None
         if isinstance(command, WriteField):
             assert self.mode_read in (LoopMode.MAN, LoopMode.AUTO)
             assert self.mode_read is LoopMode.MAN or not self.plan.write_in_manual
+            assert command.number in (number_of(self.plan.fields, command.name), number_of(OLD, command.name))
+            self._assert_no_foreign_number()
             self.is_read_after_write = False
         self.controller.on_write = lambda *_: (outcome, lands)
         self.controller.on_mode = lambda _: (outcome, lands)
@@ -178,6 +195,15 @@ class ConfirmedWrite(RuleBasedStateMachine):
         if isinstance(event, SettingsRead):
             self.mode_read = event.mode
         self._take(step(self.state, event))
+
+    def _assert_no_foreign_number(self) -> None:
+        """Nothing is written over numbers that can't come from us, but for the last field that was sent."""
+        assert self.state is not None
+        assert self.state.last_read is not None
+        sent = self.controller.writes[-1].name if self.controller.writes else None
+        for name in {"gain", "integral", "derivative"} - {sent}:
+            read = number_of(self.state.last_read.fields, name)
+            assert read in (number_of(self.plan.fields, name), number_of(OLD, name))
 
     def _take(self, stepped: tuple[WriteState, tuple[Command, ...]]) -> None:
         self.state, self.commands = stepped
@@ -199,4 +225,4 @@ class ConfirmedWrite(RuleBasedStateMachine):
 
 
 TestConfirmedWrite = ConfirmedWrite.TestCase
-TestConfirmedWrite.settings = settings(stateful_step_count=40)
+TestConfirmedWrite.settings = settings(stateful_step_count=10, max_examples=400)
