@@ -217,11 +217,18 @@ class LimitCycle:
 
 
 def timed_relay(
-    plant: Plant, up_pct: float, down_pct: float, hysteresis_pct: float, switches: int = 60, grid_s: float = 0.02
+    plant: Plant,
+    up_pct: float,
+    down_pct: float,
+    hysteresis_pct: float,
+    switches: int = 60,
+    grid_s: float = 0.02,
+    kick_s: float = 0.0,
 ) -> tuple[LimitCycle, list[tuple[float, float]], list[tuple[float, float]]]:
     """Event-timed relay from rest: the limit cycle, the moves (t, OP) and the waveform (t, PV) of the whole run.
 
-    Crossings are bracketed on a grid and solved to rounding; moves reach the plant a dead time later.
+    Crossings are bracketed on a grid and solved to rounding; moves reach the plant a dead time later.  The first
+    move lasts ``kick_s`` at least: without hysteresis and dead time a relay at rest would switch at once, for ever.
     """
     a, b, c = state_space(plant)
     n = len(b)
@@ -242,7 +249,7 @@ def timed_relay(
         def margin(dt: float, x: Matrix = x, u: float = u_in, sign: float = sign) -> float:
             return float(sign * (c @ after(x, u, dt)) - hysteresis_pct)
 
-        if sign * float(c @ ahead) > hysteresis_pct and step > 0:
+        if sign * float(c @ ahead) > hysteresis_pct and step > 0 and t >= kick_s:
             crossing = float(brentq(margin, 0.0, step, xtol=1e-14)) if margin(0.0) < 0 else 0.0
             x, t = after(x, u_in, crossing), t + crossing
             op = down_pct if op == up_pct else up_pct
@@ -257,3 +264,26 @@ def timed_relay(
     down = next(m[0] for m in moves if m[1] == down_pct and ups[0] < m[0] < ups[1])
     swing = [pv for at, pv in waveform if ups[0] <= at <= ups[1]]
     return LimitCycle(down - ups[0], ups[1] - down, max(swing), min(swing)), moves, waveform
+
+
+def timed_record(plant: Plant, up_pct: float, down_pct: float, hysteresis_pct: float, **how: Any) -> Record:
+    """The event-timed run as a record about 0 %, with samples on the grid and at every event, and a rest before it.
+
+    ``up_pct`` and ``down_pct`` are signed levels of OP; ``how`` goes to ``timed_relay``.
+    """
+    _, moves, waveform = timed_relay(plant, up_pct, down_pct, hysteresis_pct, **how)
+    rest = [RecordedSample(Stamp.at(-0.1 * i), 0.0) for i in range(10, 0, -1)]
+    return Record(
+        action=ControlAction.REVERSE,
+        time_base=TimeBase.PLC_CLOCK,
+        samples=(*rest, *(RecordedSample(Stamp.at(t), pv) for t, pv in waveform)),
+        effects=(OutputEffect(Stamp.at(-2.0), 0.0), *(OutputEffect(Stamp.at(t), op) for t, op in moves)),
+        centre_pct=0.0,
+        reference_pct=0.0,
+        relay_from_s=0.0,
+        hysteresis_pct=hysteresis_pct,
+        noise_pct=0.0,
+        drift_pct_per_s=0.0,
+        scan_s=how.get("grid_s", 0.02),
+        plc_scan_s=None,
+    )
