@@ -37,6 +37,7 @@ _BIG_ENDIAN_FORMATS = {
     DataType.REAL: ">f",
     DataType.LREAL: ">d",
 }
+_WIDTHS = {kind: struct.calcsize(layout) // 2 for kind, layout in _BIG_ENDIAN_FORMATS.items()}
 _GREATEST = {DataType.REAL: (2.0 - 2.0**-23) * 2.0**127, DataType.LREAL: sys.float_info.max}
 _BIT_TABLES = (RegisterTable.COIL, RegisterTable.DISCRETE)
 _FAILURE_LOW_PCT, _FAILURE_HIGH_PCT = -2.5, 106.25  # 3.6 and 21 mA
@@ -55,9 +56,7 @@ def held_type(tag: Tag) -> DataType:
 
 def width(tag: ModbusTag) -> int:
     """How many addresses of its table the tag takes: bits of a bit table, registers otherwise."""
-    if held_type(tag) is DataType.BOOL:
-        return 1
-    return struct.calcsize(_BIG_ENDIAN_FORMATS.get(tag.type, ">h")) // 2
+    return 1 if held_type(tag) is DataType.BOOL else _WIDTHS.get(tag.type, 1)
 
 
 def from_words(tag: ModbusTag, words: Sequence[int]) -> RawValue | None:
@@ -65,7 +64,7 @@ def from_words(tag: ModbusTag, words: Sequence[int]) -> RawValue | None:
 
     No number are NaN, infinity, and an 8-bit type whose register holds more than 8 bits and a sign.
     """
-    octets = _in_order(tag, b"".join(word.to_bytes(2, "big") for word in words))
+    octets = _in_order(tag, struct.pack(f">{len(words)}H", *words))
     if tag.bit is not None:
         return bool(int.from_bytes(octets, "big") >> tag.bit & 1)
     if tag.type is DataType.BOOL:
@@ -89,8 +88,7 @@ def to_words(tag: ModbusTag, raw: RawValue) -> tuple[int, ...]:
         octets = (int(raw) & 0xFFFF).to_bytes(2, "big")
     else:
         octets = struct.pack(_BIG_ENDIAN_FORMATS[tag.type], raw)
-    octets = _in_order(tag, octets)
-    return tuple(int.from_bytes(octets[at : at + 2], "big") for at in range(0, len(octets), 2))
+    return struct.unpack(f">{len(octets) // 2}H", _in_order(tag, octets))
 
 
 def mask_bit(tag: ModbusTag) -> int:
@@ -194,6 +192,8 @@ def to_reading(tag: Tag, raw: RawValue | None) -> Reading:
 
 def _in_order(tag: ModbusTag, octets: bytes) -> bytes:
     """Between the wire's order of octets and most significant first; its own way back."""
+    if tag.byte_order is Order.BIG and (tag.word_order is Order.BIG or len(octets) == 2):
+        return octets
     words = [octets[at : at + 2] for at in range(0, len(octets), 2)]
     if tag.byte_order is Order.LITTLE:
         words = [word[::-1] for word in words]

@@ -73,6 +73,11 @@ def test_the_output_keeps_to_the_loops_own_limits(name: str, raw: float, is_allo
     assert allows(GUARDED, name, raw) is is_allowed
 
 
+def test_a_number_is_judged_as_the_register_will_hold_it() -> None:
+    assert allows(PLAIN, "op", 80.0 + 1e-9)  # the single next to it is 80
+    assert not allows(PLAIN, "op", 80.0 + 1e-5)
+
+
 @pytest.mark.parametrize(
     ("raw", "is_allowed"), [(0.0, True), (150.0, True), (-0.1, False), (150.1, False), (nan, False)]
 )

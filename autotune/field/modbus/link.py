@@ -13,6 +13,7 @@ from autotune.config.types import ModbusEndpoint, ModbusTag, RegisterTable
 from autotune.errors import LinkClosed, LinkError, LinkRefused, LinkTimeout, WriteForbidden
 from autotune.field.codec import from_words, to_reading, width
 from autotune.field.link import RawValue, Reading, ReadReport
+from autotune.field.modbus.back_off import BackOff
 from autotune.field.modbus.connection import Answer, Connection
 from autotune.field.modbus.exceptions import in_words, is_surely_undone
 from autotune.field.modbus.messages import to_place, to_read_pdu, to_write_pdu
@@ -20,8 +21,6 @@ from autotune.field.modbus.requests import MaskRegister, ReadRequest, WriteReque
 from autotune.field.write_list import WriteList
 from autotune.loop.sample import Stamp
 from autotune.loop.write import WriteOutcome, WriteReport
-
-_LONGEST_BACK_OFF = 8  # times the endpoint's gap between connections
 
 
 class ModbusLink:
@@ -35,8 +34,7 @@ class ModbusLink:
         self._connection: Connection | None = None
         self._one_at_a_time = asyncio.Lock()
         self._plans: dict[tuple[str, ...], tuple[ReadRequest, ...]] = {}
-        self._not_before_s = 0.0
-        self._back_off = 1
+        self._back_off = BackOff(endpoint.connect_gap_s)
 
     @property
     def is_connected(self) -> bool:
@@ -52,10 +50,8 @@ class ModbusLink:
         loop = asyncio.get_running_loop()
         async with self._one_at_a_time:
             self._drop()
-            if (wait_s := self._not_before_s - loop.time()) > 0.0:
-                await asyncio.sleep(wait_s)
-            self._not_before_s = loop.time() + self._endpoint.connect_gap_s * self._back_off
-            self._back_off = min(2 * self._back_off, _LONGEST_BACK_OFF)
+            await asyncio.sleep(self._back_off.wait_s(loop.time()))
+            self._back_off.attempted(loop.time())
             self._connection = await self._open()
 
     async def read(self, names: Sequence[str]) -> ReadReport:
@@ -137,7 +133,7 @@ class ModbusLink:
         if self._connection is None:
             raise LinkClosed(f"{self._device} is not connected; nothing was sent")
         answer = await self._connection.ask(question)
-        self._back_off = 1
+        self._back_off.answered()
         return answer
 
     def _read_plan(self, names: tuple[str, ...]) -> tuple[ReadRequest, ...]:
@@ -147,10 +143,10 @@ class ModbusLink:
 
     def _to_readings(self, request: ReadRequest, pdu: ModbusPDU) -> dict[str, Reading]:
         readings = {}
+        is_bit = request.table in (RegisterTable.COIL, RegisterTable.DISCRETE)
         for name in request.names:
             tag = self._tags[name]
             at = tag.address - request.first
-            is_bit = request.table in (RegisterTable.COIL, RegisterTable.DISCRETE)
             raw = pdu.bits[at] if is_bit else from_words(tag, pdu.registers[at : at + width(tag)])
             readings[name] = to_reading(tag, raw)
         return readings
