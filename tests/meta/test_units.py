@@ -20,6 +20,8 @@ EXCEPTIONS = {
     "autotune/experiment/trace.py Trace.recent": "pairs of t_s and pv_pct",
     "autotune/identify/fourier.py joined_mean -> float": "in the unit of the samples that it is given",
     "autotune/identify/shapes.py response(x)": "a frequency over another, as the docstring says",
+    "autotune/identify/model.py ProcessModel.*ator": "coefficients of powers of s, as the docstring says",
+    "autotune/identify/model.py ModelWithDraws.weights": "each a weight; the name is the plural",
     "autotune/experiment/plan.py RelayPlan.hysteresis_per_noise": "a ratio; its name says of what to what",
 }
 
