@@ -20,7 +20,7 @@ def look(experiment: Experiment, sample: Sample, t_s: float) -> Step:
         looked=experiment.looked.appended(sample),
         trace=trace.with_sample(experiment.trace, sample, t_s, experiment.plan.scan_s),
     )
-    if experiment.started_s is not None and t_s - experiment.started_s < experiment.plan.look_around_s:
+    if t_s - experiment.stage_s < experiment.plan.look_around_s:
         return experiment, ()
     looked = tuple(experiment.looked)
     found = refusals(experiment.plan, looked, t_s)

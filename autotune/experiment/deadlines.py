@@ -22,18 +22,15 @@ def next_deadline_s(experiment: Experiment) -> float | None:
     return min((due_s for due_s in dues_s if due_s is not None), default=None)
 
 
-def look_due_s(experiment: Experiment) -> float | None:
+def look_due_s(experiment: Experiment) -> float:
     """When the look around must have seen the loop."""
-    if experiment.started_s is None:
-        return None
-    return experiment.started_s + experiment.plan.look_around_s + experiment.plan.take_over_within_s
+    return experiment.stage_s + experiment.plan.look_around_s + experiment.plan.take_over_within_s
 
 
-def view_due_s(experiment: Experiment) -> float | None:
+def view_due_s(experiment: Experiment) -> float:
     """When the next reading must have come."""
-    if experiment.seen_s is None:
-        return None
-    return experiment.seen_s + VIEW_SCANS * experiment.plan.scan_s + experiment.plan.limits.safe_without_view_s
+    seen_s = experiment.stage_s if experiment.seen_s is None else experiment.seen_s
+    return seen_s + VIEW_SCANS * experiment.plan.scan_s + experiment.plan.limits.safe_without_view_s
 
 
 def take_over_due_s(experiment: Experiment) -> float | None:

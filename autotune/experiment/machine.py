@@ -12,7 +12,7 @@ from types import MappingProxyType
 from autotune.errors import IllegalEvent
 from autotune.experiment import baseline, checking, recording, testing, watching
 from autotune.experiment.commands import ClaimLoop, DriveOutput, SetMode
-from autotune.experiment.deadlines import next_deadline_s
+from autotune.experiment.deadlines import has_come, next_deadline_s
 from autotune.experiment.ending import Step, close, end_early, finish, stop_untouched, trip, trip_with
 from autotune.experiment.events import (
     AbortAsked,
@@ -155,15 +155,13 @@ def _step_written(experiment: Experiment, event: Written) -> Step:
 
 def _step_clock(experiment: Experiment, as_found: AsFound) -> Step:
     """Judge what the clock alone decides, on the last reading."""
-    if experiment.sample is None:
-        return experiment, ()
-    fired = first_trip(watching.view_of(experiment, as_found, experiment.sample), OF_THE_CLOCK)
+    fired = first_trip(watching.view_of(experiment, as_found, experiment.sample or as_found.sample), OF_THE_CLOCK)
     return (experiment, ()) if fired is None else trip(experiment, fired)
 
 
 def _is_view_lost(experiment: Experiment, t_s: float) -> bool:
     """Whether a failed reading leaves us without a view for longer than is safe."""
-    return experiment.seen_s is None or not t_s - experiment.seen_s < experiment.plan.limits.safe_without_view_s
+    return experiment.seen_s is None or has_come(experiment.seen_s + experiment.plan.limits.safe_without_view_s, t_s)
 
 
 def _ask_smaller_steps(experiment: Experiment) -> Experiment:

@@ -167,7 +167,7 @@ def _advances(recording: Recording, sample: Sample) -> bool:
 
 
 def _on_plc_clock(tick_ms: int, origin_ms: int) -> Stamp:
-    return Stamp.at(0.001 * (tick_ms - origin_ms))
+    return Stamp.at((tick_ms - origin_ms) / 1000.0)
 
 
 def _on_our_clock(move: Move, sent_s: float, plan: TestPlan, end_s: float) -> Stamp:

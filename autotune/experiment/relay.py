@@ -98,12 +98,15 @@ def with_smaller_steps(relay: Relay) -> Relay:
     return replace(relay, next_ratio=min(relay.next_ratio, 1.0) * SMALLER_RATIO, is_fitting_over=True)
 
 
-def fitted(relay: Relay, swing_pct: float, wanted_swing_pct: float, room: Room) -> Relay:
-    """The relay with steps on their way to the wanted swing: both by one ratio, never beyond the room."""
+def fitted(relay: Relay, swing_pct: float, wanted_swing_pct: float, room: Room, *, may_enlarge: bool = True) -> Relay:
+    """The relay with steps on their way to the wanted swing: both by one ratio, never beyond the room.
+
+    ``may_enlarge`` is false while the swing still grows from the start or from the last change of the steps.
+    """
     if relay.is_fitting_over or relay.fits >= FITS_AT_MOST or not swing_pct > 0.0:
         return relay
     wanted_ratio = wanted_swing_pct / swing_pct
-    if 1.0 / FITS_WELL_RATIO <= wanted_ratio <= FITS_WELL_RATIO:
+    if 1.0 / FITS_WELL_RATIO <= wanted_ratio <= FITS_WELL_RATIO or (wanted_ratio > 1.0 and not may_enlarge):
         return relay
     largest_ratio = min(LARGER_AT_MOST_RATIO, room.up_pct / relay.step_up_pct, room.down_pct / relay.step_down_pct)
     ratio = min(max(wanted_ratio, SMALLER_AT_LEAST_RATIO), largest_ratio)

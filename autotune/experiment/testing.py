@@ -35,13 +35,13 @@ def advance(
 ) -> Step:
     """The next step of the relay, on a reading that was judged good."""
     t_s = experiment.t_s or 0.0
-    rise = rise_pct(experiment, pv_pct)
+    rise = rise_pct(experiment.plan, rested, pv_pct)
     experiment = replace(experiment, cycles=with_sample(experiment.cycles, t_s, pv_pct, -relay.push_sign * rise))
     if has_come(end_due_s(experiment), t_s):
         return finish(experiment, "the time is over, and there are enough whole cycles")
     is_due = is_switch_due(relay, rise, rested.hysteresis_pct, experiment.plan.relay.blanking_s, t_s)
     if is_due and experiment.unheard is None:
-        return _switch(experiment, as_found, relay, sample, pv_pct)
+        return _switch(experiment, as_found, relay, sample, pv_pct, rise)
     return drive_relay(experiment, as_found, relay, sample)
 
 
@@ -56,10 +56,11 @@ def drive_relay(experiment: Experiment, as_found: AsFound, relay: Relay, sample:
     return push(experiment, sample, op_pct, is_relay=True)
 
 
-def _switch(experiment: Experiment, as_found: AsFound, relay: Relay, sample: Sample, pv_pct: float) -> Step:
+def _switch(
+    experiment: Experiment, as_found: AsFound, relay: Relay, sample: Sample, pv_pct: float, rise: float
+) -> Step:
     t_s, plan = experiment.t_s or 0.0, experiment.plan
-    against_pct = relay.push_sign * rise_pct(experiment, pv_pct)
-    cycles = with_switch(experiment.cycles, t_s, relay.switched_s, against_pct)
+    cycles = with_switch(experiment.cycles, t_s, relay.switched_s, relay.push_sign * rise)
     is_up = not relay.is_high
     if is_up:
         cycles = with_move_up(cycles, plan.convergence, t_s, pv_pct, relay.amplitude_pct)
@@ -80,9 +81,13 @@ def _switch(experiment: Experiment, as_found: AsFound, relay: Relay, sample: Sam
 
 
 def _fit(experiment: Experiment, as_found: AsFound, relay: Relay, cycles: Cycles) -> Relay:
-    """Fit the steps to the wanted swing, from a whole cycle in which they did not change."""
+    """Fit the steps to the wanted swing, from a whole cycle in which they did not change.
+
+    Too large a swing is reduced at once; too small a one may still be growing, so only a usable cycle enlarges.
+    """
     wanted_swing_pct = experiment.plan.relay.wanted_swing_pct
     if wanted_swing_pct is None or not cycles.whole or cycles.since_change < CYCLES_TO_FIT:
         return relay
     room = room_of(experiment.plan.limits, as_found)
-    return fitted(relay, cycles.whole[-1].pv_amplitude_pct, wanted_swing_pct, room)
+    last = cycles.whole[-1]
+    return fitted(relay, last.pv_amplitude_pct, wanted_swing_pct, room, may_enlarge=last.is_usable)

@@ -15,6 +15,8 @@ from autotune.experiment.interlocks import (
     View,
     first_trip,
 )
+from autotune.experiment.plan import TestPlan
+from autotune.experiment.recording import Rested
 from autotune.experiment.state import Experiment, Stage, Unheard
 from autotune.experiment.takeover import sign_of_takeover
 from autotune.loop.limits import AsFound
@@ -33,11 +35,9 @@ RECORDED = (Stage.HOLDING, Stage.FIRST_MOVE, Stage.CYCLING)
 """Stages whose samples belong to the record."""
 
 
-def rise_pct(experiment: Experiment, pv_pct: float) -> float:
-    """How far PV lies above its reference on the side to which a higher output pushes it; 0 before there is one."""
-    if experiment.rested is None:
-        return 0.0
-    return experiment.plan.action.process_sign * (pv_pct - experiment.rested.reference_pct)
+def rise_pct(plan: TestPlan, rested: Rested, pv_pct: float) -> float:
+    """How far PV lies above its reference on the side to which a higher output pushes it."""
+    return plan.action.process_sign * (pv_pct - rested.reference_pct)
 
 
 def take_in(experiment: Experiment, sample: Sample, t_s: float) -> Experiment:
@@ -120,7 +120,7 @@ def _wrong_since_s(experiment: Experiment, sample: Sample, t_s: float) -> float 
     relay, rested = experiment.relay, experiment.rested
     if relay is None or rested is None or sample.pv_pct is None:
         return None
-    against_pct = -relay.push_sign * rise_pct(experiment, sample.pv_pct)
+    against_pct = -relay.push_sign * rise_pct(experiment.plan, rested, sample.pv_pct)
     if against_pct <= WRONG_SIDE_HYSTERESES * rested.hysteresis_pct:
         return None
     return t_s if experiment.wrong_since_s is None else experiment.wrong_since_s

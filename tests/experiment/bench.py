@@ -8,8 +8,10 @@ from __future__ import annotations
 import math
 from collections.abc import Callable, Iterable
 from dataclasses import dataclass, field, replace
+from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 from scipy.linalg import expm
 
 from autotune.experiment.commands import (
@@ -37,6 +39,7 @@ from simulator.guard import Guard, GuardInputs, GuardLimits
 from simulator.guard import GuardState as PlcGuardState
 
 TOKEN = 4711
+Matrix = NDArray[np.float64]
 
 
 class Plant:
@@ -48,6 +51,7 @@ class Plant:
         self.a, self.b, self.c = np.array(a, float), np.array(b, float), np.array(c, float)
         self.delay_s, self.centre_pct = delay_s, op_pct
         self.x = np.zeros(len(self.b))
+        self.holds: dict[float, tuple[Matrix, Matrix]] = {}
         self.t_s = 0.0
         self.inputs: list[tuple[float, float]] = [(-math.inf, op_pct)]
 
@@ -66,12 +70,18 @@ class Plant:
             return
         middle_s = self.t_s + 0.5 * held_s - self.delay_s
         op_pct = next(op for at, op in reversed(self.inputs) if at <= middle_s)
-        size = len(self.b)
-        block = np.zeros((size + 1, size + 1))
-        block[:size, :size], block[:size, size] = self.a, self.b
-        phi = expm(block * held_s)
-        self.x = phi[:size, :size] @ self.x + phi[:size, size] * (op_pct - self.centre_pct)
+        phi, gamma = self._hold(round(held_s, 12))
+        self.x = phi @ self.x + gamma * (op_pct - self.centre_pct)
         self.t_s = until_s
+
+    def _hold(self, held_s: float) -> tuple[Matrix, Matrix]:
+        if held_s not in self.holds:
+            size = len(self.b)
+            block = np.zeros((size + 1, size + 1))
+            block[:size, :size], block[:size, size] = self.a, self.b
+            whole = expm(block * held_s)
+            self.holds[held_s] = (whole[:size, :size], whole[:size, size])
+        return self.holds[held_s]
 
 
 def first_order(gain: float, lag_s: float, delay_s: float, op_pct: float = 50.0) -> Plant:
@@ -284,7 +294,7 @@ LIMITS = Limits(
 )
 
 
-def plan_for(limits: Limits = LIMITS, relay: RelayPlan | None = None, **changes: object) -> TestPlan:
+def plan_for(limits: Limits = LIMITS, relay: RelayPlan | None = None, **changes: Any) -> TestPlan:
     """A plan without guard, in seconds of a bench."""
     plan = TestPlan(
         loop="TIC-204",
@@ -300,12 +310,12 @@ def plan_for(limits: Limits = LIMITS, relay: RelayPlan | None = None, **changes:
         look_around_s=1.0,
         baseline_s=2.0,
     )
-    return replace(plan, **changes)  # type: ignore[arg-type]  # the tests name the plan's own fields
+    return replace(plan, **changes)
 
 
-def bench(plan: TestPlan, plant: Plant | None = None, latency_s: float = 0.0, **plc: object) -> Bench:
+def bench(plan: TestPlan, plant: Plant | None = None, latency_s: float = 0.0, **plc: Any) -> Bench:
     """A bench with the plan's PLC, at rest."""
-    controller = Plc(plant or three_lags(), has_guard=plan.has_guard, **plc)  # type: ignore[arg-type]  # as above
+    controller = Plc(plant or three_lags(), has_guard=plan.has_guard, **plc)
     return Bench(controller, begin(plan), latency_s)
 
 

@@ -1,6 +1,7 @@
 """Single readings and views for tests of the parts."""
 
 from dataclasses import replace
+from typing import Any
 
 from autotune.experiment.held import Held
 from autotune.experiment.interlocks import View
@@ -25,28 +26,28 @@ GOOD = Sample(
 ARMED = GuardView(GuardState.ARMED, holder=TOKEN, heartbeat_echo=7)
 
 
-def reading(**changes: object) -> Sample:
+def reading(**changes: Any) -> Sample:
     """A good reading in manual at 40 % PV and 50 % OP, with changes."""
-    return replace(GOOD, **changes)  # type: ignore[arg-type]  # the tests name the sample's own fields
+    return replace(GOOD, **changes)
 
 
-def found(op_pct: float = 50.0, sp_pct: float | None = 40.0, **changes: object) -> AsFound:
+def found(op_pct: float = 50.0, sp_pct: float | None = 40.0, **changes: Any) -> AsFound:
     """A loop as found, from a good reading with changes."""
     return AsFound(op_pct, sp_pct, reading(**{"op_pct": op_pct, "sp_pct": sp_pct, **changes}))
 
 
-def guard(**changes: object) -> GuardView:
+def guard(**changes: Any) -> GuardView:
     """An armed guard that holds the loop for us, with changes."""
-    return replace(ARMED, **changes)  # type: ignore[arg-type]  # the tests name the guard's own fields
+    return replace(ARMED, **changes)
 
 
-def held(**changes: object) -> Held:
+def held(**changes: Any) -> Held:
     """Our hold of a loop that stands, confirmed, at 50 %, with changes."""
     at_rest = Held(op_pct=50.0, token=TOKEN, sequence=1, heartbeat=8, op_may_read_pct=(50.0, 50.0))
-    return replace(at_rest, **changes)  # type: ignore[arg-type]  # the tests name the fields of Held
+    return replace(at_rest, **changes)
 
 
-def view(**changes: object) -> View:
+def view(**changes: Any) -> View:
     """What the interlocks see of a loop with which all is well, with changes."""
     well = View(t_s=100.0, plan=plan_for(), sample=GOOD, as_found=found(), held=held(), trace=Trace(), moved_s=90.0)
-    return replace(well, **changes)  # type: ignore[arg-type]  # the tests name the view's own fields
+    return replace(well, **changes)

@@ -2,6 +2,7 @@
 
 from dataclasses import replace
 from math import nan
+from typing import Any
 
 import pytest
 
@@ -117,7 +118,7 @@ def test_a_loop_found_in_manual_comes_home_with_a_failed_pv_too() -> None:
         {"sp_pct": 45.0},
     ],
 )
-def test_a_loop_that_somebody_took_is_theirs(taken: dict[str, object]) -> None:
+def test_a_loop_that_somebody_took_is_theirs(taken: dict[str, Any]) -> None:
     assert result(PLAN, AUTO, HIGH_FROM_AUTO, reading(**{"op_pct": 60.0, **taken})) is TAKEN
 
 
@@ -192,7 +193,7 @@ def test_a_loop_that_another_token_holds_is_theirs() -> None:
     ("changes", "expected"),
     [({}, RESTORED), ({"op_pct": 60.0}, NOT_CONFIRMED), ({"mode": LoopMode.AUTO}, NOT_CONFIRMED)],
 )
-def test_after_a_restart_of_the_plc_nothing_is_written(changes: dict[str, object], expected: HandBackResult) -> None:
+def test_after_a_restart_of_the_plc_nothing_is_written(changes: dict[str, Any], expected: HandBackResult) -> None:
     assert result(PLAN, found(boot_count=3), HIGH, reading(boot_count=4, **changes)) is expected
 
 

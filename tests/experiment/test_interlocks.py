@@ -3,6 +3,7 @@
 from collections.abc import Callable
 from dataclasses import replace
 from math import inf, nan, nextafter
+from typing import Any
 
 import pytest
 
@@ -33,9 +34,9 @@ def code(trip: Trip | None) -> str | None:
     return None if trip is None else trip.code
 
 
-def limited(**limits: object) -> View:
+def limited(**limits: Any) -> View:
     """A view with these limits."""
-    return view(plan=plan_for(replace(LIMITS, **limits)))  # type: ignore[arg-type]  # the limits' own fields
+    return view(plan=plan_for(replace(LIMITS, **limits)))
 
 
 def test_a_loop_with_which_all_is_well_trips_nothing() -> None:
@@ -138,7 +139,7 @@ def test_pv_may_not_stand_still_for_longer_than_it_did_at_rest(stood_s: float, t
         ({"op_pct": None, "mode": LoopMode.NOT_KNOWN}, "output and mode"),
     ],
 )
-def test_a_reading_without_what_was_read_before_trips(changes: dict[str, object], missing: str) -> None:
+def test_a_reading_without_what_was_read_before_trips(changes: dict[str, Any], missing: str) -> None:
     trip = il.view_incomplete(view(sample=reading(**changes)))
     assert trip is not None
     assert trip.code == "VIEW_INCOMPLETE"
@@ -246,7 +247,7 @@ def test_every_condition_of_the_watch_list_has_to_hold(readings: tuple[WatchRead
         ({"holder": 99}, None),  # that is a takeover
     ],
 )
-def test_once_claimed_the_guard_has_to_stay_armed_for_us(changes: dict[str, object], tripped: str | None) -> None:
+def test_once_claimed_the_guard_has_to_stay_armed_for_us(changes: dict[str, Any], tripped: str | None) -> None:
     seen = view(sample=reading(guard=guard(**changes)), is_claimed=True)
     assert code(il.guard_gave_back(seen)) == tripped
     assert il.guard_gave_back(replace(seen, is_claimed=False)) is None

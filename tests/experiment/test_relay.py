@@ -75,7 +75,7 @@ def test_smaller_steps_count_from_the_next_switch_on_and_end_the_fitting() -> No
     wished = with_smaller_steps(HIGH)
     assert (wished.step_up_pct, wished.step_down_pct) == (6.0, 4.0)
     smaller = switched(wished, 11.0)
-    assert (smaller.step_up_pct, smaller.step_down_pct) == (pytest.approx(3.6), pytest.approx(2.4))
+    assert [smaller.step_up_pct, smaller.step_down_pct] == pytest.approx([3.6, 2.4])
     assert fitted(smaller, 1.0, 4.0, ROOM) == smaller
 
 
@@ -98,6 +98,11 @@ def test_a_wish_for_smaller_steps_overrules_an_enlargement_that_was_waiting() ->
 )
 def test_steps_are_fitted_to_the_wanted_swing_within_bounds(swing_pct: float, wanted_pct: float, ratio: float) -> None:
     assert fitted(HIGH, swing_pct, wanted_pct, ROOM).next_ratio == pytest.approx(ratio)
+
+
+def test_a_swing_that_still_grows_is_not_enlarged_but_one_too_large_is_reduced() -> None:
+    assert fitted(HIGH, 2.0, 3.0, ROOM, may_enlarge=False) == HIGH
+    assert fitted(HIGH, 8.0, 4.0, ROOM, may_enlarge=False).next_ratio == pytest.approx(0.5)
 
 
 def test_steps_are_never_more_than_doubled_at_once() -> None:
