@@ -2,6 +2,7 @@
 
 import itertools
 import json
+from collections.abc import Callable
 from dataclasses import replace
 from math import floor, pi
 from pathlib import Path
@@ -11,11 +12,10 @@ import numpy as np
 import pytest
 from scipy.signal import cont2discrete
 
-from autotune.experiment.events import SampleArrived
 from autotune.experiment.plan import ConvergencePlan, RelayPlan
 from autotune.experiment.state import Experiment
 from autotune.loop.mode import ControlAction
-from tests.experiment.bench import LIMITS, Plant, bench, first_order, plan_for, three_lags
+from tests.experiment.bench import LIMITS, Matrix, Plant, bench, first_order, plan_for, three_lags
 
 CHECKS = {
     check["id"]: check
@@ -25,7 +25,7 @@ DISCARDED = 4
 """Cycles left out of the means, until the start has died away."""
 
 
-def exact_hold(plant: Plant, held_s: float) -> tuple[np.ndarray, np.ndarray]:
+def exact_hold(plant: Plant, held_s: float) -> tuple[Matrix, Matrix]:
     """State transition and input gain over a hold, by scipy's own discretisation."""
     size = len(plant.b)
     if held_s == 0.0:
@@ -110,11 +110,10 @@ def seen(experiment: Experiment) -> tuple[float, float]:
     ],
 )
 def test_period_and_swing_agree_with_the_exact_hold_recursion(
-    make: "type[Plant]", scan_s: float, latency_scans: float
+    make: Callable[[], Plant], scan_s: float, latency_scans: float
 ) -> None:
     latency_s = latency_scans * scan_s
-    relay = {"up_pct": 10.0, "down_pct": 7.0, "hysteresis_pct": 0.2}
-    period_s, swing_pct = seen(run(make(), scan_s, latency_s=latency_s, **relay))
+    period_s, swing_pct = seen(run(make(), scan_s, latency_s=latency_s, down_pct=7.0, hysteresis_pct=0.2))
     expected_s, expected_pct = sampled_relay(make(), scan_s, latency_s, 10.0, 7.0, 0.2, cycles=12)
     assert period_s == pytest.approx(expected_s, rel=0.005)
     assert swing_pct == pytest.approx(expected_pct, rel=0.005)
@@ -122,9 +121,8 @@ def test_period_and_swing_agree_with_the_exact_hold_recursion(
 
 def test_direct_action_mirrors_the_oscillation() -> None:
     up = run(three_lags(), 0.1, up_pct=10.0, down_pct=7.0, hysteresis_pct=0.2)
-    mirrored = run(
-        three_lags(gain=-1.0), 0.1, up_pct=10.0, down_pct=7.0, hysteresis_pct=0.2, action=ControlAction.DIRECT
-    )
+    plant = three_lags(gain=-1.0)
+    mirrored = run(plant, 0.1, up_pct=10.0, down_pct=7.0, hysteresis_pct=0.2, action=ControlAction.DIRECT)
     assert seen(mirrored) == pytest.approx(seen(up), rel=1e-6)
 
 
@@ -146,8 +144,8 @@ def test_a_fast_scan_comes_near_the_limit_cycle_of_a_continuous_relay() -> None:
     check = CHECKS["RL-05"]
     inputs, expected = check["inputs"], check["expected"]
     plant = first_order(inputs["K"], inputs["T"], inputs["L"])
-    steps = {"up_pct": inputs["d"], "down_pct": inputs["d"], "hysteresis_pct": inputs["eps"]}
-    period_s, swing_pct = seen(run(plant, 0.02, cycles=12, **steps))
+    made = run(plant, 0.02, up_pct=inputs["d"], down_pct=inputs["d"], hysteresis_pct=inputs["eps"])
+    period_s, swing_pct = seen(made)
     assert period_s == pytest.approx(expected["period"], rel=0.01)
     assert swing_pct == pytest.approx(expected["a"], rel=0.01)
 
@@ -171,4 +169,3 @@ def test_every_sample_of_a_test_counts_in_the_time_of_its_cycles() -> None:
     experiment = run(three_lags(), 0.1, hysteresis_pct=0.2)
     starts = [cycle.from_s for cycle in experiment.whole_cycles]
     assert [cycle.from_s + cycle.period_s for cycle in experiment.whole_cycles][:-1] == pytest.approx(starts[1:])
-    assert SampleArrived.__slots__ is not None

@@ -35,9 +35,8 @@ from autotune.loop.mode import LoopMode
 from autotune.loop.quality import Quality
 from autotune.loop.sample import GuardState, GuardView, Sample, Stamp
 from autotune.loop.write import WriteOutcome, WriteReport
-from tests.experiment.bench import LIMITS, TOKEN, bench, plan_for
+from tests.experiment.bench import LIMITS, TOKEN, Bench, bench, plan_for
 
-MANY = settings(max_examples=120, deadline=None, suppress_health_check=[HealthCheck.too_slow])
 LOOP_WRITES = (DriveOutput, SetMode, SetSetpoint)
 
 NUMBERS = st.one_of(st.floats(30.0, 60.0), st.floats(allow_nan=True, allow_infinity=True), st.just(math.nan), st.none())
@@ -131,52 +130,64 @@ PLANS = st.builds(
 )
 
 
-@MANY
-@given(st.data())
-def test_no_order_of_events_breaks_the_limits_or_leads_past_the_hand_back(data: st.DataObject) -> None:
-    plan: TestPlan = data.draw(PLANS)
-    mode = data.draw(st.sampled_from([LoopMode.MAN, LoopMode.AUTO]))
+BEYOND = (0.1, 0.1, 0.1, 0.0, 0.7, -5.0, math.nan, math.inf)
+"""How far on the next event is, in seconds; not all of it is time."""
+
+SIMPLE: tuple[Callable[[float], Event], ...] = (
+    lambda t_s: AbortAsked(t_s, "somebody"),
+    lambda t_s: FinishAsked(t_s, "somebody"),
+    lambda t_s: SmallerStepsAsked(t_s, "somebody"),
+    lambda t_s: ReadFailed(t_s, "no answer"),
+    lambda t_s: TicksMissed(t_s, 3),
+    lambda t_s: TicksMissed(t_s, 30),
+    TimePassed,
+    Started,
+)
+
+
+@st.composite
+def events(draw: st.DrawFn, made: Bench, t_s: float) -> Event:
+    """Any event, readings more often than others."""
+    kind = draw(st.sampled_from(["sample"] * 4 + ["simple", "written", "ended"]))
+    if kind == "simple":
+        return draw(st.sampled_from(SIMPLE))(t_s)
+    if kind == "written":
+        last = made.issued[-1][1] if made.issued else ReleaseLoop()
+        return Written(t_s, last, WriteReport(draw(st.sampled_from(WriteOutcome)), Stamp.at(t_s)))
+    if kind == "ended":
+        return HandBackEnded(t_s, draw(st.sampled_from(HandBackResult)), "")
+    plant_s = made.plc.plant.t_s
+    at_s = t_s if math.isfinite(t_s) and t_s >= plant_s else plant_s
+    return SampleArrived(t_s, draw(odd_samples(made.plc.read(at_s))))
+
+
+@settings(max_examples=60, deadline=None, suppress_health_check=[HealthCheck.too_slow])
+@given(st.data(), PLANS, st.sampled_from([LoopMode.MAN, LoopMode.AUTO]), st.integers(0, 120))
+def test_no_order_of_events_breaks_the_limits_or_leads_past_the_hand_back(
+    data: st.DataObject, plan: TestPlan, mode: LoopMode, quiet: int
+) -> None:
     made = bench(plan, mode=mode, boot_count=3, has_clock=True)
-    made.run(until=lambda e, stop=data.draw(st.integers(0, 200)): e.is_over or len(made.events) > stop)
-    experiment, t_s, last = made.experiment, made.t_s, made.issued[-1][1] if made.issued else ReleaseLoop()
-    for _ in range(data.draw(st.integers(1, 25))):
-        t_s += data.draw(st.sampled_from([0.1, 0.1, 0.1, 0.0, 0.7, -5.0, math.nan, math.inf]))
-        kind = data.draw(st.integers(0, 12))
-        event: Event
-        match kind:
-            case 0:
-                event = AbortAsked(t_s, "somebody")
-            case 1:
-                event = FinishAsked(t_s, "somebody")
-            case 2:
-                event = SmallerStepsAsked(t_s, "somebody")
-            case 3:
-                event = ReadFailed(t_s, "no answer")
-            case 4:
-                event = TicksMissed(t_s, data.draw(st.integers(0, 20)))
-            case 5:
-                event = TimePassed(t_s)
-            case 6:
-                report = WriteReport(data.draw(st.sampled_from(WriteOutcome)), Stamp.at(t_s))
-                event = Written(t_s, last, report)
-            case 7:
-                event = HandBackEnded(t_s, data.draw(st.sampled_from(HandBackResult)), "")
-            case 8:
-                event = Started(t_s)
-            case _:
-                at_s = t_s if math.isfinite(t_s) and t_s >= made.plc.plant.t_s else made.plc.plant.t_s
-                event = SampleArrived(t_s, data.draw(odd_samples(made.plc.read(at_s))))
-        before = experiment
+    made.run(until=lambda e: e.is_over or len(made.events) > quiet)
+    t_s = made.t_s
+    for _ in range(data.draw(st.integers(1, 20))):
+        t_s += data.draw(st.sampled_from(BEYOND))
+        before = made.experiment
         try:
-            experiment, commands = twice(before, event)
+            made.experiment, commands = twice(before, data.draw(events(made, t_s)))
         except IllegalEvent:
             t_s = before.t_s or 0.0
             continue
-        judge_step(before, experiment, commands)
+        judge_step(before, made.experiment, commands)
         for command in commands:
-            last = command
+            made.issued.append((made.experiment.phase, command))
             if not isinstance(command, HandBack):
                 made.plc.write(t_s, command)
+
+
+def until_sample(made: Bench, count: int) -> bool:
+    """Run to this sample; whether the test is still going on there."""
+    made.run(until=lambda e: e.is_over or sum(isinstance(event, SampleArrived) for event in made.events) >= count)
+    return not made.experiment.is_over
 
 
 TAKE: dict[str, Callable[[Sample], Sample]] = {
@@ -186,7 +197,7 @@ TAKE: dict[str, Callable[[Sample], Sample]] = {
 }
 
 
-@settings(max_examples=60, deadline=None)
+@settings(max_examples=30, deadline=None)
 @given(
     st.integers(12, 190),
     st.sampled_from(sorted(TAKE)),
@@ -197,10 +208,7 @@ def test_whenever_somebody_takes_the_loop_we_never_write_to_it_again(
     taken_at: int, how: str, has_guard: bool, mode: LoopMode
 ) -> None:
     made = bench(plan_for(has_guard=has_guard), mode=mode)
-    made.run(
-        until=lambda e: e.is_over or len([1 for event in made.events if isinstance(event, SampleArrived)]) >= taken_at
-    )
-    if made.experiment.is_over:
+    if not until_sample(made, taken_at):
         return
     if how == "output" and made.experiment.held.op_pct is None and mode is LoopMode.AUTO:
         return  # before manual is ours, an output that moves in automatic is the block's own
@@ -214,7 +222,7 @@ def test_whenever_somebody_takes_the_loop_we_never_write_to_it_again(
     assert len(made.plc.writes) - before <= has_guard
 
 
-@settings(max_examples=60, deadline=None)
+@settings(max_examples=30, deadline=None)
 @given(st.integers(0, 6), st.sampled_from(sorted(TAKE)), st.booleans(), st.booleans())
 def test_whoever_takes_the_loop_during_the_hand_back_keeps_it(
     taken_at: int, how: str, has_guard: bool, from_automatic: bool
@@ -240,7 +248,7 @@ def test_whoever_takes_the_loop_during_the_hand_back_keeps_it(
             made.plc.write(made.t_s, command)
 
 
-@settings(max_examples=60, deadline=None)
+@settings(max_examples=30, deadline=None)
 @given(
     st.integers(11, 190),
     st.sampled_from([LoopMode.MAN, LoopMode.AUTO]),
@@ -252,10 +260,7 @@ def test_an_abort_at_any_instant_with_lost_writes_brings_the_loop_home(
     aborted_at: int, mode: LoopMode, has_guard: bool, tracks: bool, lost: int
 ) -> None:
     made = bench(plan_for(has_guard=has_guard, sp_tracks_in_manual=tracks), mode=mode, sp_tracks=tracks)
-    made.run(
-        until=lambda e: e.is_over or len([1 for event in made.events if isinstance(event, SampleArrived)]) >= aborted_at
-    )
-    if made.experiment.is_over:
+    if not until_sample(made, aborted_at):
         return
     write, count = made.plc.write, 0
 
