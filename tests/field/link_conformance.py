@@ -156,10 +156,13 @@ class TroubledLinkConformance(LinkConformance):
         """S8."""
         await bench.link.connect()
         bench.trouble(trouble)
+        now_s = asyncio.get_running_loop().time
+        begun_s = now_s()
         async with asyncio.timeout(PROMPT_S):
             report = await bench.link.write({"sp": 61.0})
         assert report.outcome is WriteOutcome.NOT_HEARD
         assert report.detail
+        assert begun_s <= report.sent.earliest_s <= report.sent.latest_s <= now_s()
         assert bench.held("sp") == 61.0
         assert not is_connected(bench)
 

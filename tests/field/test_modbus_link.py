@@ -13,6 +13,7 @@ from autotune.errors import LinkClosed, LinkRefused, LinkTimeout, WriteForbidden
 from autotune.field import open_link
 from autotune.field.codec import from_words, to_words, width
 from autotune.field.link import RawValue, Reading
+from autotune.field.modbus.back_off import BackOff
 from autotune.field.modbus.link import ModbusLink
 from autotune.field.write_list import Permit, WriteList, build_write_list
 from autotune.loop.quality import Quality
@@ -27,6 +28,9 @@ pytestmark = pytest.mark.socket
 PATIENT_S = 600.0
 """A deadline that no test lives to see: what ends sooner was seen by an event."""
 
+TIMEOUT_S = 0.3
+"""Long enough that a busy machine answers in time, short enough to wait for silence."""
+
 AT_REST: Mapping[str, RawValue] = {"pv": 75.0, "sp": 72.0, "op": 40.0, "mode": 1, "boot_count": 3, "gain": 1.5}
 REACTIONS = {
     Trouble.NONE: PROPER,
@@ -37,7 +41,7 @@ REACTIONS = {
 
 
 def endpoint_of(peer: Peer, **changes: float) -> ModbusEndpoint:
-    return replace(ENDPOINT, port=peer.port, **changes)  # type: ignore[arg-type]  # only floats are ever changed
+    return replace(ENDPOINT, port=peer.port, **{"request_timeout_s": TIMEOUT_S, **changes})  # type: ignore[arg-type]  # only floats are ever changed
 
 
 def place_of(loop: LoopConfig, name: str) -> ModbusTag:
@@ -310,7 +314,7 @@ async def test_nobody_listening_is_a_closed_link_that_names_the_address() -> Non
     with socket.socket() as free:
         free.bind(("127.0.0.1", 0))
         port = free.getsockname()[1]
-        link = open_link(at_endpoint(PLAIN, replace(ENDPOINT, port=port)))
+        link = open_link(at_endpoint(PLAIN, replace(ENDPOINT, port=port, request_timeout_s=PROMPT_S)))
         with pytest.raises(LinkClosed, match=f"127.0.0.1:{port} device id 17.*check the address, the port"):
             await link.connect()
         assert not link.is_connected
@@ -329,13 +333,30 @@ async def test_a_controller_that_lets_nobody_in_is_a_timeout() -> None:
 
 
 async def test_connections_keep_their_gap(peer: Peer) -> None:
+    now_s = asyncio.get_running_loop().time
+    begun_s = now_s()
     async with link_to(peer, {"a": holding(0, DataType.UINT)}, connect_gap_s=0.02) as link:
         await link.connect()
+        assert now_s() >= begun_s + 0.0199
         await link.connect()
+        assert now_s() >= begun_s + 0.0599
         await link.read(["a"])
-    first_s, second_s, third_s = peer.connected_s
-    assert second_s - first_s >= 0.018
-    assert third_s - second_s >= 0.038
+
+
+async def test_only_an_answered_request_shortens_the_gap(peer: Peer) -> None:
+    back_off = BackOff(1.0)
+    link = ModbusLink(endpoint_of(peer), [("a", holding(0, DataType.UINT))], WriteList("TIC-204", ()), back_off)
+    await link.connect()
+    peer.script.append(CLOSES)
+    with pytest.raises(LinkClosed):
+        await link.read(["a"])
+    back_off.attempted(0.0)
+    assert back_off.wait_s(0.0) == 2.0
+    await link.connect()
+    await link.read(["a"])
+    back_off.attempted(0.0)
+    assert back_off.wait_s(0.0) == 1.0
+    await link.close()
 
 
 async def test_a_fresh_connection_drops_the_former_one(peer: Peer) -> None:

@@ -232,6 +232,14 @@ def test_coils_side_by_side_go_together_up_to_the_standards_limit() -> None:
     assert second == WriteCoils(5, (False,), ("c5",))
 
 
+def test_tags_that_overlap_are_written_one_after_the_other() -> None:
+    writes: list[tuple[str, ModbusTag, RawValue]] = [
+        ("whole", holding(0, DataType.UDINT), 0x00010002),
+        ("half", holding(1, DataType.UINT), 3),
+    ]
+    assert plan_writes(ENDPOINT, writes) == (WriteRegisters(0, (1, 2), ("whole",)), WriteRegisters(1, (3,), ("half",)))
+
+
 def test_a_table_that_can_only_be_read_can_not_be_planned_for_writing() -> None:
     with pytest.raises(ValueError, match="input can't be written"):
         plan_writes(ENDPOINT, [("pv", ModbusTag(RegisterTable.INPUT, 0, DataType.UINT), 1)])

@@ -24,9 +24,18 @@ from autotune.loop.write import WriteOutcome, WriteReport
 
 
 class ModbusLink:
-    """One connection to one Modbus/TCP device for the named ``tags``; writes what ``write_list`` permits."""
+    """One connection to one Modbus/TCP device for the named ``tags``; writes what ``write_list`` permits.
 
-    def __init__(self, endpoint: ModbusEndpoint, tags: Sequence[tuple[str, ModbusTag]], write_list: WriteList) -> None:
+    Links to the same device may share one ``back_off``, so that together they keep its gap.
+    """
+
+    def __init__(
+        self,
+        endpoint: ModbusEndpoint,
+        tags: Sequence[tuple[str, ModbusTag]],
+        write_list: WriteList,
+        back_off: BackOff | None = None,
+    ) -> None:
         self._endpoint = endpoint
         self._tags = dict(tags)
         self._write_list = write_list
@@ -34,7 +43,7 @@ class ModbusLink:
         self._connection: Connection | None = None
         self._one_at_a_time = asyncio.Lock()
         self._plans: dict[tuple[str, ...], tuple[ReadRequest, ...]] = {}
-        self._back_off = BackOff(endpoint.connect_gap_s)
+        self._back_off = back_off or BackOff(endpoint.connect_gap_s)
 
     @property
     def is_connected(self) -> bool:
