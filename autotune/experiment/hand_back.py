@@ -55,6 +55,8 @@ def next_hand_back_step(plan: TestPlan, as_found: AsFound, held: Held, sample: S
     Order: output, setpoint where it tracks in manual, mode, token; each is verified by the next reading.  Nothing
     is written after a restart of the PLC, after its guard gave back, or onto a loop that somebody took.
     """
+    if held.taken is not None:
+        return _taken(held.taken, as_found)
     if as_found.boot_count is not None and sample.boot_count != as_found.boot_count:
         return _after_restart(plan, as_found, held, sample)
     if not _is_readable(plan, sample):
@@ -65,8 +67,12 @@ def next_hand_back_step(plan: TestPlan, as_found: AsFound, held: Held, sample: S
         return _verify_only(plan, as_found, held, sample)
     taken = sign_of_takeover(plan, as_found, held, sample)
     if taken is not None:
-        return _release_once(held, sample, HandBackDone(HandBackResult.TAKEN, f"{taken}; {by_hand(as_found)}"))
+        return _release_once(replace(held, taken=taken), sample, _taken(taken, as_found))
     return _give_back(plan, as_found, confirmed(held, sample, plan.limits.op_resolution_pct), sample)
+
+
+def _taken(sign: str, as_found: AsFound) -> HandBackDone:
+    return HandBackDone(HandBackResult.TAKEN, f"{sign}; {by_hand(as_found)}")
 
 
 def _is_readable(plan: TestPlan, sample: Sample) -> bool:
@@ -97,8 +103,7 @@ def _after_restart(plan: TestPlan, as_found: AsFound, held: Held, sample: Sample
 def _verify_only(plan: TestPlan, as_found: AsFound, held: Held, sample: Sample) -> HandBackStep:
     """The guard no longer passes anything of ours on: see what it left, and at most release the token."""
     if sample.guard is not None and sample.guard.holder not in (None, 0, held.token):
-        reason = f"the PLC's guard is held by token {sample.guard.holder}"
-        return HandBackDone(HandBackResult.TAKEN, f"{reason}; {by_hand(as_found)}")
+        return _taken(f"the PLC's guard is held by token {sample.guard.holder}", as_found)
     if _is_as_found(plan, as_found, sample):
         result = HandBackResult.GUARD_GAVE_BACK if held.has_guard_given_back else HandBackResult.RESTORED
         return _release_once(held, sample, HandBackDone(result, by_hand(as_found)))

@@ -30,6 +30,8 @@ class Held:
     has_guard_given_back: bool = False
     has_sp_been_mended: bool = False
     has_release_been_asked: bool = False
+    taken: str | None = None
+    """What showed in a hand-back that somebody took the loop; once it is said, the loop stays theirs."""
 
     @property
     def is_op_confirmed(self) -> bool:

@@ -130,6 +130,15 @@ def test_somebodys_loop_costs_only_our_token() -> None:
     assert result(GUARDED, found(), answer.held, taken) is TAKEN
 
 
+@pytest.mark.parametrize("changes", [{"op_pct": 70.0}, {"sp_pct": 55.0}, {"mode": LoopMode.AUTO}])
+def test_a_loop_that_was_taken_stays_theirs_once_our_token_has_gone(changes: dict[str, Any]) -> None:
+    answer = next_hand_back_step(GUARDED, AUTO, HOME_FROM_AUTO, reading(guard=guard(), **changes))
+    assert isinstance(answer, HandBackWrites)
+    assert answer.commands == (ReleaseLoop(),)
+    let_go = reading(guard=guard(state=GuardState.IDLE, holder=0), **changes)
+    assert result(GUARDED, AUTO, answer.held, let_go) is TAKEN
+
+
 @pytest.mark.parametrize("sample", [reading(op_pct=None), reading(op_pct=nan), reading(mode=LoopMode.NOT_KNOWN)])
 def test_what_cannot_be_read_is_read_again(sample: Sample) -> None:
     answer = next_hand_back_step(PLAN, found(), HIGH, sample)
