@@ -5,6 +5,7 @@ Each entry of ``FAULTS`` is one fault with its usage; the panel's ``fault`` and 
 
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
+from enum import Enum
 
 from simulator.loop import Loop
 from simulator.plc import Plc
@@ -19,12 +20,26 @@ class BadFault(ValueError):
     """A fault that doesn't exist or can't be read; the text says what to write instead."""
 
 
+class Quality(Enum):
+    """What the OPC UA server can be made to say of a tag."""
+
+    GOOD = "good"
+    BAD = "bad"
+    UNCERTAIN = "uncertain"
+    FORCED = "forced"
+    CLAMPED = "clamped"
+
+
 @dataclass(slots=True)
 class WireFaults:
-    """What the server does to requests and answers.  Counts go down with each use; ``ENDLESS`` doesn't.
+    """What the servers do to requests and answers.  Counts go down with each use; ``ENDLESS`` doesn't.
 
     A dropped request is never executed; a dropped or half answer was.  ``request_delay_s`` holds requests
     back before they are executed, ``answer_delay_s`` holds answers back afterwards, both in order.
+
+    Over OPC UA delays and drops strike reads and writes; after a dropped one its connection is silent, as behind
+    a dead cable, until the client leaves it.  Half answers, exceptions and refused addresses are Modbus only.
+    What is named by ``LOOP.TAG``, and all below it, is OPC UA only.
     """
 
     drop_requests: int = 0
@@ -37,7 +52,19 @@ class WireFaults:
     exception_function: int | None = None
     refused_addresses: set[int] = field(default_factory=set)
     close_requests: int = 0
-    """How often all connections were asked to close; the server follows this number."""
+    """How often all connections were asked to close; the servers follow this number."""
+    tag_qualities: dict[str, Quality] = field(default_factory=dict)
+    refused_tags: set[str] = field(default_factory=set)
+    mistyped_tags: set[str] = field(default_factory=set)
+    are_stamps_frozen: bool = False
+    are_stamped_writes_refused: bool = False
+    channel_lifetime_s: float = 0.0
+    """Longest life of a secure channel's keys that is granted; 0 grants what the client asks for."""
+    session_closings: int = 0
+    """How often all sessions were asked to close; the server follows this number."""
+    server_restarts: int = 0
+    """How often the server was asked to restart; it follows this number."""
+    restart_pause_s: float = 1.0
 
     def spend(self, name: str) -> bool:
         """Whether the fault ``name`` strikes now; counts it."""
@@ -48,7 +75,11 @@ class WireFaults:
 
     def clear(self) -> None:
         """Back to a healthy wire."""
-        healthy = WireFaults(close_requests=self.close_requests)
+        healthy = WireFaults(
+            close_requests=self.close_requests,
+            session_closings=self.session_closings,
+            server_restarts=self.server_restarts,
+        )
         for name in self.__slots__:
             setattr(self, name, getattr(healthy, name))
 
@@ -161,6 +192,43 @@ def _drift_output(_wire: WireFaults, plc: Plc, words: Sequence[str]) -> None:
     plc.loops[words[0]].process.set_output_drift(float(words[1]))
 
 
+def _tag(plc: Plc, words: Sequence[str]) -> str:
+    loop, tag = words[0], words[1]
+    if tag not in plc.loops[loop].readings() and tag not in ("plc_clock_ms", "boot_count"):
+        raise ValueError(f"{loop} has no tag {tag}")
+    return f"{loop}.{tag}"
+
+
+def _colour_tag(wire: WireFaults, plc: Plc, words: Sequence[str]) -> None:
+    wire.tag_qualities[_tag(plc, words)] = Quality(words[2])
+
+
+def _refuse_tag(wire: WireFaults, plc: Plc, words: Sequence[str]) -> None:
+    wire.refused_tags.add(_tag(plc, words))
+
+
+def _mistype_tag(wire: WireFaults, plc: Plc, words: Sequence[str]) -> None:
+    wire.mistyped_tags.add(_tag(plc, words))
+
+
+def _freeze_stamps(wire: WireFaults, _plc: Plc, _words: Sequence[str]) -> None:
+    wire.are_stamps_frozen = True
+
+
+def _refuse_stamped_writes(wire: WireFaults, _plc: Plc, _words: Sequence[str]) -> None:
+    wire.are_stamped_writes_refused = True
+
+
+def _close_sessions(wire: WireFaults, _plc: Plc, _words: Sequence[str]) -> None:
+    wire.session_closings += 1
+
+
+def _restart_server(wire: WireFaults, _plc: Plc, words: Sequence[str]) -> None:
+    if words:
+        _delay("restart_pause_s")(wire, _plc, words)
+    wire.server_restarts += 1
+
+
 def _now_s(plc: Plc, loop: Loop) -> float:
     return max(plc.t_s, loop.process.t_s)
 
@@ -181,5 +249,15 @@ FAULTS: dict[str, Fault] = {
     "valve": Fault("LOOP none|stuck", "a valve sticks", _fail_valve),
     "load-step": Fault("LOOP PERCENT", "a step is added to the process input, for good", _step_load),
     "load-sine": Fault("LOOP PERCENT PERIOD_S", "a sine is added to the process input", _swing_load),
+    "quality": Fault("LOOP TAG good|bad|uncertain|forced|clamped", "OPC UA: a tag's status", _colour_tag),
+    "refuse-tag": Fault("LOOP TAG", "OPC UA: writes of this tag are refused (BadNotWritable)", _refuse_tag),
+    "wrong-type": Fault("LOOP TAG", "OPC UA: the tag's value is of another type than declared", _mistype_tag),
+    "freeze-stamps": Fault("", "OPC UA: source timestamps stand still while values go on", _freeze_stamps),
+    "refuse-stamped-writes": Fault("", "OPC UA: writes with a timestamp are refused", _refuse_stamped_writes),
+    "channel-lifetime": Fault(
+        "SECONDS", "OPC UA: new channels' keys live so long at most", _delay("channel_lifetime_s")
+    ),
+    "close-sessions": Fault("", "OPC UA: all sessions are closed, once; connections stay", _close_sessions),
+    "restart-server": Fault("[SECONDS]", "OPC UA: the server goes away for so long, once", _restart_server),
     "drift": Fault("LOOP PERCENT_PER_S", "the process output drifts at this slope", _drift_output),
 }

@@ -5,7 +5,7 @@ was sampled and when an output took effect.  A scan that comes too late is skipp
 """
 
 import asyncio
-from collections.abc import Sequence
+from collections.abc import Awaitable, Callable, Sequence
 
 from simulator.block import Mode
 from simulator.guard import CLOCK_MODULUS
@@ -66,8 +66,8 @@ class Plc:
         for loop in self.loops.values():
             loop.restart()
 
-    async def run(self) -> None:
-        """Scan at absolute deadlines until cancelled."""
+    async def run(self, after_scan: Callable[[float], Awaitable[None]] | None = None) -> None:
+        """Scan at absolute deadlines until cancelled.  ``after_scan`` is told how many seconds ago the scan began."""
         clock = asyncio.get_running_loop().time
         start_s, grid = clock() - self.t_s, round(self.t_s / self.scan_s) + 1
         while True:
@@ -76,6 +76,8 @@ class Plc:
             # Down to the tick that has passed; a tenth of a millisecond forgives a timer that fires early.
             tick_s = int(1000.0 * (clock() - start_s) + 0.1) / 1000.0
             self.scan(max(tick_s, self.t_s + 0.001))
+            if after_scan is not None:
+                await after_scan(clock() - start_s - self.t_s)
             late = int((clock() - deadline_s) / self.scan_s)
             self.skipped_scans += late
             grid += 1 + late
