@@ -106,4 +106,4 @@ def is_released(guard: GuardView | None, token: int) -> bool:
 
 def expected_modes(held: Held, as_found: AsFound) -> tuple[LoopMode, ...]:
     """The modes that our writes explain; as found while none was asked."""
-    return held.modes_may_read or (as_found.mode,)
+    return held.modes_may_read or (as_found.mode if held.mode is None else held.mode,)

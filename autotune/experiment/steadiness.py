@@ -9,8 +9,8 @@ from statistics import median
 SAMPLES_AT_LEAST = 8
 """Fewer samples tell nothing about noise or drift."""
 
-NORMAL_PER_MAD = 1.4826
-"""Standard deviation of a normal law per median absolute deviation: 1 / Phi^-1(3/4)."""
+BELOW_RATIO, ABOVE_RATIO = 0.1587, 0.8413
+"""The share of a normal law that lies below minus and plus one standard deviation."""
 
 STILL_PER_LONGEST = 5.0
 """How many times longer than at rest PV may stand still in a test (common practice, no source)."""
@@ -38,10 +38,10 @@ class Rest:
 def measure_rest(times_s: Sequence[float], pvs_pct: Sequence[float]) -> Rest:
     """Measure PV at rest from samples in order of time; raises ``ValueError`` below ``SAMPLES_AT_LEAST``.
 
-    The slope is the median over all pairs that lie half the record apart, the noise the larger of two robust
-    spreads about that line: the median absolute deviation, and half the range of the middle 68 %.  It is never
-    below the rounding error of the finest step seen, step/sqrt(12).  The slope's standard deviation: the mean
-    over such pairs has 4 sd/(T sqrt n), a median sqrt(pi/2) more.
+    The slope is the median over all pairs that lie half the record apart, the noise half the range of the middle
+    68 % about that line, so that up to 15 % of outliers do not count.  It is never below the rounding error of the
+    finest step seen, step/sqrt(12).  The slope's standard deviation: the mean over such pairs has
+    4 sd/(T sqrt n), a median sqrt(pi/2) more.
     """
     count = len(times_s)
     if count < SAMPLES_AT_LEAST:
@@ -50,11 +50,9 @@ def measure_rest(times_s: Sequence[float], pvs_pct: Sequence[float]) -> Rest:
     pairs = [(i, i + half) for i in range(count - half) if times_s[i + half] > times_s[i]]
     drift = median((pvs_pct[j] - pvs_pct[i]) / (times_s[j] - times_s[i]) for i, j in pairs) if pairs else 0.0
     residues = sorted(pv - drift * (t - times_s[0]) for t, pv in zip(times_s, pvs_pct, strict=True))
-    middle = median(residues)
-    by_deviation = NORMAL_PER_MAD * median(abs(residue - middle) for residue in residues)
-    by_range = 0.5 * (residues[round(0.8413 * (count - 1))] - residues[round(0.1587 * (count - 1))])
+    middle_pct = residues[round(ABOVE_RATIO * (count - 1))] - residues[round(BELOW_RATIO * (count - 1))]
     moves = [abs(after - before) for before, after in itertools.pairwise(pvs_pct) if after != before]
-    noise = max(by_deviation, by_range, min(moves) / sqrt(12.0) if moves else 0.0)
+    noise = max(0.5 * middle_pct, min(moves) / sqrt(12.0) if moves else 0.0)
     centre = median(pvs_pct)
     duration_s = times_s[-1] - times_s[0]
     inliers = [pv for pv in pvs_pct if abs(pv - centre) <= 4.0 * noise + abs(drift) * duration_s] or [centre]

@@ -437,7 +437,7 @@ def test_a_declared_inverse_response_is_no_wrong_sign() -> None:
 def test_many_lags_are_no_wrong_sign_though_the_first_half_is_short(lags: int) -> None:
     a = [[-1.0 if i == j else 1.0 if i == j + 1 else 0.0 for j in range(lags)] for i in range(lags)]
     plant = Plant(a, [1.0] + [0.0] * (lags - 1), [0.0] * (lags - 1) + [1.0], 0.0, 50.0)
-    plan = plan_for(relay=RelayPlan(10.0, 3.0, hysteresis_pct=0.05))
+    plan = plan_for(relay=RelayPlan(10.0, 10.0, hysteresis_pct=0.05))
     assert running(plan, plant).run(at_most_s=300.0).phase is Phase.COMPLETE
 
 
@@ -633,6 +633,21 @@ def test_while_a_write_is_unheard_the_relay_does_not_switch() -> None:
     made.plc.change = lambda sample: sample
     made.run(until=lambda e: e.relay is not None and e.relay.switches == 1)
     assert moves(made) == [50.0, 60.0, 40.0]
+
+
+def test_while_a_write_is_unheard_a_ramp_stands() -> None:
+    made = running(limited(op_rate_pct_per_s=20.0, op_move_s=60.0, op_resolution_pct=0.01))
+    made.scan()
+    command = made.issued[-1][1]
+    made.feed(Written(made.t_s, command, WriteReport(WriteOutcome.NOT_HEARD, Stamp.at(made.t_s))))
+    before = moves(made)
+    made.plc.change = lambda sample: replace(sample, op_pct=before[-1] - 1.0)
+    made.scan()
+    made.scan()
+    assert moves(made) == before
+    made.plc.change = lambda sample: sample
+    made.scan()
+    assert moves(made) == [*before, pytest.approx(before[-1] + 2.0)]
 
 
 def test_without_a_view_an_unheard_write_trips_by_its_own_code() -> None:

@@ -97,6 +97,12 @@ def test_before_we_drive_it_the_output_is_the_operators_in_manual_and_the_blocks
     assert (sign(reading(mode=mode, op_pct=op_pct), untouched, found(mode=mode)) is not None) is is_sign
 
 
+def test_a_hold_whose_modes_are_not_known_explains_only_the_mode_asked_last() -> None:
+    recovered = held(mode=LoopMode.MAN, modes_may_read=())
+    assert sign(reading(mode=LoopMode.MAN), recovered, found(mode=LoopMode.AUTO)) is None
+    assert sign(reading(mode=LoopMode.AUTO), recovered, found(mode=LoopMode.AUTO)) is not None
+
+
 def test_a_hold_whose_range_is_not_known_explains_only_its_last_write() -> None:
     recovered = held(op_may_read_pct=None)
     assert recovered.has_op_in_reach(50.0, 0.05)
