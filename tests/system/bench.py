@@ -5,10 +5,10 @@ from pathlib import Path
 
 from autotune.config.load import load
 from autotune.config.types import LoopConfig
-from autotune.service.estimator import InlineEstimator
-from autotune.service.testing import Permission
-from autotune.service.persons import person_at_the_terminal
 from autotune.service.clock import utc_now
+from autotune.service.estimator import InlineEstimator
+from autotune.service.persons import person_at_the_terminal
+from autotune.service.testing import Permission
 from autotune.service.workplace import Workplace, open_workplace
 from tests.system.plant import LOOP
 

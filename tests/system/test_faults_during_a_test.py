@@ -60,7 +60,7 @@ Moment = Callable[[TestRunner], bool]
 async def comes(moment: Callable[[], bool]) -> None:
     """Wait for something that this process itself brings about."""
     async with asyncio.timeout(PATIENCE_S):
-        while not moment():
+        while not moment():  # noqa: ASYNC110 - a runner is looked at, it tells nobody
             await asyncio.sleep(0.002)
 
 
@@ -80,8 +80,9 @@ def _is_driven(runner: TestRunner, *, is_high: bool) -> bool:
     """Just after the relay has switched and the plant has shown it."""
     experiment = runner.experiment
     relay, held = experiment.relay, experiment.held
-    is_swinging = experiment.stage is Stage.CYCLING and relay is not None and held is not None
-    return is_swinging and relay.is_high is is_high and held.is_op_confirmed
+    if experiment.stage is not Stage.CYCLING or relay is None or held is None:
+        return False
+    return relay.is_high is is_high and held.is_op_confirmed
 
 
 def is_giving_back(runner: TestRunner) -> bool:
