@@ -78,13 +78,14 @@ def to_sample(loop: LoopConfig, report: ReadReport) -> Sample:
 def to_raw(loop: LoopConfig, command: WireCommand) -> dict[str, RawValue]:
     """The tags that carry out one command, in the order of writing where they don't lie side by side.
 
-    The sequence comes last: a guard that saw it before the output would pass on the former output.  A
-    claim writes neither of them, so that the guard moves nothing.  Raises ``WriteForbidden`` where the loop has
+    A drive writes the sequence last: a guard that saw it before the output would pass on the former output.  A
+    claim writes it first and no output: what the guard finds in its mailbox when it arms counts as old, so a number
+    that an earlier test left there would hide our first moves.  Raises ``WriteForbidden`` where the loop has
     no such tag, mode code, or a tag that can't hold the number.
     """
     match command:
-        case ClaimLoop(token, heartbeat):
-            return {"holder_request": token, "heartbeat": heartbeat}
+        case ClaimLoop(token, heartbeat, sequence):
+            return {"sequence": sequence, "holder_request": token, "heartbeat": heartbeat}
         case SetMode(mode):
             return {"mode": _to_mode_code(loop, mode)}
         case DriveOutput(op_pct, token, heartbeat, sequence) if loop.has_guard:

@@ -183,7 +183,7 @@ def test_a_clock_without_unsigned_type_counts_on_modulo_2_32() -> None:
 @pytest.mark.parametrize(
     ("loop", "command", "raws"),
     [
-        (GUARDED, ClaimLoop(4711, 1), {"holder_request": 4711, "heartbeat": 1}),
+        (GUARDED, ClaimLoop(4711, 1, 7), {"sequence": 7, "holder_request": 4711, "heartbeat": 1}),
         (GUARDED, ReleaseLoop(), {"holder_request": 0}),
         (PLAIN, SetMode(LoopMode.MAN), {"mode": 0}),
         (PLAIN, SetMode(LoopMode.AUTO), {"mode": 1}),
