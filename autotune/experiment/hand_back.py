@@ -109,6 +109,8 @@ def _verify_only(plan: TestPlan, as_found: AsFound, held: Held, sample: Sample) 
         return _release_once(held, sample, HandBackDone(result, by_hand(as_found)))
     if has_failed_pv(sample) and _is_at_home(plan, as_found, sample):
         return _release_once(held, sample, hand_back_overdue(as_found, _pv_failed(as_found)))
+    if held.has_release_been_asked:  # which comes only after the loop was seen as found
+        return _taken("the loop changed after it was seen as found and our token had gone", as_found)
     return HandBackWrites((), held)
 
 
@@ -168,4 +170,6 @@ def _mend_setpoint(as_found: AsFound, held: Held) -> HandBackStep:
 
 def _release(held: Held, sample: Sample, done: HandBackDone) -> HandBackStep:
     """The token goes last, and is seen to go."""
-    return done if is_released(sample.guard, held.token) else HandBackWrites((ReleaseLoop(),), held)
+    if is_released(sample.guard, held.token):
+        return done
+    return HandBackWrites((ReleaseLoop(),), replace(held, has_release_been_asked=True))

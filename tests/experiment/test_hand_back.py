@@ -139,6 +139,14 @@ def test_a_loop_that_was_taken_stays_theirs_once_our_token_has_gone(changes: dic
     assert result(GUARDED, AUTO, answer.held, let_go) is TAKEN
 
 
+def test_whoever_changes_the_loop_while_our_token_goes_has_it() -> None:
+    answer = next_hand_back_step(GUARDED, found(), held(), reading(guard=guard()))
+    assert isinstance(answer, HandBackWrites)
+    assert answer.commands == (ReleaseLoop(),)
+    theirs = reading(op_pct=70.0, guard=guard(state=GuardState.IDLE, holder=0))
+    assert result(GUARDED, found(), answer.held, theirs) is TAKEN
+
+
 @pytest.mark.parametrize("sample", [reading(op_pct=None), reading(op_pct=nan), reading(mode=LoopMode.NOT_KNOWN)])
 def test_what_cannot_be_read_is_read_again(sample: Sample) -> None:
     answer = next_hand_back_step(PLAN, found(), HIGH, sample)

@@ -238,14 +238,15 @@ def test_whoever_takes_the_loop_during_the_hand_back_keeps_it(
         answer = next_hand_back_step(plan, as_found, held, made.plc.read(made.t_s))
         assert repr(answer) == repr(next_hand_back_step(plan, as_found, held, made.plc.read(made.t_s)))
         if isinstance(answer, HandBackDone):
-            assert turn >= taken_at or answer.result is HandBackResult.RESTORED
-            break
+            assert answer.result is (HandBackResult.RESTORED if turn < taken_at else HandBackResult.TAKEN)
+            return
         assert isinstance(answer, HandBackWrites)
         if turn >= taken_at:
             assert not any(isinstance(command, LOOP_WRITES) for command in answer.commands)
         held = answer.held
         for command in answer.commands:
             made.plc.write(made.t_s, command)
+    pytest.fail("the hand-back came to no end")
 
 
 @settings(max_examples=30, deadline=None)
