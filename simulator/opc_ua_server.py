@@ -81,6 +81,11 @@ class OpcUaServer:
         file = self.access.certificate_file
         return {"opc_ua_certificate": str(file), "opc_ua_thumbprint": thumbprint(file)}
 
+    async def wait_for_restart(self) -> None:
+        """Return when no restart is under way any more."""
+        if self._restarting is not None:
+            await self._restarting
+
     async def start(self) -> None:
         """Make what is missing of the PKI, build the address space and listen.  Raises ``OSError``."""
         await self.access.make_own()
@@ -224,8 +229,7 @@ class OpcUaServer:
 
     async def _restart(self) -> None:
         await self._server.close_sessions()
-        if self._server.bserver is not None:
-            await self._server.bserver.stop()
+        await self._server.close_listener()
         await asyncio.sleep(self._wire.restart_pause_s)
         await self._server.listen()
 
@@ -259,9 +263,14 @@ class _TagService(AttributeService):
         if any(outcomes):
             await self._plant.show()
         return [
-            (await super(_TagService, self).write(ua.WriteParameters([write]), user))[0] if outcome is None else outcome
+            outcome if outcome is not None else await self._write_other(write, user)
             for write, outcome in zip(params.NodesToWrite, outcomes, strict=True)
         ]
+
+    async def _write_other(self, write: ua.WriteValue, user: User) -> ua.StatusCode:
+        if write.NodeId not in self._aspace:
+            return to_status(StatusCodes.BadNodeIdUnknown)
+        return (await super().write(ua.WriteParameters([write]), user))[0]
 
 
 def _write(tag: Tag, sent: ua.DataValue) -> int:

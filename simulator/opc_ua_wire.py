@@ -63,6 +63,11 @@ class GuardedServer(Server):
         self.socket_address = (host, listener.port)
         self.bserver = listener
 
+    async def close_listener(self) -> None:
+        """Close the listener and all connections, until ``listen``."""
+        if self.bserver is not None:
+            await self.bserver.stop()
+
     async def close_sessions(self) -> None:
         """Close all sessions of clients; their connections stay."""
         for session in tuple(self.iserver._external_sessions.values()):  # noqa: SLF001 - nothing public lists them
