@@ -9,11 +9,11 @@ from typing import Any
 from autotune.config.types import Controller, LoopConfig
 from autotune.loop.settings import BlockDescription
 
-_DIGESTS = ("digest", "block_digest")
+_NOT_COVERED = ("digest", "block_digest", "folder", "pki_dir")
 
 
 def canonical_text(content: object) -> str:
-    """The canonical JSON of frozen types, as a digest covers it; digests kept inside them don't count."""
+    """The canonical JSON of frozen types, as a digest covers it; neither digests nor places on the disk count."""
     return json.dumps(_canonical(content), sort_keys=True, separators=(",", ":"), ensure_ascii=False, allow_nan=False)
 
 
@@ -42,7 +42,9 @@ def configuration_digest(
 
 def _canonical(content: object) -> Any:
     if is_dataclass(content) and not isinstance(content, type):
-        told = {one.name: _canonical(getattr(content, one.name)) for one in fields(content) if one.name not in _DIGESTS}
+        told = {
+            one.name: _canonical(getattr(content, one.name)) for one in fields(content) if one.name not in _NOT_COVERED
+        }
         return {"kind": type(content).__name__, **told}
     if isinstance(content, Enum):
         return content.value

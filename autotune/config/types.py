@@ -93,12 +93,18 @@ class ModbusTag:
 
 @dataclass(frozen=True, slots=True)
 class OpcUaTag:
-    """Where one value lies in an OPC UA server."""
+    """Where one value lies in an OPC UA server: at ``node_id``, or at the end of a browse path.
+
+    ``node_id`` is the standard text, ``path`` begins below the folder Objects and its names lie in
+    ``namespace`` (a URI) where they don't say theirs; one of the two is empty.
+    """
 
     node_id: str
     type: DataType | None = None
     scale: float = 1.0
     offset: float = 0.0
+    path: str = ""
+    namespace: str = ""
 
 
 Tag = ModbusTag | OpcUaTag
@@ -128,12 +134,49 @@ class ModbusEndpoint:
     never_written: tuple[AddressRange, ...] = ()
 
 
+class MessageSecurity(Enum):
+    """What protects the messages of an OPC UA session."""
+
+    SIGN_AND_ENCRYPT = "sign and encrypt"
+    SIGN = "sign"
+    NONE = "none"
+
+
+class SecurityPolicy(Enum):
+    """The algorithms of an OPC UA session; the outdated ones are not offered."""
+
+    BASIC256SHA256 = "Basic256Sha256"
+    AES128_SHA256_RSA_OAEP = "Aes128Sha256RsaOaep"
+    AES256_SHA256_RSA_PSS = "Aes256Sha256RsaPss"
+
+
 @dataclass(frozen=True, slots=True)
 class OpcUaEndpoint:
-    """How to reach an OPC UA server; times in seconds."""
+    """How to reach an OPC UA server, and how far it is trusted; times in seconds.
+
+    ``server_thumbprint`` is the SHA-256 of the server's certificate, 64 hex digits; ``server_name`` the host
+    name in it, where the server is reached by another.  ``password_from`` is ``env:NAME`` or ``file:NAME``;
+    without ``user`` and ``user_certificate`` the session is anonymous.  ``never_written`` are node ids.
+    File names are relative to ``folder``; ``pki_dir`` holds our own certificate.  These two places count in
+    no digest.
+    """
 
     url: str
     request_timeout_s: float = 0.5
+    connect_gap_s: float = 0.5
+    channel_lifetime_s: float = 3600.0
+    security: MessageSecurity = MessageSecurity.SIGN_AND_ENCRYPT
+    policy: SecurityPolicy = SecurityPolicy.BASIC256SHA256
+    server_thumbprint: str = ""
+    server_name: str = ""
+    user: str = ""
+    password_from: str = ""
+    user_certificate: str = ""
+    user_key: str = ""
+    source_time_is_sampling: bool = False
+    never_written: tuple[str, ...] = ()
+    folder: Path = Path()
+    pki_dir: Path = Path("pki")
 
 
 Endpoint = ModbusEndpoint | OpcUaEndpoint
@@ -209,6 +252,7 @@ class LoopConfig:
     field_limits: tuple[tuple[str, FieldLimit], ...]
     write_in_manual: bool
     is_writing_settings_allowed: bool
+    proves_writable: bool = False
     digest: str = ""
     block_digest: str = ""
 

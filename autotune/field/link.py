@@ -25,6 +25,8 @@ class Reading:
     quality: Quality
     source_s: float | None = None
     """The source's own sampling instant on our clock, only where shown to be one (seconds)."""
+    reason: str = ""
+    """Why the quality isn't good, where the wire says so."""
 
 
 @dataclass(frozen=True, slots=True)

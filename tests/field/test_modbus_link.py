@@ -8,7 +8,7 @@ from dataclasses import replace
 
 import pytest
 
-from autotune.config.types import DataType, LoopConfig, ModbusEndpoint, ModbusTag, OpcUaEndpoint, RegisterTable
+from autotune.config.types import DataType, LoopConfig, ModbusEndpoint, ModbusTag, RegisterTable
 from autotune.errors import LinkClosed, LinkRefused, LinkTimeout, WriteForbidden
 from autotune.field import open_link
 from autotune.field.codec import from_words, to_words, width
@@ -416,12 +416,6 @@ async def test_all_tables_and_types_of_one_loop_are_read_together(peer: Peer) ->
     }
     assert readings["nan"].quality is Quality.BAD
     assert len(peer.frames) == 4
-
-
-async def test_a_protocol_without_link_is_said_so() -> None:
-    controller = replace(PLAIN.controller, endpoint=OpcUaEndpoint("opc.tcp://127.0.0.1:4840"))
-    with pytest.raises(NotImplementedError, match="no link speaks"):
-        open_link(replace(PLAIN, controller=controller))
 
 
 async def test_the_link_of_a_loop_writes_by_the_loops_own_list(peer: Peer) -> None:

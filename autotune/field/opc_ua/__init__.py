@@ -1,0 +1,1 @@
+"""OPC UA; the only room that imports asyncua."""
