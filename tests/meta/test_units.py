@@ -22,6 +22,11 @@ EXCEPTIONS = {
     "autotune/identify/shapes.py response(x)": "a frequency over another, as the docstring says",
     "autotune/identify/model.py ProcessModel.*ator": "coefficients of powers of s, as the docstring says",
     "autotune/identify/model.py ModelWithDraws.weights": "each a weight; the name is the plural",
+    "autotune/identify/closed_forms.py ultimate_of* -> float": "ultimate gain and period, as the docstrings say",
+    "autotune/identify/closed_forms.py first_crossing -> float": "rad/s, as the docstring says",
+    "autotune/identify/closed_forms.py Rational.*": "its unit is in the docstring; w is written as in the formulas",
+    "autotune/identify/describing_function.py * -> float": "a describing function is a gain, as the docstrings say",
+    "autotune/identify/refusals.py samples_per_cycle -> float": "a count; its name says of what to what",
     "autotune/experiment/plan.py RelayPlan.hysteresis_per_noise": "a ratio; its name says of what to what",
 }
 
