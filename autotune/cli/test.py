@@ -14,8 +14,9 @@ from autotune.cli.printing import Voice
 from autotune.config.types import LoopConfig
 from autotune.experiment.phases import Phase
 from autotune.experiment.room import allowed_op_pct
+from autotune.field.translate import settings_tags
 from autotune.loop.limits import AsFound
-from autotune.service.cautions import BEFORE_THE_OUTPUT_MOVES
+from autotune.service.cautions import BEFORE_THE_OUTPUT_MOVES, WHERE_SETTINGS_ARE_PROVED
 from autotune.service.check import LoopCheck
 from autotune.service.persons import person_at_the_terminal
 from autotune.service.readiness import Level
@@ -58,7 +59,8 @@ async def permitted_test(
     for line in extremes(loop, looked):
         voice.say(line)
     consents = tuple(str(finding) for finding in looked.findings if finding.level is Level.CAUTION)
-    cautions = (*BEFORE_THE_OUTPUT_MOVES, *consents)
+    proof = (WHERE_SETTINGS_ARE_PROVED,) if loop.proves_writable else ()
+    cautions = (*BEFORE_THE_OUTPUT_MOVES, *proof, *consents)
     words = operator.allows(cautions, loop.name)
     if words is None:
         return None
@@ -111,10 +113,12 @@ def extremes(loop: LoopConfig, looked: LoopCheck) -> tuple[str, ...]:
 
 def writes_of_a_test(loop: LoopConfig) -> tuple[str, ...]:
     """Every tag that a test of this loop writes, and when."""
+    settings = f"{', '.join(settings_tags(loop))}: before all else, each with the number that it holds"
+    proof = (settings,) if loop.proves_writable else ()
     guard = ("holder_request, heartbeat, sequence, op_request: every scan, in one write",) if loop.has_guard else ()
     direct = () if loop.has_guard else ("op: at every switch, and back to the value as found",)
     tracked = ("sp: back to the value as found, after the test",) if loop.block.sp_tracks_in_manual else ()
-    tags = (*guard, *direct, "mode: to MAN before, back to the mode as found after", *tracked)
+    tags = (*proof, *guard, *direct, "mode: to MAN before, back to the mode as found after", *tracked)
     return ("Tags that the test writes:", *(f"  {tag}" for tag in tags))
 
 

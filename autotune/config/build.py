@@ -1,16 +1,29 @@
 """From tables that were found right to the frozen types of the pure rooms, in percent of span."""
 
+from collections.abc import Sequence
 from dataclasses import replace
+from pathlib import Path
 from typing import Any
+from urllib.parse import urlsplit
 
 from autotune.config.digest import block_digest, loop_digest
+from autotune.config.node_places import NodePlace
 from autotune.config.numbers import Table
 from autotune.config.places import SETTINGS, Place
 from autotune.config.schema import ControllerTable, LoopTable
+from autotune.config.schema_opc_ua import OpcUaControllerTable
 from autotune.config.schema_settings import BlockTable, SettingLimitTable
 from autotune.config.schema_site import SiteLimitsTable
 from autotune.config.test_plan import timed_limits
-from autotune.config.types import AddressRange, Controller, GuardCodes, LoopConfig, ModbusEndpoint, ModeCodes
+from autotune.config.types import (
+    AddressRange,
+    Controller,
+    GuardCodes,
+    LoopConfig,
+    ModbusEndpoint,
+    ModeCodes,
+    OpcUaEndpoint,
+)
 from autotune.confirmed_write.plan import FieldLimit
 from autotune.experiment.plan import ConvergencePlan, RelayPlan
 from autotune.loop.limits import Limits, WatchLimit
@@ -18,6 +31,20 @@ from autotune.loop.mode import LoopMode
 from autotune.loop.settings import BlockDescription, FieldRange
 from autotune.loop.span import Span
 
+_OPC_UA_KEYS = {
+    "request_timeout_s",
+    "connect_gap_s",
+    "channel_lifetime_s",
+    "security",
+    "server_thumbprint",
+    "server_name",
+    "user",
+    "password_from",
+    "user_certificate",
+    "user_key",
+    "source_time_is_sampling",
+}
+_OPC_UA_PORT = 4840  # OPC 10000-6, 7.2
 _ENDPOINT_KEYS = {
     "request_timeout_s",
     "connect_gap_s",
@@ -40,6 +67,24 @@ def controller_from(name: str, table: ControllerTable, never_written: tuple[Addr
         device_id=table.device_id,
         never_written=never_written,
         **_told(table, _ENDPOINT_KEYS),
+    )
+    return Controller(name, endpoint, table.plc_scan_s, table.io_time_s)
+
+
+def opc_ua_controller_from(
+    name: str, table: OpcUaControllerTable, never_written: tuple[str, ...], folder: Path, data_dir: Path
+) -> Controller:
+    """The same for an OPC UA server; ``folder`` is what file names in the table are relative to."""
+    parts = urlsplit(table.url)
+    host = f"[{parts.hostname}]" if ":" in (parts.hostname or "") else parts.hostname
+    policy = {} if table.security_policy is None else {"policy": table.security_policy}
+    endpoint = OpcUaEndpoint(
+        url=f"opc.tcp://{host}:{parts.port or _OPC_UA_PORT}{parts.path}",
+        never_written=never_written,
+        folder=folder,
+        pki_dir=data_dir / "pki",
+        **policy,
+        **_told(table, _OPC_UA_KEYS),
     )
     return Controller(name, endpoint, table.plc_scan_s, table.io_time_s)
 
@@ -75,7 +120,7 @@ def loop_from(
     table: LoopTable,
     controller: Controller,
     block: BlockDescription,
-    placed: list[Place],
+    placed: Sequence[Place | NodePlace],
     site: SiteLimitsTable | None,
 ) -> LoopConfig:
     """One loop with its limits in percent of span, its ceilings the tightest of loop and site, and its digests."""
@@ -118,6 +163,7 @@ def loop_from(
         field_limits=_field_limits(table, site),
         write_in_manual=table.write_settings != "in automatic",
         is_writing_settings_allowed=table.write_settings != "never",
+        proves_writable=table.prove_writable,
     )
     return _with_digests(loop)
 

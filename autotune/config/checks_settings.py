@@ -73,6 +73,9 @@ def _settings_tags(loop: LoopTable, block: BlockTable | None) -> Iterator[Flaw]:
     tags = loop.tags
     has_any = any(getattr(tags, name) is not None for name in SETTINGS)
     wanted = ("gain", "integral") if has_any or loop.write_settings != "never" else ()
+    if loop.prove_writable and loop.write_settings == "never":
+        fault = 'nothing is written while write_settings = "never"'
+        yield Flaw(("prove_writable",), fault, "allow confirmed settings to be written, or take the key out")
     for name in wanted:
         if getattr(tags, name) is None:
             yield Flaw(("tags", name), "missing among the settings", f"add the tag {name}, or leave all settings out")

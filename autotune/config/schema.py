@@ -27,9 +27,11 @@ from autotune.loop.mode import ControlAction
 
 
 class ControllerTable(Table):
-    """``[controller.NAME]``: one PLC and how to reach it."""
+    """``[controller.NAME]``: one PLC and how to reach it over Modbus/TCP."""
 
-    protocol: Literal["modbus"] = Field(description='the protocol: "modbus" (Modbus/TCP)')
+    protocol: Literal["modbus", "opc-ua"] = Field(  # with the latter another table is read
+        description='the protocol: "modbus" (Modbus/TCP) or "opc-ua"'
+    )
     host: str = Field(min_length=1, max_length=253, pattern=r"^\S+$", description="host name or IP address")
     port: int = Field(default=502, ge=1, le=65535, description="TCP port, usually 502")
     device_id: int = Field(ge=1, le=255, description="unit identifier, 1 to 255 (0 would address every device)")
@@ -199,6 +201,10 @@ class LoopTable(Table):
     )
     write_settings: Literal["never", "in manual", "in automatic"] = Field(
         default="never", description="whether confirmed settings may be written, and in which mode"
+    )
+    prove_writable: bool = Field(
+        default=False,
+        description="true: before a test each setting is written back with the number it holds, to show that it can be",
     )
     hand_back_within_s: Seconds = Field(default=30.0, description="longest hand-back with all its retries, s")
     recover_within_s: Seconds = Field(

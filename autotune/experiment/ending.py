@@ -30,6 +30,11 @@ def stop_untouched(experiment: Experiment, by: str) -> Step:
     return _left(experiment, Trigger.STOPPED, EndKind.ENDED_EARLY, str(trip)), ()
 
 
+def refuse_start(experiment: Experiment, refusal: Refusal) -> Experiment:
+    """A test that was refused before it began, by what its shell had to show first."""
+    return _left(replace(experiment, refusals=(refusal,)), Trigger.STOPPED, EndKind.REFUSED, str(refusal))
+
+
 def trip(experiment: Experiment, fired: Trip) -> Step:
     """An interlock has fired: give the loop back now."""
     return _restored(replace(experiment, trip=fired), Trigger.TRIPPED, EndKind.TRIPPED, str(fired))

@@ -17,3 +17,8 @@ BEFORE_SETTINGS_ARE_WRITTEN = (
     "Watch the loop after the change; the values as found are on the sheet and can be restored.",
     "Site rules, management of change and licensed engineering practice come before anything this tool says.",
 )
+
+WHERE_SETTINGS_ARE_PROVED = (
+    "Before the output moves, each setting of the controller is written back with the number that it holds, to show "
+    "that it can be written. Nobody changes settings at the panel meanwhile: a change in that moment would be undone."
+)

@@ -48,36 +48,46 @@ async def missing_tags(loop: LoopConfig, link: LoopLink) -> tuple[ReadinessFindi
 
 
 async def implausible_signals(loop: LoopConfig, link: LoopLink, open_link: OpenLink) -> tuple[ReadinessFinding, ...]:
-    """Explain each of PV, SP and OP whose reading can't be right.  Raises ``LinkError`` when the wire fails."""
-    findings = []
+    """Explain each of PV, SP and OP whose reading can't be right.  Raises ``LinkError`` when the wire fails.
+
+    One slip in the file mostly falsifies several signals, so a variant that makes all of them plausible goes before
+    one that suits a single signal by chance.  A signal that is no number and that no variant makes one is left to
+    the judgement of readings: most likely the measurement has failed.
+    """
+    misread = []
     for name, span in (("pv", loop.pv_span), ("sp", loop.pv_span), ("op", loop.op_span)):
         tag = loop.tag(name)
         if not isinstance(tag, ModbusTag):
             continue
-        report = await link.read((name,))
-        if _is_plausible(tag, report.readings[name], span):
+        reading = (await link.read((name,))).readings[name]
+        if _is_plausible(tag, reading, span):
             continue
         fits = [variant for variant in _variants(tag) if await _fits(loop, name, variant, span, open_link)]
-        seen = _in_words(tag, report.readings[name], span)
-        if len(fits) == 1:
-            findings.append(
-                ReadinessFinding(
-                    Level.STOP,
-                    "TAG_MISREAD",
-                    f"{name.upper()} reads {seen}, which can't be; read with {fits[0].change} it is plausible",
-                    fits[0].remedy.format(name=name),
-                )
-            )
-        else:
-            findings.append(
-                ReadinessFinding(
-                    Level.STOP,
-                    "OUTSIDE_SPAN",
-                    f"{name.upper()} reads {seen}, outside its span {span.low_eu:g} .. {span.high_eu:g} {span.unit}",
-                    f"compare [loop.span], and type, scale, address and word order of [loop.tags] {name}, with the PLC",
-                )
-            )
-    return tuple(findings)
+        if fits or reading.raw is not None:
+            misread.append((name, span, _in_words(tag, reading, span), fits))
+    explained = [{variant.change for variant in fits} for _, _, _, fits in misread if fits]
+    common = set.intersection(*explained) if explained else set()
+    return tuple(
+        _misread_finding(name, span, seen, [one for one in fits if one.change in common] or fits)
+        for name, span, seen, fits in misread
+    )
+
+
+def _misread_finding(name: str, span: Span, seen: str, fits: list[_Variant]) -> ReadinessFinding:
+    if len(fits) == 1:
+        return ReadinessFinding(
+            Level.STOP,
+            "TAG_MISREAD",
+            f"{name.upper()} reads {seen}, which can't be; read with {fits[0].change} it is plausible",
+            fits[0].remedy.format(name=name),
+        )
+    return ReadinessFinding(
+        Level.STOP,
+        "OUTSIDE_SPAN",
+        f"{name.upper()} reads {seen}, outside its span {span.low_eu:g} .. {span.high_eu:g} {span.unit}",
+        f"compare [loop.span], and type, scale, address and word order of [loop.tags] {name}, with the PLC; if they "
+        "agree, the measurement itself has failed",
+    )
 
 
 def _variants(tag: ModbusTag) -> tuple[_Variant, ...]:

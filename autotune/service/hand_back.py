@@ -3,7 +3,7 @@
 import asyncio
 from collections.abc import Awaitable, Callable
 
-from autotune.errors import AutotuneError, LinkError
+from autotune.errors import LinkError
 from autotune.experiment.commands import HandBack
 from autotune.experiment.events import HandBackEnded
 from autotune.experiment.hand_back import HandBackDone, HandBackWrites, hand_back_overdue, next_hand_back_step
@@ -18,6 +18,8 @@ from autotune.service.reading import LoopReader
 
 class HandBackRun:
     """Gives one loop back.  It raises nothing: whatever fails becomes the reason of a hand-back not confirmed.
+
+    It is deaf: a cancellation costs it the request that it was just making, and nothing else.
 
     ``write`` performs one command on the wire, behind its gate and its journal.  ``samples`` are the readings
     it made, ``held`` what our last writes were.
@@ -44,10 +46,13 @@ class HandBackRun:
         loop = asyncio.get_running_loop()
         overdue_s = loop.time() + self._plan.hand_back_within_s
         while loop.time() < overdue_s:
-            done = await self._advance()
-            if done is not None:
-                return HandBackEnded(loop.time(), done.result, done.detail)
-            await asyncio.sleep(self._plan.scan_s)
+            try:
+                done = await self._advance()
+                if done is not None:
+                    return HandBackEnded(loop.time(), done.result, done.detail)
+                await asyncio.sleep(self._plan.scan_s)
+            except asyncio.CancelledError:
+                self._doubt = "the hand-back was interrupted"
         done = hand_back_overdue(self._as_found, self._doubt)
         return HandBackEnded(loop.time(), done.result, done.detail)
 
@@ -61,7 +66,7 @@ class HandBackRun:
             await self._perform(decided)
         except LinkError as fault:
             self._doubt = str(fault)
-        except AutotuneError as fault:  # our own fault must not end a hand-back before its time
+        except Exception as fault:  # noqa: BLE001 - no fault of our own may end a hand-back before its time
             self._doubt = f"{type(fault).__name__}: {fault}"
         return None
 

@@ -46,6 +46,7 @@ def judge_samples(loop: LoopConfig, samples: Sequence[Sample]) -> tuple[Readines
         *_judge_guard(loop, samples),
         *_judge_clock(loop, samples),
         *_judge_watch(loop, samples[-1]),
+        *_judge_settings(loop),
     )
 
 
@@ -232,4 +233,17 @@ def _judge_watch(loop: LoopConfig, sample: Sample) -> tuple[ReadinessFinding, ..
             and reading.quality is Quality.GOOD
             and limit.low_eu <= reading.reading_eu <= limit.high_eu
         )
+    )
+
+
+def _judge_settings(loop: LoopConfig) -> tuple[ReadinessFinding, ...]:
+    if not loop.is_writing_settings_allowed or loop.proves_writable:
+        return ()
+    return (
+        ReadinessFinding(
+            Level.NOTE,
+            "SETTINGS_NOT_PROVED",
+            "it is not shown that the settings can be written: a locked register shows only when a proposal is written",
+            "write prove_writable = true for this loop: then a test first writes each setting back as it is",
+        ),
     )

@@ -56,7 +56,8 @@ async def _settle(workplace: Workplace, loop: LoopConfig, intent: OpenIntent, pl
     as_found = intent.as_found
     if as_found is None:
         say(
-            f"{intent.journal_id} broke off and its journal does not tell what was found: compare the loop with the panel"
+            f"{intent.journal_id} broke off and its journal does not tell what was found: "
+            "compare the loop with the panel"
         )
         return False
     say(f"The test {intent.journal_id} broke off. Reading {loop.name} before anything else.")

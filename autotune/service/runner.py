@@ -11,6 +11,7 @@ from types import MappingProxyType
 from autotune.config.types import LoopConfig
 from autotune.errors import JournalError, LinkError, WriteForbidden
 from autotune.experiment.commands import Command, DriveOutput, HandBack
+from autotune.experiment.ending import refuse_start
 from autotune.experiment.events import (
     AbortAsked,
     Event,
@@ -36,6 +37,7 @@ from autotune.loop.write import WriteReport
 from autotune.service.deaf import to_the_end
 from autotune.service.hand_back import HandBackRun
 from autotune.service.journal import Journal, LineKind
+from autotune.service.probing import prove_writable
 from autotune.service.reading import LoopReader
 from autotune.service.scan_grid import ScanGrid
 from autotune.service.test_log import TestLog
@@ -66,6 +68,7 @@ class TestRunner:
         self._reader = LoopReader(loop, link)
         self._wishes: asyncio.Queue[_Wish] = asyncio.Queue()
         self._last_driven_pct: float | None = None
+        self._handing_back: HandBackRun | None = None
 
     def abort(self, by: str) -> None:
         """Ask for the end of the test, now; always allowed, any number of times."""
@@ -91,7 +94,7 @@ class TestRunner:
     async def _run(self) -> Experiment:
         self._journal.record("plan", self._plan, t_s=_now_s(), durable=True)
         try:
-            await self._feed(Started(_now_s()))
+            await self._begin()
             grid = ScanGrid(_now_s(), self._plan.scan_s)
             while not self.experiment.phase.is_terminal:
                 await self._advance(grid)
@@ -100,6 +103,16 @@ class TestRunner:
             raise
         self._record_end()
         return self.experiment
+
+    async def _begin(self) -> None:
+        """Start, unless a setting of the loop can't be written where its file wants that shown first."""
+        if self._loop.proves_writable:
+            refusal = await prove_writable(self._loop, self._link, self._journal, self.log)
+            if refusal is not None:
+                self.experiment = refuse_start(self.experiment, refusal)
+                self.log.add_story(_now_s(), "note", str(refusal), code=refusal.code)
+                return
+        await self._feed(Started(_now_s()))
 
     async def _advance(self, grid: ScanGrid) -> None:
         """Wait for a wish, the next scan or the machine's own deadline, whichever comes first."""
@@ -180,17 +193,19 @@ class TestRunner:
         return report
 
     async def _hand_back(self, because: str) -> HandBackEnded:
-        as_found, held = self.experiment.as_found, self.experiment.held
-        if as_found is None or held is None:
+        as_found = self.experiment.as_found
+        # A hand-back that broke off has written since; its last writes are ours too.
+        held = self.experiment.held if self._handing_back is None else self._handing_back.held
+        if as_found is None:
             return HandBackEnded(_now_s(), HandBackResult.RESTORED, "nothing was written")
         self.log.add_story(_now_s(), "note", f"handing back: {because}")
 
         async def write(command: WireCommand) -> WriteReport:
             return await self._write(command, gate_hand_back(as_found, self._plan.token, command))
 
-        hand_back = HandBackRun(self._plan, as_found, held, self._reader, write)
-        ended = await hand_back.run()
-        for sample in hand_back.samples:
+        self._handing_back = HandBackRun(self._plan, as_found, held, self._reader, write)
+        ended = await self._handing_back.run()
+        for sample in self._handing_back.samples:
             self.log.add_sample(sample)
         return ended
 

@@ -289,9 +289,11 @@ def proposals_section(loop: LoopConfig, proposed: ProposalSheet | None) -> tuple
     )
 
 
-def costs_of(plan: TestPlan) -> tuple[str, ...]:
-    """What each thing that the PLC doesn't offer has cost this test."""
+def costs_of(plan: TestPlan, loop: LoopConfig) -> tuple[str, ...]:
+    """What each thing that the PLC doesn't offer, or the loop's file doesn't ask for, has cost this test."""
     costs = []
+    if loop.is_writing_settings_allowed and not loop.proves_writable:
+        costs.append("not shown that the settings can be written")
     if not plan.has_guard:
         costs.append("no guard in the PLC: late writes after our own death cannot be excluded")
     if not plan.has_clock_tags:
@@ -303,8 +305,13 @@ def outcome_section(experiment: Experiment, faults: Sequence[str]) -> schema.Out
     """How the test ended, in the words that a technician reads."""
     code = next((end.code for end in (experiment.trip, experiment.refusal) if end is not None), None)
     return schema.Outcome(
-        ended=_ENDED[experiment.phase], code=code, text="; ".join((end_in_words(experiment), *faults))
+        ended=_ended(experiment.phase), code=code, text="; ".join((end_in_words(experiment), *faults))
     )
+
+
+def _ended(phase: Phase) -> Literal["COMPLETE", "ABORTED", "RELEASED", "STRANDED"]:
+    """A test that our own fault broke off stays in its phase: what it had touched counts as stranded."""
+    return _ENDED.get(phase, "STRANDED" if phase.is_touched else "ABORTED")
 
 
 def _quantity(name: str, label: str, unit: str, interval: Interval) -> schema.Quantity:

@@ -13,10 +13,17 @@ StoryKind = Literal["trip", "operator", "phase", "link", "note"]
 
 
 @dataclass(frozen=True, slots=True)
+class WriteBack:
+    """A setting written back with the number it holds, to show that it can be written."""
+
+    name: str
+
+
+@dataclass(frozen=True, slots=True)
 class LoggedWrite:
     """One write request: why, what was sent raw, and what became of it."""
 
-    command: Command
+    command: Command | WriteBack
     values: Mapping[str, RawValue]
     report: WriteReport
 
@@ -46,7 +53,7 @@ class TestLog:
         """Append one reading."""
         self._samples.append(sample)
 
-    def add_write(self, command: Command, values: Mapping[str, RawValue], report: WriteReport) -> None:
+    def add_write(self, command: Command | WriteBack, values: Mapping[str, RawValue], report: WriteReport) -> None:
         """Append one write request."""
         self._writes.append(LoggedWrite(command, dict(values), report))
 

@@ -29,7 +29,7 @@ def _what_became(experiment: Experiment) -> str:
         case Phase.RELEASED:
             return "Somebody took the loop; it is theirs, and nothing was written afterwards."
         case Phase.ABORTED if experiment.as_found is None:
-            return "Nothing was written."
+            return "Nothing was changed."
         case Phase.ABORTED | Phase.COMPLETE if ended is not None:
             return f"The loop is back: {ended.result.value}; {ended.detail}."
         case _:

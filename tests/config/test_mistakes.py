@@ -154,6 +154,7 @@ MISTAKES = (
     mistake("an actuator that goes up and down", 'actuator = "continuous"', 'actuator = "raise_lower"', "defaults.actuator", "does not suit a relay test", 'only actuator = "continuous"'),
     mistake("an actuator that is on or off", 'actuator = "continuous"', 'actuator = "on_off"', "defaults.actuator", "does not suit a relay test", 'only actuator = "continuous"'),
     # Settings
+    mistake("a proof without the right to write", 'write_settings = "in manual" ', 'write_settings = "never" ', f"{T}.prove_writable", 'while write_settings = "never"', "take the key out"),
     mistake("settings to write without their tags", 'write_settings = "never" ', 'write_settings = "in manual" ', f"{F}.tags.gain", "missing among the settings", "add the tag gain"),
     mistake("no tag for the derivative", "derivative = { address = 45 }", "# ", f"{T}.tags.derivative", "the block has a derivative", "has_derivative = false"),
     mistake("a tag of a derivative that isn't there", 'block = "ideal-seconds" ', 'block = "band-minutes" ', f"{T}.tags.derivative", "has no derivative", "take the tag out"),

@@ -3,6 +3,7 @@
 import asyncio
 import json
 import signal
+import struct
 import sys
 from collections.abc import AsyncIterator, Callable, Mapping
 from contextlib import asynccontextmanager, suppress
@@ -96,4 +97,9 @@ def moved(before: Mapping[str, Any], after: Mapping[str, Any]) -> dict[str, tupl
         "holder_request", "heartbeat", "sequence", "op_request", "op_effect_count",
         "mode", "sp", "gain", "integral", "derivative",
     )  # fmt: skip
-    return {name: (before[name], after[name]) for name in names if before[name] != after[name]}
+    return {name: (before[name], after[name]) for name in names if as_real(before[name]) != as_real(after[name])}
+
+
+def as_real(shown: Any) -> Any:
+    """A number as a REAL register holds it: the panel shows more digits than the wire carries."""
+    return struct.unpack(">f", struct.pack(">f", shown))[0] if isinstance(shown, float) else shown
