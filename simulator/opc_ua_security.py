@@ -9,6 +9,7 @@ import argparse
 import hashlib
 import hmac
 import socket
+from contextlib import suppress
 from dataclasses import dataclass, field
 from enum import Enum
 from pathlib import Path
@@ -127,7 +128,11 @@ class Access:
             raise ServiceError(StatusCodes.BadCertificateUntrusted)
 
     def _trusted(self) -> set[bytes]:
-        return {read_certificate(file) for file in (self.pki / "trusted").iterdir() if file.suffix in (".der", ".pem")}
+        trusted = set()
+        for file in (self.pki / "trusted").iterdir():
+            with suppress(ValueError):  # a file that is no certificate trusts nobody
+                trusted.add(read_certificate(file))
+        return trusted
 
 
 class Persons(UserManager):
@@ -176,7 +181,10 @@ def read_certificate(file: Path) -> bytes:
     """A certificate as DER, from a DER or PEM file.  Raises ``ValueError`` when it is none, or ``OSError``."""
     content = file.read_bytes()
     load = x509.load_pem_x509_certificate if file.suffix == ".pem" else x509.load_der_x509_certificate
-    return load(content).public_bytes(Encoding.DER)
+    try:
+        return load(content).public_bytes(Encoding.DER)
+    except ValueError as reason:
+        raise ValueError(f"{file} is no certificate; give it as DER, or as PEM in a file named .pem") from reason
 
 
 def thumbprint(file: Path) -> str:

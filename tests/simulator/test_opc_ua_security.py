@@ -122,6 +122,7 @@ async def test_a_visitor_reads_and_does_not_write(site: Site) -> None:
 
 async def test_a_stranger_is_refused_kept_aside_and_let_in_once_trusted(site: Site) -> None:
     pki = site.plant.server.access.pki
+    (pki / "trusted" / "notes.txt").write_text("certificates of those whom we let in\n", encoding="utf-8")
     security = site.security(site.stranger)
     with pytest.raises(ua.uaerrors.BadCertificateUntrusted):
         async with connected(site.plant, "shift", "juice", security, site.stranger.uri):

@@ -12,6 +12,7 @@ import pytest
 import pytest_asyncio
 from asyncua import ua
 from asyncua.client.client import Client
+from asyncua.ua.attribute_ids import AttributeIds
 from asyncua.ua.object_ids import ObjectIds
 
 from simulator.block import Mode
@@ -210,6 +211,20 @@ async def test_a_refused_write_says_why_and_changes_nothing(
 ) -> None:
     before = plant.plc.loops["TIC-204"].readings()
     assert await write(client, (tag, content, kind)) == [CODES[code]]
+    assert plant.plc.loops["TIC-204"].readings() == before
+
+
+async def test_only_whole_values_of_tags_can_be_written(plant: Plant, client: Client) -> None:
+    part = ua.WriteValue(named("TIC-204.sp", INDEX), ua.UInt32(AttributeIds.Value), ua.String("0"))
+    name = ua.WriteValue(named("TIC-204.sp", INDEX), ua.UInt32(AttributeIds.DisplayName))
+    part.Value = ua.DataValue(ua.Variant(70.0, FLOAT))
+    name.Value = ua.DataValue(ua.Variant(ua.LocalizedText("mine"), ua.VariantType.LocalizedText))
+    span = ua.WriteValue(named("TIC-204.pv.EURange", INDEX), ua.UInt32(AttributeIds.Value))
+    span.Value = ua.DataValue(ua.Variant(ua.Range(0.0, 1.0), ua.VariantType.ExtensionObject))
+    before = plant.plc.loops["TIC-204"].readings()
+    codes = [int(code.value) for code in await client.uaclient.write(ua.WriteParameters([part, name, span]))]
+    # BadIndexRangeNoData: OPC 10000-6, StatusCode.csv
+    assert codes == [0x80370000, CODES["BadNotWritable"], CODES["BadUserAccessDenied"]]
     assert plant.plc.loops["TIC-204"].readings() == before
 
 
