@@ -77,7 +77,7 @@ def opc_ua_controller_from(
     """The same for an OPC UA server; ``folder`` is what file names in the table are relative to."""
     parts = urlsplit(table.url)
     host = f"[{parts.hostname}]" if ":" in (parts.hostname or "") else parts.hostname
-    policy = {} if table.security_policy is None else {"policy": table.security_policy}
+    policy: dict[str, Any] = {} if table.security_policy is None else {"policy": table.security_policy}
     endpoint = OpcUaEndpoint(
         url=f"opc.tcp://{host}:{parts.port or _OPC_UA_PORT}{parts.path}",
         never_written=never_written,

@@ -9,17 +9,20 @@ from autotune.config.checks_settings import not_below, settings_flaws
 from autotune.config.complaints import Flaw
 from autotune.config.places import CLOCK_TAGS, GUARD_NEEDS
 from autotune.config.schema import ControllerTable, LoopTable, SpanTable
+from autotune.config.schema_opc_ua import OpcUaControllerTable
 from autotune.config.schema_settings import BlockTable
 from autotune.config.schema_site import SiteLimitsTable
 
 GUARD_SCANS_AT_LEAST = 3
 """The guard must outlast this many of our scans, or one late scan ends a test."""
 
+AnyControllerTable = ControllerTable | OpcUaControllerTable
+
 _NARROWEST_SPAN_EU = 1e-6
 
 
 def loop_flaws(
-    loop: LoopTable, controller: ControllerTable | None, block: BlockTable | None, site: SiteLimitsTable | None
+    loop: LoopTable, controller: AnyControllerTable | None, block: BlockTable | None, site: SiteLimitsTable | None
 ) -> Iterator[Flaw]:
     """Faults of one loop, also against its controller, its block and the site where these are known."""
     yield from _whose_loop(loop)
@@ -35,7 +38,7 @@ def loop_flaws(
         yield from _scans(loop, controller)
 
 
-def controller_flaws(controller: ControllerTable, loops: list[LoopTable]) -> Iterator[Flaw]:
+def controller_flaws(controller: AnyControllerTable, loops: list[LoopTable]) -> Iterator[Flaw]:
     """Faults of a controller that show only beside its loops."""
     untimed = [loop.name for loop in loops if not all(getattr(loop.tags, name) is not None for name in CLOCK_TAGS)]
     if controller.plc_scan_s is None and untimed:
@@ -189,7 +192,7 @@ def _watch(loop: LoopTable) -> Iterator[Flaw]:
             yield Flaw(("watch", number, "low_eu"), fault, "write the lower bound as low_eu")
 
 
-def _scans(loop: LoopTable, controller: ControllerTable) -> Iterator[Flaw]:
+def _scans(loop: LoopTable, controller: AnyControllerTable) -> Iterator[Flaw]:
     timeout_s = controller.request_timeout_s if controller.request_timeout_s is not None else 0.5
     patience_s = loop.guard.timeout_s if loop.guard is not None else None
     if patience_s is not None and not timeout_s < patience_s:

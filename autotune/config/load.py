@@ -1,23 +1,26 @@
 """``load``: a file of the user's to a ``Configuration``, or all that is wrong with it at once."""
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import TypeVar
 
 from pydantic import ValidationError
 
-from autotune.config.build import block_from, controller_from, loop_from
-from autotune.config.checks import controller_flaws, loop_flaws
+from autotune.config.build import block_from, controller_from, loop_from, opc_ua_controller_from
+from autotune.config.checks import AnyControllerTable, controller_flaws, loop_flaws
 from autotune.config.checks_settings import block_flaws, site_flaws
-from autotune.config.complaints import Flaw, Section, flaws_of, meant, shown, without_unknown_keys
+from autotune.config.complaints import Flaw, Loc, Section, flaws_of, meant, shown, without_unknown_keys
 from autotune.config.digest import configuration_digest
 from autotune.config.documents import Documents, Override, gather, read_table
+from autotune.config.never_written import barred_flaws, barred_node, barred_range, node_barred_flaws
+from autotune.config.node_places import NodePlace, node_overlaps_between, node_places_of, opc_ua_flaws
 from autotune.config.numbers import Table
-from autotune.config.places import Place, never_written, overlaps_between, places_of, touches
+from autotune.config.places import Place, overlaps_between, places_of
 from autotune.config.schema import ControllerTable, FileTable, IncludedTable, LoopTable
+from autotune.config.schema_opc_ua import OpcUaControllerTable
 from autotune.config.schema_settings import BlockTable
-from autotune.config.schema_site import SiteLimitsTable
+from autotune.config.schema_site import NeverWrittenTable, SiteLimitsTable
 from autotune.config.types import AddressRange, Configuration, Controller, LoopConfig
 from autotune.errors import Complaint, ConfigError
 
@@ -31,11 +34,12 @@ class _Draft:
     documents: Documents
     file: FileTable | None = None
     site: SiteLimitsTable | None = None
-    controllers: dict[str, ControllerTable] = field(default_factory=dict)
+    controllers: dict[str, AnyControllerTable] = field(default_factory=dict)
     blocks: dict[str, BlockTable] = field(default_factory=dict)
     loops: list[tuple[Section, LoopTable]] = field(default_factory=list)
-    placed: dict[str, list[Place]] = field(default_factory=dict)
+    placed: dict[str, Sequence[Place | NodePlace]] = field(default_factory=dict)
     never_written: dict[str, list[AddressRange]] = field(default_factory=dict)
+    barred_nodes: dict[str, list[str]] = field(default_factory=dict)
 
 
 def load(path: Path | str, overrides: Mapping[str, Override] | None = None) -> Configuration:
@@ -94,29 +98,54 @@ def _read_site(path: Path, draft: _Draft) -> None:
             flaw = _unknown((*loc, "controller"), "controller", told.controller, list(known))
             draft.documents.complain(section, flaw)
             continue
-        try:
-            controller = ControllerTable.model_validate(known[told.controller].own)
-        except ValidationError:
-            continue  # complained of where the controller stands
-        found = never_written(told.table, told.first, told.last, controller)
-        if isinstance(found, AddressRange):
-            draft.never_written.setdefault(told.controller, []).append(found)
+        controller = _valid_controller(known[told.controller])
+        if controller is not None:
+            _bar(section, loc, told, controller, draft)
+
+
+def _valid_controller(section: Section) -> AnyControllerTable | None:
+    """The controller's table; a wrong one is complained of where it stands."""
+    try:
+        return _controller_table(section).model_validate(section.own)
+    except ValidationError:
+        return None
+
+
+def _controller_table(section: Section) -> type[AnyControllerTable]:
+    return OpcUaControllerTable if section.own.get("protocol") == "opc-ua" else ControllerTable
+
+
+def _bar(section: Section, loc: Loc, told: NeverWrittenTable, controller: AnyControllerTable, draft: _Draft) -> None:
+    if isinstance(controller, OpcUaControllerTable):
+        node = barred_node(told)
+        if isinstance(node, str):
+            draft.barred_nodes.setdefault(told.controller, []).append(node)
         else:
-            draft.documents.complain(section, Flaw((*loc, "first"), *found))
+            draft.documents.complain(section, Flaw((*loc, *node.loc), node.fault, node.remedy))
+        return
+    found = barred_range(told, controller)
+    if isinstance(found, AddressRange):
+        draft.never_written.setdefault(told.controller, []).append(found)
+    else:
+        draft.documents.complain(section, Flaw((*loc, *found.loc), found.fault, found.remedy))
 
 
 def _read_controllers_and_blocks(draft: _Draft) -> None:
     documents = draft.documents
-    endpoints: dict[tuple[str, int, int], str] = {}
+    endpoints: dict[tuple[object, ...], str] = {}
     for name, section in documents.controllers.items():
-        controller = _table(documents, section, ControllerTable)
+        controller = _table(documents, section, _controller_table(section))
         if controller is None:
             continue
         draft.controllers[name] = controller
+        key, what = "host", "host, port and device_id"
+        if isinstance(controller, OpcUaControllerTable):
+            key = what = "url"
+            documents.complain(section, *opc_ua_flaws(controller))
         first = endpoints.setdefault(_endpoint(controller), name)
         if first != name:
-            fault = f"the same host, port and device_id as controller.{first}"
-            documents.complain(section, Flaw(("host",), fault, "keep one of them; loops may share a controller"))
+            fault = f"the same {what} as controller.{first}"
+            documents.complain(section, Flaw((key,), fault, "keep one of them; loops may share a controller"))
     for name, section in documents.blocks.items():
         block = _table(documents, section, BlockTable)
         if block is not None:
@@ -156,43 +185,49 @@ def _read_loops(draft: _Draft) -> None:
 def _place_tags(draft: _Draft) -> None:
     documents = draft.documents
     sections = {loop.name: section for section, loop in draft.loops}
-    located: list[tuple[str, tuple[object, ...], list[Place]]] = []
+    registers: list[tuple[str, tuple[object, ...], list[Place]]] = []
+    nodes: list[tuple[str, tuple[object, ...], list[NodePlace]]] = []
     for section, loop in draft.loops:
-        controller = draft.controllers.get(loop.controller)
-        if controller is None:
+        controller, block = draft.controllers.get(loop.controller), draft.blocks.get(loop.block)
+        if isinstance(controller, OpcUaControllerTable):
+            in_server, flaws = node_places_of(loop, block)
+            draft.placed[loop.name] = in_server
+            nodes.append((loop.name, _endpoint(controller), in_server))
+            flaws += node_barred_flaws(in_server, draft.barred_nodes.get(loop.controller, ()))
+        elif controller is not None:
+            placed, flaws = places_of(loop, controller, block)
+            draft.placed[loop.name] = placed
+            registers.append((loop.name, _endpoint(controller), placed))
+            flaws += barred_flaws(placed, draft.never_written.get(loop.controller, ()))
+        else:
             continue
-        placed, flaws = places_of(loop, controller, draft.blocks.get(loop.block))
         documents.complain(section, *flaws)
-        draft.placed[loop.name] = placed
-        located.append((loop.name, _endpoint(controller), placed))
-        for place in placed:
-            for forbidden in draft.never_written.get(loop.controller, ()):
-                if place.is_written and touches(place, forbidden):
-                    fault = f"{place.name} lies where the site's limits allow no write"
-                    documents.complain(
-                        section, Flaw((*place.loc, "address"), fault, "correct the address or the range")
-                    )
-    for name, flaw in overlaps_between(located):
+    for name, flaw in (*overlaps_between(registers), *node_overlaps_between(nodes)):
         documents.complain(sections[name], flaw)
 
 
 def _configuration(path: Path, draft: _Draft) -> Configuration:
     assert draft.file is not None  # noqa: S101 - without complaints every table was right
-    controllers = {
-        name: controller_from(name, table, tuple(draft.never_written.get(name, ())))
-        for name, table in draft.controllers.items()
-    }
+    data_dir = path.parent / draft.file.data_dir
+    controllers = {name: _controller(name, draft, path.parent, data_dir) for name in draft.controllers}
     loops = tuple(_loop(loop, draft, controllers) for _, loop in draft.loops)
     everyone = tuple(controllers.values())
     return Configuration(
         file=path,
-        data_dir=path.parent / draft.file.data_dir,
+        data_dir=data_dir,
         loops=loops,
         controllers=everyone,
         concurrent_tests_at_most=draft.file.concurrent_tests_at_most,
         digest=configuration_digest(loops, everyone, draft.file.concurrent_tests_at_most),
         sources=tuple(draft.documents.sources),
     )
+
+
+def _controller(name: str, draft: _Draft, folder: Path, data_dir: Path) -> Controller:
+    table = draft.controllers[name]
+    if isinstance(table, OpcUaControllerTable):
+        return opc_ua_controller_from(name, table, tuple(draft.barred_nodes.get(name, ())), folder, data_dir)
+    return controller_from(name, table, tuple(draft.never_written.get(name, ())))
 
 
 def _loop(loop: LoopTable, draft: _Draft, controllers: Mapping[str, Controller]) -> LoopConfig:
@@ -219,7 +254,9 @@ def _unknown(loc: tuple[str | int, ...], kind: str, name: str, known: list[str])
     return Flaw(loc, f"there is no {kind} {shown(name)}", f"{meant(name, known)}{listed}")
 
 
-def _endpoint(controller: ControllerTable) -> tuple[str, int, int]:
+def _endpoint(controller: AnyControllerTable) -> tuple[object, ...]:
+    if isinstance(controller, OpcUaControllerTable):
+        return (controller.url.lower().rstrip("/"),)
     return controller.host.lower(), controller.port, controller.device_id
 
 

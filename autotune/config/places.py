@@ -8,7 +8,7 @@ from autotune.config.complaints import Flaw, Loc
 from autotune.config.schema import ControllerTable, LoopTable
 from autotune.config.schema_settings import BlockTable
 from autotune.config.schema_tags import TagsTable, TagTable
-from autotune.config.types import AddressRange, DataType, ModbusTag, Ne43, Order, RegisterTable
+from autotune.config.types import DataType, ModbusTag, Ne43, OpcUaTag, Order, RegisterTable
 
 GUARD_WRITES = ("holder_request", "heartbeat", "sequence", "op_request")
 """The tags that each scan of a guarded test writes in one request, in this order side by side."""
@@ -25,7 +25,7 @@ SETTINGS = ("gain", "integral", "derivative")
 _UINT, _UDINT, _BOOL = DataType.UINT, DataType.UDINT, DataType.BOOL
 _COUNTER = (_UINT, _UDINT)
 _CONTACT = (_BOOL, DataType.SINT, DataType.USINT, DataType.INT, _UINT, DataType.DINT, _UDINT)
-_TYPES: dict[str, tuple[DataType, ...]] = {
+SUITING_TYPES: dict[str, tuple[DataType, ...]] = {
     "mode": _CONTACT,
     "holder_request": (_UDINT,),
     "holder": (_UDINT,),
@@ -42,7 +42,8 @@ _TYPES: dict[str, tuple[DataType, ...]] = {
     "op_effect_count": _COUNTER,
     "boot_count": _COUNTER,
 }
-_READ_ONLY = (RegisterTable.INPUT, RegisterTable.DISCRETE)
+"""The types that a code, a count or a contact may have; every other tag is a measurement or a setting."""
+READ_ONLY_TABLES = (RegisterTable.INPUT, RegisterTable.DISCRETE)
 _BIT_TABLES = (RegisterTable.COIL, RegisterTable.DISCRETE)
 _REFERENCE_DIGIT = {RegisterTable.DISCRETE: 1, RegisterTable.INPUT: 3, RegisterTable.HOLDING: 4}
 
@@ -62,7 +63,9 @@ def places_of(loop: LoopTable, controller: ControllerTable, block: BlockTable | 
     written = written_tags(loop, block)
     placed: list[Place] = []
     flaws: list[Flaw] = []
-    for name, loc, told in _told_tags(loop):
+    if loop.tags.namespace is not None:
+        flaws.append(Flaw(("tags", "namespace"), "belongs to OPC UA, and the controller speaks Modbus", "take it out"))
+    for name, loc, told in told_tags(loop):
         found = list(_shape_flaws(name, loc, told, loop.tags, controller, loop.address_offset))
         flaws += found
         if not found:
@@ -104,20 +107,6 @@ def wire_address(
     return wire, None
 
 
-def never_written(
-    table: RegisterTable, first: int, last: int, controller: ControllerTable
-) -> AddressRange | tuple[str, str]:
-    """The range on the wire, or fault and remedy."""
-    if table in _READ_ONLY:
-        return f"{table.value} can't be written anyway", "name coil or holding"
-    (low, low_fault), (high, high_fault) = (wire_address(end, table, controller) for end in (first, last))
-    if fault := low_fault or high_fault:
-        return fault
-    if low > high:
-        return f"first {first} is above last {last}", "write the lower address first"
-    return AddressRange(table, low, high)
-
-
 def overlaps_between(loops: Iterable[tuple[str, tuple[object, ...], list[Place]]]) -> Iterator[tuple[str, Flaw]]:
     """Tags of different loops on the same device that can't both be right: (loop, flaw).
 
@@ -134,13 +123,20 @@ def overlaps_between(loops: Iterable[tuple[str, tuple[object, ...], list[Place]]
                 seen[endpoint, place.tag.table, cell].append((loop, place))
 
 
-def touches(place: Place, forbidden: AddressRange) -> bool:
-    """Whether the tag has a register in the range."""
-    last = place.tag.address + _width(place.tag) - 1
-    return place.tag.table is forbidden.table and place.tag.address <= forbidden.last and last >= forbidden.first
+def suiting_flaws(name: str, loc: Loc, tag: ModbusTag | OpcUaTag) -> Iterator[Flaw]:
+    """What speaks against a tag's type and scale for its use; a type that the file leaves open can't be judged."""
+    allowed, kind = SUITING_TYPES.get(name), tag.type
+    if allowed is not None and kind is not None and kind not in allowed:
+        yield Flaw((*loc, "type"), f"{kind.value} does not suit {name}", f"write {type_words(name)}")
+    elif allowed is None and kind is _BOOL and not name.startswith("watch."):
+        yield Flaw((*loc, "type"), f"BOOL does not suit {name}", f"write {type_words(name)}")
+    if allowed is not None and (tag.scale, tag.offset) != (1.0, 0.0):
+        key = "scale" if tag.scale != 1.0 else "offset"
+        yield Flaw((*loc, key), f"{name} is a code or a count, not a measurement", "take `scale` and `offset` out")
 
 
-def _told_tags(loop: LoopTable) -> Iterator[tuple[str, Loc, TagTable]]:
+def told_tags(loop: LoopTable) -> Iterator[tuple[str, Loc, TagTable]]:
+    """All tags of a loop as told: name, the way to it, and its table."""
     for name in TagsTable.model_fields:
         told = getattr(loop.tags, name)
         if isinstance(told, TagTable):
@@ -152,12 +148,18 @@ def _told_tags(loop: LoopTable) -> Iterator[tuple[str, Loc, TagTable]]:
 def _shape_flaws(
     name: str, loc: Loc, told: TagTable, shared: TagsTable, controller: ControllerTable, offset: int
 ) -> Iterator[Flaw]:
+    for key in ("node", "path", "namespace"):
+        if getattr(told, key) is not None:
+            yield Flaw((*loc, key), "belongs to OPC UA, and the controller speaks Modbus", "write address instead")
     table, kind = told.table or shared.table, told.type or shared.type
+    if told.address is None:
+        about = TagTable.model_fields["address"].description
+        yield Flaw((*loc, "address"), "missing", f"add address: {about}")
     if table is None:
         yield Flaw((*loc, "table"), "missing", "add table: coil, discrete, input or holding, here or in [loop.tags]")
     if kind is None:
-        yield Flaw((*loc, "type"), "missing", f"add type: {_type_words(name)}, here or in [loop.tags]")
-    if table is None or kind is None:
+        yield Flaw((*loc, "type"), "missing", f"add type: {type_words(name)}, here or in [loop.tags]")
+    if table is None or kind is None or told.address is None:
         return
     yield from _type_flaws(loc, table, kind, told)
     wire, wrong = wire_address(told.address, table, controller, offset)
@@ -188,6 +190,7 @@ def _tag(told: TagTable, shared: TagsTable, controller: ControllerTable, offset:
     table, kind = told.table or shared.table, told.type or shared.type
     assert table is not None  # noqa: S101 - _shape_flaws was empty
     assert kind is not None  # noqa: S101
+    assert told.address is not None  # noqa: S101
     return ModbusTag(
         table=table,
         address=wire_address(told.address, table, controller, offset)[0],
@@ -202,15 +205,8 @@ def _tag(told: TagTable, shared: TagsTable, controller: ControllerTable, offset:
 
 
 def _use_flaws(name: str, loc: Loc, tag: ModbusTag, is_written: bool) -> Iterator[Flaw]:
-    allowed = _TYPES.get(name)
-    if allowed is not None and tag.type not in allowed:
-        yield Flaw((*loc, "type"), f"{tag.type.value} does not suit {name}", f"write {_type_words(name)}")
-    elif allowed is None and tag.type is _BOOL and not name.startswith("watch."):
-        yield Flaw((*loc, "type"), f"BOOL does not suit {name}", f"write {_type_words(name)}")
-    if allowed is not None and (tag.scale, tag.offset) != (1.0, 0.0):
-        key = "scale" if tag.scale != 1.0 else "offset"
-        yield Flaw((*loc, key), f"{name} is a code or a count, not a measurement", "take `scale` and `offset` out")
-    if is_written and tag.table in _READ_ONLY:
+    yield from suiting_flaws(name, loc, tag)
+    if is_written and tag.table in READ_ONLY_TABLES:
         yield Flaw(
             (*loc, "table"), f"{name} is written, but {tag.table.value} can only be read", "write holding or coil"
         )
@@ -236,7 +232,7 @@ def _guard_order_flaws(placed: list[Place]) -> Iterator[Flaw]:
     if len(line) < len(GUARD_WRITES):
         return
     for left, right in pairwise(line):
-        if right.tag.table is not left.tag.table or right.tag.address != left.tag.address + _width(left.tag):
+        if right.tag.table is not left.tag.table or right.tag.address != left.tag.address + width_of(left.tag):
             fault = f"{right.name} does not follow {left.name} without a gap"
             remedy = f"place {', '.join(GUARD_WRITES)} side by side in this order: they go in one request"
             yield Flaw((*right.loc, "address"), fault, remedy)
@@ -261,7 +257,7 @@ def _overlap(place: Place, other_words: str, other: Place) -> Flaw:
 
 
 def _where(tag: ModbusTag) -> str:
-    last = tag.address + _width(tag) - 1
+    last = tag.address + width_of(tag) - 1
     cells = f"{tag.address}" if last == tag.address else f"{tag.address} .. {last}"
     return f"{tag.table.value} {cells} (counted from 0)"
 
@@ -271,13 +267,15 @@ def _words(place: Place) -> str:
 
 
 def _cells(tag: ModbusTag) -> range:
-    return range(tag.address, tag.address + _width(tag))
+    return range(tag.address, tag.address + width_of(tag))
 
 
-def _width(tag: ModbusTag) -> int:
+def width_of(tag: ModbusTag) -> int:
+    """How many addresses of its table the tag takes."""
     return 1 if tag.table in _BIT_TABLES else tag.type.register_count
 
 
-def _type_words(name: str) -> str:
-    allowed = _TYPES.get(name)
+def type_words(name: str) -> str:
+    """The types that suit a tag, for a person."""
+    allowed = SUITING_TYPES.get(name)
     return " or ".join(kind.value for kind in allowed) if allowed is not None else "a type such as REAL or INT"

@@ -10,12 +10,13 @@ from autotune.config.schema_tags import TableChoice
 
 
 class NeverWrittenTable(Table):
-    """``[[never_written]]`` of the site's limits; both ends included, counted as the controller counts."""
+    """``[[never_written]]`` of the site's limits: a range of Modbus addresses, both ends included, or a node."""
 
     controller: Words = Field(description="the NAME of a [controller.NAME]")
-    table: TableChoice = Field(description="coil or holding")
-    first: int = Field(description="first address, counted as that controller's `addressing` says")
-    last: int = Field(description="last address, included")
+    table: TableChoice | None = Field(default=None, description="coil or holding")
+    first: int | None = Field(default=None, description="first address, counted as that controller's `addressing` says")
+    last: int | None = Field(default=None, description="last address, included")
+    node: Words | None = Field(default=None, description="instead of an address range: a node id of an OPC UA server")
 
 
 class SiteLimitsTable(Table):

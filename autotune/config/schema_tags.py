@@ -20,9 +20,21 @@ class Ne43Table(Table):
 
 
 class TagTable(Table):
-    """One tag; what it leaves out comes from ``[loop.tags]`` and from its controller."""
+    """One tag; what it leaves out comes from ``[loop.tags]`` and from its controller.
 
-    address: int = Field(description="register or bit address, counted as the controller's `addressing` says")
+    A Modbus tag has an ``address``, an OPC UA tag a ``node`` or a ``path``.
+    """
+
+    address: int | None = Field(
+        default=None, description="register or bit address, counted as the controller's `addressing` says"
+    )
+    node: Words | None = Field(
+        default=None, description='the node id in an OPC UA server, for instance "ns=2;s={loop}.pv"'
+    )
+    path: Words | None = Field(
+        default=None, description='instead of node: the browse path below Objects, for instance "/Skid/{loop}/pv"'
+    )
+    namespace: Words | None = Field(default=None, description="URI of the namespace of the path's names")
     table: TableChoice | None = Field(default=None, description="the Modbus table: coil, discrete, input or holding")
     type: TypeChoice | None = Field(default=None, description="the IEC 61131-3 type, for instance REAL or UINT")
     bit: int | None = Field(default=None, ge=0, le=15, description="bit of the register, 0 (least significant) to 15")
@@ -40,6 +52,7 @@ class TagsTable(Table):
 
     table: TableChoice | None = Field(default=None, description="the table of all tags that name none")
     type: TypeChoice | None = Field(default=None, description="the type of all tags that name none")
+    namespace: Words | None = Field(default=None, description="the namespace URI of all paths that name none")
 
     pv: TagTable = Field(description="measured value as the PID block sees it")
     sp: TagTable | None = Field(default=None, description="setpoint")
