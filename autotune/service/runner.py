@@ -28,6 +28,7 @@ from autotune.experiment.events import (
 )
 from autotune.experiment.gate import gate, gate_hand_back
 from autotune.experiment.machine import begin, next_deadline_s, step
+from autotune.experiment.phases import Phase
 from autotune.experiment.plan import TestPlan
 from autotune.experiment.state import Experiment
 from autotune.field.link import LoopLink
@@ -69,6 +70,7 @@ class TestRunner:
         self._wishes: asyncio.Queue[_Wish] = asyncio.Queue()
         self._last_driven_pct: float | None = None
         self._handing_back: HandBackRun | None = None
+        self._has_written = False
 
     def abort(self, by: str) -> None:
         """Ask for the end of the test, now; always allowed, any number of times."""
@@ -176,16 +178,21 @@ class TestRunner:
     async def _perform(self, command: Command) -> Event:
         if isinstance(command, HandBack):
             return await self._hand_back(command.because)
-        report = await self._write(command, gate(self.experiment, command))
-        return Written(_now_s(), command, report)
+        self._record_command(command, gate(self.experiment, command))
+        if self.faults and not self._has_written:
+            return AbortAsked(_now_s(), f"the journal failed before anything was written: {self.faults[0]}")
+        return Written(_now_s(), command, await self._write(command))
 
-    async def _write(self, command: WireCommand, refusal: Refusal | None) -> WriteReport:
+    def _record_command(self, command: WireCommand, refusal: Refusal | None) -> None:
         """Gate, record, write: in this order, for every write of a test and of its hand-back."""
         if refusal is not None:
             raise WriteForbidden(f"{self._loop.name}: {refusal}")
         moves = not isinstance(command, DriveOutput) or command.op_pct != self._last_driven_pct
         self._note("command", command, t_s=_now_s(), durable=moves)
+
+    async def _write(self, command: WireCommand) -> WriteReport:
         values = to_raw(self._loop, command)
+        self._has_written = True  # from here on it may land, whatever we hear
         report = await self._link.write(values)
         self.log.add_write(command, values, report)
         if isinstance(command, DriveOutput):
@@ -196,12 +203,15 @@ class TestRunner:
         as_found = self.experiment.as_found
         # A hand-back that broke off has written since; its last writes are ours too.
         held = self.experiment.held if self._handing_back is None else self._handing_back.held
-        if as_found is None:
+        if as_found is None or not self._has_written:
             return HandBackEnded(_now_s(), HandBackResult.RESTORED, "nothing was written")
         self.log.add_story(_now_s(), "note", f"handing back: {because}")
 
         async def write(command: WireCommand) -> WriteReport:
-            return await self._write(command, gate_hand_back(as_found, self._plan.token, command))
+            self._record_command(command, gate_hand_back(as_found, self._plan.token, command))
+            report = await self._write(command)
+            self._note("note", report, t_s=_now_s())
+            return report
 
         self._handing_back = HandBackRun(self._plan, as_found, held, self._reader, write)
         ended = await self._handing_back.run()
@@ -210,23 +220,23 @@ class TestRunner:
         return ended
 
     async def _last_resort(self, fault: BaseException) -> None:
-        """We failed ourselves: hand back what may be touched, without the machine."""
+        """We failed ourselves: hand back what may be touched, without the machine, which can't hear of it."""
         self.faults.append(f"{type(fault).__name__}: {fault}")
-        if self.experiment.phase.is_touched and not self.experiment.phase.is_terminal:
+        if self.experiment.phase.is_touched:
             ended = await self._hand_back(f"our own fault: {fault!r}")
             self.faults.append(f"last-resort hand-back: {ended.result.value}; {ended.detail}")
-            self._note("event", ended, t_s=ended.t_s, durable=True)
-        self._record_end()
+            self._note("note", self.faults[-1], t_s=ended.t_s, durable=True)
+        self._note("end", f"{self.experiment.phase.value}; {self.faults[-1]}", t_s=_now_s(), durable=True)
 
     def _record_end(self) -> None:
         self._note("end", self.experiment.phase.value, t_s=_now_s(), durable=True)
 
     def _note(self, kind: LineKind, payload: object, *, t_s: float, durable: bool = False) -> None:
-        """Write the journal; once a hand-back is due, a full disk is a fault to tell, not a reason to stop."""
+        """Write the journal; from the first touch on a full disk ends the test, but never a hand-back."""
         try:
             self._journal.record(kind, payload, t_s=t_s, durable=durable)
         except JournalError as fault:
-            if not self.experiment.phase.is_touched:
+            if self.experiment.phase in (Phase.IDLE, Phase.CHECKING):
                 raise
             if not self.faults:
                 self.abort(f"the journal failed: {fault}")

@@ -6,6 +6,7 @@ processes are refused: while they are in flight nothing tells how far the clock 
 """
 
 import asyncio
+from collections import deque
 from collections.abc import Callable, Coroutine, Iterable
 from contextlib import suppress
 from typing import Any, NoReturn, TypeVar
@@ -33,7 +34,7 @@ class RefusedInVirtualTime(AssertionError):
 
 def _refusing(name: str) -> Any:
     def refuse(*_args: object, **_keywords: object) -> NoReturn:
-        raise RefusedInVirtualTime(f"{name}: virtual time knows no threads, sockets, pipes, processes or signals")
+        raise RefusedInVirtualTime(f"{name}: virtual time knows no threads, sockets, pipes or processes")
 
     return refuse
 
@@ -52,21 +53,40 @@ class _JumpingSelector:
 class VirtualLoop(asyncio.BaseEventLoop):
     """The loop; ``time()`` starts at 0 s and moves only when nothing is ready.
 
-    Raises ``Deadlock`` when nothing is ready and no timer runs, ``EndlessRun`` past ``within_s``.
+    ``on_pass`` is called with the number of each pass over what is ready, before the pass: whatever happens between
+    two of them happens at an await of the code under test.  ``signal_handlers`` are those that were asked for; calling
+    one delivers its signal.  Raises ``Deadlock`` when nothing is ready and no timer runs, ``EndlessRun`` past
+    ``within_s``.
     """
 
-    def __init__(self, within_s: float = DAY_S) -> None:
+    _ready: deque[object]  # the base class's own: the callbacks of the next pass
+
+    def __init__(self, within_s: float = DAY_S, on_pass: Callable[[int], None] | None = None) -> None:
         super().__init__()
+        self.signal_handlers: dict[int, Callable[[], object]] = {}
         self._now_s = 0.0
         self._within_s = within_s
+        self._on_pass = on_pass
+        self._passes = 0
         self._selector = _JumpingSelector(self._jump)  # the base class waits by calling its select()
 
     def time(self) -> float:
         """Virtual seconds since the loop was made."""
         return self._now_s
 
+    def add_signal_handler(self, sig: int, callback: Callable[..., Any], *args: Any) -> None:  # type: ignore[override]
+        """Keep what the signal would call."""
+        self.signal_handlers[sig] = lambda: callback(*args)
+
+    def remove_signal_handler(self, sig: int) -> bool:
+        """Forget what the signal would call."""
+        return self.signal_handlers.pop(sig, None) is not None
+
     def _jump(self, timeout_s: float | None) -> None:
-        if timeout_s == 0.0:
+        self._passes += 1
+        if self._on_pass is not None:
+            self._on_pass(self._passes)
+        if timeout_s == 0.0 or self._ready:
             return
         if timeout_s is None:
             raise Deadlock(f"at {self._now_s:g} s nothing is ready and no timer runs; waiting: {_places(self)}")
@@ -85,6 +105,7 @@ class VirtualLoop(asyncio.BaseEventLoop):
                 self.stop()
 
         self._within_s = self._now_s + 3600.0
+        self._on_pass = None
         for task in (left := asyncio.all_tasks(self)):
             task.add_done_callback(stop_after_the_last)
             task.cancel()
@@ -113,16 +134,17 @@ class VirtualLoop(asyncio.BaseEventLoop):
     sock_recv = _refusing("sock_recv")
     sock_recv_into = _refusing("sock_recv_into")
     sock_sendall = _refusing("sock_sendall")
-    add_signal_handler = _refusing("add_signal_handler")
 
 
-def run_virtual(main: Coroutine[Any, Any, T], *, within_s: float = DAY_S) -> T:
+def run_virtual(
+    main: Coroutine[Any, Any, T], *, within_s: float = DAY_S, on_pass: Callable[[int], None] | None = None
+) -> T:
     """Run ``main`` to its end in virtual time, at most ``within_s`` of it, and return its result.
 
     Raises what ``main`` raises; ``Deadlock`` or ``EndlessRun``; ``TasksLeftBehind`` when other tasks are
     not done when ``main`` is; the exception of a task or callback that nobody awaited.
     """
-    loop = VirtualLoop(within_s)
+    loop = VirtualLoop(within_s, on_pass)
     unheard: list[dict[str, Any]] = []
     loop.set_exception_handler(lambda _loop, context: unheard.append(context))
     try:
