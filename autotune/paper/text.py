@@ -19,7 +19,7 @@ def sheet_page(stored: StoredSheet, zone: tzinfo = UTC) -> str:
         *_part("As found, as left", _as_found_as_left(stored, zone)),
         *_part("Permission and cautions", _permission(sheet, zone)),
         *_part("Planned", _planned(sheet)),
-        *_part("What happened", _events(sheet)),
+        *_part("What happened", _events(sheet, zone)),
         *_part("Cycles seen", _cycles(sheet)),
         *_part("Findings", _findings(sheet)),
         *_part("Proposals", _proposals(sheet.proposals)),
@@ -107,8 +107,8 @@ def _planned(sheet: Sheet) -> Iterator[str]:
         ("Excitation", f"{plan.kind}, first {plan.first_move}"),
         ("Steps", f"up {shown(plan.step_up_pct, '%')}, down {shown(plan.step_down_pct, '%')} of OP span"),
         ("Hysteresis", f"{hysteresis} (half-width)"),
-        ("Output limits", f"{shown(limits.op_low_pct, '%')} to {shown(limits.op_high_pct, '%')} of OP span"),
-        ("PV limits", f"{shown(limits.pv_low_pct, '%')} to {shown(limits.pv_high_pct, '%')} of PV span"),
+        ("Output limits", _range(limits.op_low_pct, limits.op_high_pct, sheet.op_span)),
+        ("PV limits", _range(limits.pv_low_pct, limits.pv_high_pct, sheet.pv_span)),
         ("Scan", f"ours {shown(plan.scan_s, 's')}, controller's {shown(plan.plc_scan_s, 's')}"),
         ("Guard", "armed in the controller" if plan.has_guard else "none in the controller"),
     )
@@ -118,11 +118,20 @@ def _planned(sheet: Sheet) -> Iterator[str]:
     )
 
 
-def _events(sheet: Sheet) -> Iterator[str]:
+def _events(sheet: Sheet, zone: tzinfo) -> Iterator[str]:
     for event in sheet.events:
+        since_s = (event.utc - sheet.started_utc).total_seconds()
         code = f"{event.code}: " if event.code else ""
         by = f" (by {event.by})" if event.by else ""
-        yield from wrapped(f"- at {event.t_s:.1f} s, {event.kind}: {code}{event.text}{by}")
+        yield from wrapped(
+            f"- {event.utc.astimezone(zone):%H:%M:%S} ({since_s:.1f} s), {event.kind}: {code}{event.text}{by}"
+        )
+
+
+def _range(low_pct: float, high_pct: float, span: Span) -> str:
+    width_eu = (span.high_eu - span.low_eu) / 100.0
+    low, high = (_both(pct, span.low_eu + pct * width_eu, span, 4) for pct in (low_pct, high_pct))
+    return f"{low} to {high}"
 
 
 def _cycles(sheet: Sheet) -> Iterator[str]:
@@ -134,7 +143,7 @@ def _cycles(sheet: Sheet) -> Iterator[str]:
             str(n),
             f"{cycle.from_s:.1f} s",
             shown(cycle.period_s, "s"),
-            _both(cycle.pv_amplitude_pct, cycle.pv_amplitude_pct * (span.high_eu - span.low_eu) / 100.0, span),
+            _both(cycle.pv_amplitude_pct, cycle.pv_amplitude_pct * (span.high_eu - span.low_eu) / 100.0, span, 4),
             shown(cycle.amplitude_pct, "%"),
         )
         for n, cycle in enumerate(sheet.findings.cycles, start=1)
@@ -248,11 +257,13 @@ def _bullets(texts: Iterable[str], indent: str = "") -> Iterator[str]:
         yield from wrapped(f"- {text}", indent)
 
 
-def _both(pct: float | None, eu: float | None, span: Span) -> str:
+def _both(pct: float | None, eu: float | None, span: Span, digits: int = 5) -> str:
+    """A reading in percent and, where that is another number, in engineering units."""
     if pct is None:
         return "not known"
     is_percent = (span.low_eu, span.high_eu, span.unit) == (0.0, 100.0, "%")
-    return exact(pct, "%") if eu is None or is_percent else f"{exact(pct, '%')} = {exact(eu, span.unit)}"
+    told = shown(pct, "%", digits)
+    return told if eu is None or is_percent else f"{told} = {shown(eu, span.unit, digits)}"
 
 
 def _span(span: Span) -> str:
