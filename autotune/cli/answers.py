@@ -57,15 +57,15 @@ def proposals_table(voice: Voice, sheet: schema.Sheet, *, is_brief: bool = False
     as_found = () if sheet.as_found is None else sheet.as_found.settings
     proposals = [one for one in sheet.proposals if one.settings]
     fields = proposals[0].settings if proposals else as_found
-    table = Table(box=None, padding=(0, 2), show_edge=False, title_justify="left")
+    table = Table(box=None, padding=(0, 2, 0, 0), show_edge=False)
     table.add_column("", no_wrap=True)
     for one in fields:
-        table.add_column(f"{one.label} {one.unit}", justify="right", header_style="quiet")
-    table.add_column("rounding", justify="right", header_style="quiet")
-    table.add_column("gain x", justify="right", header_style="quiet")
+        table.add_column(f"{one.label} {one.unit}", justify="right", header_style="quiet", no_wrap=True)
+    table.add_column("rounded", justify="right", header_style="quiet", no_wrap=True)
+    table.add_column("gain x", justify="right", header_style="quiet", no_wrap=True)
     table.add_row("as found", *_amounts(as_found, len(fields)), "", "1")
     for proposal in proposals:
-        mark = "  recommended" if proposal.is_recommended else ""
+        mark = " *" if proposal.is_recommended else ""
         factor = "-" if proposal.gain_factor is None else f"{proposal.gain_factor:.2f}"
         rounding = "-" if proposal.rounding_pct is None else f"{proposal.rounding_pct:.2f} %"
         table.add_row(f"{proposal.name}{mark}", *_amounts(proposal.settings, len(fields)), rounding, factor)
@@ -75,6 +75,11 @@ def proposals_table(voice: Voice, sheet: schema.Sheet, *, is_brief: bool = False
     for proposal in sheet.proposals:
         if proposal.not_proposed_because is not None:
             voice.say(f"  {proposal.name}: not proposed. {proposal.not_proposed_because}", style="quiet")
+    if sheet.proposals_reason:
+        recommended = any(one.is_recommended for one in proposals)
+        voice.say(
+            f"  {'* recommended: ' if recommended else 'Nothing is recommended: '}{sheet.proposals_reason}", "caution"
+        )
     _show_cautions(voice, [one for one in proposals if one.is_recommended or not is_brief])
     if is_brief and len(proposals) > 1:
         voice.say(f"  'autotune propose CONFIG {sheet.sheet_id}' tells what speaks against each of the others.")
@@ -150,5 +155,5 @@ def quantities_answer(quantities: tuple[schema.Quantity, ...]) -> SettingsAnswer
 
 
 def _amounts(quantities: tuple[schema.Quantity, ...], count: int) -> list[str]:
-    shown = ["-" if one.amount is None else f"{one.amount:.5g}" for one in quantities]
+    shown = ["-" if one.amount is None else f"{one.amount:.4g}" for one in quantities]
     return shown + ["-"] * (count - len(shown))

@@ -4,7 +4,7 @@ from collections.abc import Iterable, Iterator, Sequence
 from datetime import UTC, tzinfo
 
 from autotune.paper.words import OUTCOMES, RESULTS, WIDTH, exact, instant, plain, quantity, shown, wrapped
-from autotune.sheet.schema import AsFound, Change, Person, Proposal, Quantity, Recovery, Sheet, Span
+from autotune.sheet.schema import AsFound, Change, Person, Quantity, Recovery, Sheet, Span
 from autotune.sheet.store import StoredSheet
 
 
@@ -22,7 +22,7 @@ def sheet_page(stored: StoredSheet, zone: tzinfo = UTC) -> str:
         *_part("What happened", _events(sheet, zone)),
         *_part("Cycles seen", _cycles(sheet)),
         *_part("Findings", _findings(sheet)),
-        *_part("Proposals", _proposals(sheet.proposals)),
+        *_part("Proposals", _proposals(sheet)),
         *_part("What this test can't tell", _bullets(sheet.costs)),
         *_part("Added later", _addenda(stored, zone)),
         *_part("Record", _record(stored)),
@@ -170,9 +170,12 @@ def _findings(sheet: Sheet) -> Iterator[str]:
         )
 
 
-def _proposals(proposals: Iterable[Proposal]) -> Iterator[str]:
-    for proposal in proposals:
-        mark = "  << recommended" if proposal.is_recommended else ""
+def _proposals(sheet: Sheet) -> Iterator[str]:
+    is_any = any(proposal.is_recommended for proposal in sheet.proposals)
+    if sheet.proposals_reason:
+        yield from wrapped(f"{'Recommended' if is_any else 'Nothing is recommended'}: {sheet.proposals_reason}")
+    for proposal in sheet.proposals:
+        mark = " (recommended)" if proposal.is_recommended else ""
         yield from wrapped(f"{proposal.name}: {proposal.title}{mark}")
         yield from wrapped(f"after {proposal.source}", "    ")
         if proposal.not_proposed_because is not None:

@@ -280,7 +280,7 @@ def proposals_section(loop: LoopConfig, proposed: ProposalSheet | None) -> tuple
             settings=settings_quantities(loop, proposal.fields),
             rounding_pct=proposal.rounding_pct,
             gain_factor=proposal.gain_factor,
-            cautions=((proposed.reason,) if proposal.name == proposed.recommended else ()) + proposal.cautions,
+            cautions=proposal.cautions,
         )
         for proposal in proposed.proposals
     ) + tuple(

@@ -186,6 +186,7 @@ class SupervisedTest:
             outcome=outcome_section(experiment, runner.faults),
             findings=findings_section(told.findings, time_base.value),
             proposals=proposals_section(self.loop, told.proposed),
+            proposals_reason="" if told.proposed is None else told.proposed.reason,
             costs=costs_of(self.plan, self.loop),
             journal_file=told.journal.name,
             journal_digest=sha256(told.journal.read_bytes()).hexdigest(),

@@ -296,6 +296,7 @@ class Sheet(_Stored):
     outcome: Outcome
     findings: Findings | None = None
     proposals: tuple[Proposal, ...] = ()
+    proposals_reason: str = ""
     costs: tuple[str, ...] = ()
     journal_file: str | None = None
     journal_digest: Digest | None = None

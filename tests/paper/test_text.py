@@ -67,7 +67,7 @@ def test_a_test_without_conclusion_says_why() -> None:
 
 def test_proposals_name_their_source_and_the_recommended_one_or_why_there_is_none() -> None:
     page = _page()
-    assert "some-rule-pi: a rule  << recommended" in page
+    assert "some-rule-pi: a rule (recommended)" in page
     assert "after a paper, table 1" in page
     assert "settings: GAIN 2.1 %OP/%PV, RESET 1.25 repeats/min" in page
     assert "forecast, peak of |S|: 1.6\n" in page
