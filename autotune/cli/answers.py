@@ -125,6 +125,13 @@ def test_answer(ended: TestEnd) -> TestAnswer:
     )
 
 
+def no_test_answer(outcome: str, text: str, refusal: Refusal | None = None) -> TestAnswer:
+    """A test that did not take place, as data: there is no sheet of it."""
+    fields: dict[str, object] = dict.fromkeys(TestAnswer.model_fields)
+    told = {"outcome": outcome, "text": text, "cycles": 0, "because": (), "cautions": ()}
+    return TestAnswer.model_validate({**fields, **told, "refusal": refusal_answer(refusal)})
+
+
 def proposals_answer(sheet: schema.Sheet) -> ProposalsAnswer:
     """A sheet's proposals as data."""
     return ProposalsAnswer(

@@ -10,6 +10,7 @@ from collections.abc import Sequence
 from typing import Protocol
 
 from autotune.cli.printing import Voice
+from autotune.loop.outcome import Refusal
 
 
 class Operator(Protocol):
@@ -24,8 +25,8 @@ class Operator(Protocol):
         """Show the cautions and ask for permission; the words of the permission, or ``None`` for no."""
         ...
 
-    def types_digest(self, cautions: Sequence[str], short_digest: str) -> str:
-        """Show the cautions and ask for the digest to be typed; what was typed."""
+    def types_digest(self, cautions: Sequence[str], short_digest: str) -> str | Refusal:
+        """Show the cautions and ask for the digest to be typed; what was typed, or why nobody is asked."""
         ...
 
 
@@ -49,8 +50,14 @@ class PersonAtTheTerminal:
         words = self._ask("Permission: who allowed this test, under which permit? ")
         return words or None
 
-    def types_digest(self, cautions: Sequence[str], short_digest: str) -> str:
-        """The digest typed is the confirmation."""
+    def types_digest(self, cautions: Sequence[str], short_digest: str) -> str | Refusal:
+        """The digest typed is the confirmation; a program that feeds the answer in is no person."""
+        if not (sys.stdin.isatty() and self._voice.console.file.isatty()):
+            return Refusal(
+                "NOT_AT_A_TERMINAL",
+                "settings are confirmed by a person who reads the digest and types it at a terminal",
+                "run the command in a terminal, without redirecting its input or its questions",
+            )
         self._show(cautions)
         return self._ask(f"Type {short_digest} to accept these cautions and write exactly these values: ")
 

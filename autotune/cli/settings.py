@@ -17,7 +17,13 @@ from autotune.service.cautions import BEFORE_SETTINGS_ARE_WRITTEN
 from autotune.service.changing import ChangeEnd, SettingsChange, digest_to_type, earlier_settings
 from autotune.service.local_api import WriteAnswer
 from autotune.service.persons import person_at_the_terminal
-from autotune.service.recovery import close_write_intents, open_write_intents, recover
+from autotune.service.recovery import (
+    NOT_SETTLED,
+    close_write_intents,
+    has_open_intent,
+    open_write_intents,
+    recover,
+)
 from autotune.service.sheet_mapping import settings_quantities
 from autotune.service.workplace import Workplace
 
@@ -40,7 +46,7 @@ async def write(voice: Voice, workplace: Workplace, name: str, proposal: str, op
     loop = workplace.loop(stored.sheet.loop)
     async with SettingsChange(workplace, loop) as change:
         if not await recover(workplace, loop, voice.say):
-            return ExitCode.STRANDED
+            return _not_settled(voice)
         plan = await change.plan_proposal(stored, proposal)
         return await _confirm_and_write(voice, change, plan, "write", stored.sheet.sheet_id, operator)
 
@@ -50,8 +56,14 @@ async def restore(
 ) -> ExitCode:
     """First give back what a broken-off test left, then offer the settings as found."""
     async with SettingsChange(workplace, loop) as change:
+        was_broken_off = has_open_intent(workplace, loop)
         if not await recover(workplace, loop, voice.say) and not open_write_intents(workplace, loop):
-            return ExitCode.STRANDED
+            return _not_settled(voice)
+        if was_broken_off and sheet is None and not workplace.store.list(loop.name):
+            text = f"no sheet of {loop.name} is kept yet, so there are no earlier settings to restore"
+            voice.say(f"{text[0].upper()}{text[1:]}.")
+            voice.answer(WriteAnswer(outcome="NOTHING_TO_WRITE", read_back_equal=False, text=text))
+            return ExitCode.DONE
         sheet_id, settings = earlier_settings(workplace, loop, sheet)
         plan = await change.plan_restore(settings, f"as found on {sheet_id}")
         if isinstance(plan, Refusal) and plan.code == "NOTHING_TO_WRITE":
@@ -64,6 +76,11 @@ async def restore(
         if code is ExitCode.DONE:
             close_write_intents(workplace, loop)
         return code
+
+
+def _not_settled(voice: Voice) -> ExitCode:
+    voice.answer(WriteAnswer(outcome="STRANDED", read_back_equal=False, text=NOT_SETTLED))
+    return ExitCode.STRANDED
 
 
 async def _confirm_and_write(
@@ -94,6 +111,8 @@ async def confirmed_change(
     """Show the exact values, have the digest typed, write, and say how it ended."""
     show_plan(voice, change.loop, plan)
     typed = operator.types_digest(BEFORE_SETTINGS_ARE_WRITTEN, digest_to_type(plan))
+    if isinstance(typed, Refusal):
+        return typed
     ended = await change.write(kind, sheet_id, plan, typed, person_at_the_terminal(operator.name))
     if not isinstance(ended, Refusal):
         phase = ended.state.phase

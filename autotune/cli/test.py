@@ -5,7 +5,7 @@ import signal
 from collections.abc import Iterator
 from contextlib import contextmanager
 
-from autotune.cli.answers import proposals_table, show_findings, test_answer
+from autotune.cli.answers import no_test_answer, proposals_table, show_findings, test_answer
 from autotune.cli.check import show_check
 from autotune.cli.exit_codes import ExitCode
 from autotune.cli.live import watch
@@ -16,11 +16,12 @@ from autotune.experiment.phases import Phase
 from autotune.experiment.room import allowed_op_pct
 from autotune.field.translate import settings_tags
 from autotune.loop.limits import AsFound
+from autotune.loop.outcome import Refusal
 from autotune.service.cautions import BEFORE_THE_OUTPUT_MOVES, WHERE_SETTINGS_ARE_PROVED
 from autotune.service.check import LoopCheck
 from autotune.service.persons import person_at_the_terminal
 from autotune.service.readiness import Level
-from autotune.service.recovery import recover
+from autotune.service.recovery import NOT_SETTLED, recover
 from autotune.service.runner import TestRunner
 from autotune.service.testing import Permission, SupervisedTest, TestEnd
 from autotune.service.workplace import Workplace
@@ -37,6 +38,7 @@ async def test(voice: Voice, workplace: Workplace, loop: LoopConfig, operator: O
     """Look, ask for permission, run, show what was found and proposed."""
     async with SupervisedTest(workplace, loop) as supervised:
         if not await recover(workplace, loop, voice.say):
+            voice.answer(no_test_answer("STRANDED", NOT_SETTLED))
             return ExitCode.STRANDED
         looked = await supervised.look()
         show_check(voice, looked)
@@ -45,6 +47,7 @@ async def test(voice: Voice, workplace: Workplace, loop: LoopConfig, operator: O
         ended = await permitted_test(voice, workplace, supervised, looked, operator)
     if ended is None:
         voice.say("No permission: nothing was written.")
+        voice.answer(no_test_answer("NOT_ALLOWED", "no permission was given; nothing was written"))
         return ExitCode.NO
     show_end(voice, loop, ended)
     voice.answer(test_answer(ended))
@@ -136,6 +139,9 @@ def show_end(voice: Voice, loop: LoopConfig, ended: TestEnd) -> None:
 
 def _refused(voice: Voice, looked: LoopCheck) -> ExitCode:
     voice.say("The test was refused; nothing was written.", style="stop")
+    first = next(finding for finding in looked.findings if finding.level is Level.STOP)
+    text = "; ".join(str(finding) for finding in looked.findings if finding.level is Level.STOP)
+    voice.answer(no_test_answer("REFUSED", text, Refusal(first.code, first.text, first.remedy)))
     is_link = any(finding.code == "LINK" for finding in looked.findings)
     return ExitCode.LINK if is_link else ExitCode.NO
 

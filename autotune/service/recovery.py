@@ -34,6 +34,8 @@ from autotune.service.workplace import Workplace
 
 Say = Callable[[str], None]
 
+NOT_SETTLED = "what broke off before is not settled: go to the panel and compare the loop with the values named"
+
 
 async def recover(workplace: Workplace, loop: LoopConfig, say: Say) -> bool:
     """Settle every open intent of ``loop``, whose lock the caller holds; whether the loop is settled now.
@@ -72,7 +74,8 @@ async def _settle(workplace: Workplace, loop: LoopConfig, intent: OpenIntent, pl
     finally:
         journal.close()
         await link.close()
-    say(f"{loop.name}: {ended.result.value}; {ended.detail}")
+    stranded = "" if is_settled else "STRANDED. GO TO THE PANEL NOW. "
+    say(f"{stranded}{loop.name}: {ended.result.value}; {ended.detail}")
     return is_settled
 
 
@@ -99,6 +102,12 @@ async def _settle_write(workplace: Workplace, loop: LoopConfig, intent: OpenInte
         f"Put the mode right there; 'autotune restore' writes the settings as found back."
     )
     return False
+
+
+def has_open_intent(workplace: Workplace, loop: LoopConfig) -> bool:
+    """Whether a test or a write of settings of ``loop`` broke off and is not settled."""
+    plans = (intent.plan or intent.write_plan for intent in open_intents(workplace.data_dir))
+    return any(plan is not None and plan.loop == loop.name for plan in plans)
 
 
 def close_write_intents(workplace: Workplace, loop: LoopConfig) -> None:

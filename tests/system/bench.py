@@ -6,7 +6,7 @@ from pathlib import Path
 from autotune.config.load import load
 from autotune.config.types import LoopConfig
 from autotune.service.clock import utc_now
-from autotune.service.estimator import InlineEstimator
+from autotune.service.estimator import Estimator, InlineEstimator
 from autotune.service.persons import person_at_the_terminal
 from autotune.service.testing import Permission
 from autotune.service.workplace import Workplace, open_workplace
@@ -58,10 +58,12 @@ def write_bench(folder: Path, port: int, changes: Sequence[Change] = ()) -> Path
     return file
 
 
-def bench_workplace(folder: Path, port: int, changes: Sequence[Change] = ()) -> tuple[Workplace, LoopConfig]:
-    """A workplace in this process; it identifies in place, since most of its tests are cut short."""
+def bench_workplace(
+    folder: Path, port: int, changes: Sequence[Change] = (), estimator: Estimator | None = None
+) -> tuple[Workplace, LoopConfig]:
+    """A workplace in this process; it identifies in place by default, since most of its tests are cut short."""
     kept = open_workplace(load(write_bench(folder, port, changes)), may_create=True)
-    workplace = Workplace(kept.configuration, kept.store, estimator=InlineEstimator())
+    workplace = Workplace(kept.configuration, kept.store, estimator=estimator or InlineEstimator())
     return workplace, workplace.loop(LOOP)
 
 

@@ -1,0 +1,71 @@
+"""A whole test over a real socket finds what the soft plant really is."""
+
+from cmath import rect
+from math import tau
+from pathlib import Path
+
+import pytest
+
+from autotune.identify.findings import Findings
+from autotune.loop.record import TimeBase
+from autotune.service.estimator import WorkerEstimator
+from autotune.service.testing import SupervisedTest
+from tests.system.bench import WITHOUT_CLOCK_TAGS, Change, bench_workplace, permission
+from tests.system.plant import LOOP, soft_plant
+from tests.system.together import Outcomes, Scenario, run_together
+from tests.system.true_plant import true_plant
+
+pytestmark = pytest.mark.socket
+
+CONFIGURATIONS: dict[str, tuple[Change, ...]] = {"with clock tags": (), "without them": tuple(WITHOUT_CLOCK_TAGS)}
+TRUE = true_plant("fast-loop", LOOP)
+
+
+async def identified(folder: Path, changes: tuple[Change, ...]) -> Findings:
+    async with soft_plant() as plant:
+        workplace, loop = bench_workplace(folder, plant.port, changes, WorkerEstimator())
+        await plant.press(f"enable {LOOP}")
+        await plant.until(lambda state: state["enable"])
+        async with SupervisedTest(workplace, loop) as supervised:
+            supervised.prepare(is_no_guard_accepted=False)
+            ended = await supervised.run(permission())
+    assert ended.sheet.outcome.ended == "COMPLETE", ended.sheet.outcome
+    assert isinstance(ended.findings, Findings), ended.findings
+    return ended.findings
+
+
+@pytest.fixture(scope="module")
+def findings(request: pytest.FixtureRequest, tmp_path_factory: pytest.TempPathFactory) -> Outcomes[Findings]:
+    folder = tmp_path_factory.mktemp("findings")
+
+    def scenario(name: str) -> Scenario[Findings]:
+        return lambda: identified(folder / name.replace(" ", "-"), CONFIGURATIONS[name])
+
+    return run_together(request, {name: scenario(name) for name in CONFIGURATIONS})
+
+
+@pytest.mark.parametrize("name", ["with clock tags"])
+def test_the_fourier_point_is_the_plants_own_response_within_two_percent(
+    findings: Outcomes[Findings], name: str
+) -> None:
+    found = findings.of(name)
+    assert found.time_base is TimeBase.PLC_CLOCK
+    point = found.fourier
+    expected = TRUE.response(point.frequency_rad_per_s)
+    assert abs(rect(point.gain, point.phase_rad) - expected) <= 0.02 * abs(expected)
+
+
+@pytest.mark.parametrize("name", CONFIGURATIONS)
+def test_the_intervals_hold_the_true_ultimate_point(findings: Outcomes[Findings], name: str) -> None:
+    found = findings.of(name)
+    assert (found.time_base is TimeBase.PLC_CLOCK) is (name == "with clock tags")
+    ultimate_gain, ultimate_period_s = TRUE.ultimate
+    gain, period_s = found.ultimate.ultimate_gain, found.ultimate.ultimate_period_s
+    assert gain.low <= ultimate_gain <= gain.high
+    assert period_s.low <= ultimate_period_s <= period_s.high
+    assert gain.high - gain.low < 0.5 * ultimate_gain
+
+
+def test_the_true_ultimate_point_is_where_its_gain_brings_the_response_to_minus_one() -> None:
+    ultimate_gain, ultimate_period_s = TRUE.ultimate
+    assert abs(ultimate_gain * TRUE.response(tau / ultimate_period_s) + 1.0) < 1e-9
