@@ -16,6 +16,7 @@ from autotune.cli import test as testing
 from autotune.cli.exit_codes import ExitCode
 from autotune.cli.operators import PersonAtTheTerminal
 from autotune.cli.printing import Voice
+from autotune.cli.soft_plant import Link
 from autotune.config.load import load
 from autotune.loop.settings import BlockFields, PidForm
 from autotune.service.workplace import Workplace, open_workplace
@@ -55,10 +56,11 @@ def rehearse(
         typer.Option("--scripted-operator", help="answer every question by a script; it reaches only the soft plant"),
     ] = False,
     loop: Annotated[str, typer.Option("--loop", metavar="LOOP", help="which loop of the juice skid")] = "TIC-204",
+    link: Annotated[Link, typer.Option("--link", help="the protocol to reach it by")] = Link.MODBUS,
     is_json: Json = False,
 ) -> None:
     """Do the whole job on the bundled soft plant over a real socket: check, test, confirm, write, read back."""
-    _run(rehearsing.rehearse(Voice(is_json=is_json), loop, is_scripted=scripted_operator))
+    _run(rehearsing.rehearse(Voice(is_json=is_json), loop, link, is_scripted=scripted_operator))
 
 
 @app.command()

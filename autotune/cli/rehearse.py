@@ -4,13 +4,9 @@ Only here a scripted operator exists, since everything it can reach is the plant
 itself has started.
 """
 
-import asyncio
-import json
-import sys
 import tempfile
-from collections.abc import AsyncIterator, Sequence
-from contextlib import asynccontextmanager
-from typing import Any
+from collections.abc import Sequence
+from pathlib import Path
 
 from autotune.cli.answers import quantities_answer, test_answer
 from autotune.cli.check import show_check
@@ -18,12 +14,9 @@ from autotune.cli.exit_codes import ExitCode
 from autotune.cli.operators import Operator, PersonAtTheTerminal
 from autotune.cli.printing import Voice
 from autotune.cli.settings import change_answer, confirmed_change
+from autotune.cli.soft_plant import Link, SoftPlant, rehearsal
 from autotune.cli.test import permitted_test, show_end
-from autotune.config.bundled import bundled_path
-from autotune.config.documents import Override
-from autotune.config.load import load
 from autotune.config.types import LoopConfig
-from autotune.errors import LinkClosed
 from autotune.loop.outcome import Refusal
 from autotune.service.aftermath import LoopAfter, watch_afterwards
 from autotune.service.changing import ChangeEnd, SettingsChange
@@ -37,47 +30,8 @@ from autotune.service.local_api import (
 from autotune.service.testing import SupervisedTest, TestEnd
 from autotune.service.workplace import Workplace, open_workplace
 
-RIG = "juice-skid"
-_AFTERWARDS_S = 5.0
-
-
-class SoftPlant:
-    """The soft plant as a process of its own; its panel is a line each way."""
-
-    def __init__(self, process: asyncio.subprocess.Process) -> None:
-        self._process = process
-
-    async def answer(self) -> dict[str, Any]:
-        """The next line that the plant says.  Raises ``LinkClosed`` when it has ended."""
-        line = b"" if self._process.stdout is None else await self._process.stdout.readline()
-        if not line:
-            raise LinkClosed("the soft plant ended by itself; run 'python -m simulator juice-skid' to see why")
-        answer: dict[str, Any] = json.loads(line)
-        return answer
-
-    async def press(self, line: str) -> dict[str, Any]:
-        """One line at the plant's own panel, and its answer."""
-        if self._process.stdin is not None:
-            self._process.stdin.write(f"{line}\n".encode())
-            await self._process.stdin.drain()
-        return await self.answer()
-
-
-@asynccontextmanager
-async def soft_plant(rig: str = RIG) -> AsyncIterator[tuple[SoftPlant, int]]:
-    """Start the soft plant on a free port of this machine; it ends with the block."""
-    process = await asyncio.create_subprocess_exec(
-        sys.executable, "-m", "simulator", rig, "--modbus", "0", "--until-eof",
-        stdin=asyncio.subprocess.PIPE, stdout=asyncio.subprocess.PIPE, start_new_session=True,
-    )  # fmt: skip
-    plant = SoftPlant(process)
-    try:
-        ready = await plant.answer()
-        yield plant, int(ready["modbus_port"])
-    finally:
-        if process.returncode is None:
-            process.terminate()
-        await process.wait()
+_STEADY_S = 3.0
+_AFTERWARDS_S = 30.0
 
 
 class ScriptedOperator:
@@ -105,14 +59,13 @@ class ScriptedOperator:
             self._voice.say(f" {number}. {caution}", style="caution")
 
 
-async def rehearse(voice: Voice, loop_name: str, *, is_scripted: bool) -> ExitCode:
+async def rehearse(voice: Voice, loop_name: str, link: Link, *, is_scripted: bool) -> ExitCode:
     """Check, enable at the panel, test, compare, confirm, write, read back, watch; all on the soft plant."""
     operator: Operator = ScriptedOperator(voice) if is_scripted else PersonAtTheTerminal(voice)
     with tempfile.TemporaryDirectory(prefix="autotune-rehearsal-") as folder:
-        async with soft_plant() as (plant, port):
-            overrides: dict[str, Override] = {"controller.skid.port": port, "data_dir": folder}
-            workplace = open_workplace(load(bundled_path("rehearsal.toml"), overrides), may_create=True)
-            return await _whole_job(voice, workplace, workplace.loop(loop_name), plant, operator)
+        async with rehearsal(link, Path(folder)) as started:
+            workplace = open_workplace(started.configuration, may_create=True)
+            return await _whole_job(voice, workplace, workplace.loop(loop_name), started.plant, operator)
 
 
 async def _whole_job(
@@ -154,7 +107,7 @@ async def _change(
         if isinstance(written, Refusal):
             voice.say(f"Refused, nothing was written. {written}", style="stop")
             return written, None
-    after = await watch_afterwards(workplace, loop, ended, _AFTERWARDS_S)
+    after = await watch_afterwards(workplace, loop, ended, _STEADY_S, _AFTERWARDS_S)
     voice.say(after.in_words, style="good" if after.is_steady else "caution")
     return written, after
 

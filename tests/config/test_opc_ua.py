@@ -1,6 +1,7 @@
 """Configurations of OPC UA servers: what a right file becomes, and how each mistake is told."""
 # ruff: noqa: E501 - the table reads as rows
 
+from dataclasses import replace
 from pathlib import Path
 
 import pytest
@@ -204,6 +205,15 @@ def test_a_barred_node_that_no_loop_writes_is_kept_with_the_endpoint(folder: Pat
     endpoint = loop_of("TIC-204", folder / EXAMPLE).controller.endpoint
     assert isinstance(endpoint, OpcUaEndpoint)
     assert endpoint.never_written == ("ns=2;s=SIS.bypass",)
+
+
+def test_the_rehearsal_over_opc_ua_has_the_loops_of_the_one_over_modbus_tag_for_tag() -> None:
+    over_opc_ua, over_modbus = load(bundled_path("rehearsal-opc-ua.toml")), load(bundled_path("rehearsal.toml"))
+    for one, other in zip(over_opc_ua.loops, over_modbus.loops, strict=True):
+        assert replace(one, controller=other.controller, tags=other.tags, digest="") == replace(other, digest="")
+        assert [name for name, _ in one.tags] == [name for name, _ in other.tags]
+        assert one.controller.plc_scan_s == other.controller.plc_scan_s
+    assert over_opc_ua.concurrent_tests_at_most == over_modbus.concurrent_tests_at_most
 
 
 def test_a_barred_node_of_a_modbus_controller_is_told(folder: Path) -> None:

@@ -15,8 +15,10 @@ from asyncua.ua.attribute_ids import AttributeIds
 
 from autotune.config.types import OpcUaEndpoint, OpcUaTag
 from autotune.errors import LinkClosed, LinkError, LinkRefused, WriteForbidden
+from autotune.field.facts import NodeFact, ServerFacts
 from autotune.field.link import RawValue, Reading, ReadReport
 from autotune.field.modbus.back_off import BackOff
+from autotune.field.opc_ua.describe import describe
 from autotune.field.opc_ua.nodes import FoundNode, find_nodes
 from autotune.field.opc_ua.opening import Opening
 from autotune.field.opc_ua.session import ServerRefused, Session
@@ -141,6 +143,18 @@ class OpcUaLink:
         session, self._session = self._session, None
         if session is not None:
             await session.close()
+
+    async def facts(self) -> ServerFacts:
+        """What the server tells about the tags' nodes, and the certificates in use.  Raises as ``read``."""
+        async with self._one_at_a_time:
+            session = self._live_session()
+            found = {name: (node.node_id, node.name) for name, node in self._nodes.items() if node.node_id is not None}
+            described = {fact.name: fact for fact in await describe(session, found)}
+        nodes = tuple(
+            described[name] if name in described else NodeFact(name, node.name, fault=node.fault)
+            for name, node in self._nodes.items()
+        )
+        return ServerFacts(nodes, self._opening.certificates)
 
     def _drop(self) -> None:
         if self._session is not None:

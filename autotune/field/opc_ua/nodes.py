@@ -148,7 +148,7 @@ async def _with_types(session: Session, found: Mapping[str, FoundNode]) -> dict[
     answers = iter(await read_attributes(session, wanted))
     typed = dict(found)
     for (name, node), present, declared in zip(known.items(), answers, answers, strict=False):
-        held = held_type_of(present) or _built_in(declared)
+        held = held_type_of(present) or built_in_type(declared)
         typed[name] = FoundNode(node.node_id, node.name, held, _reading_fault(present))
     return typed
 
@@ -158,7 +158,8 @@ def _reading_fault(present: ua.DataValue) -> str:
     return "" if code is None or not code.is_bad() else in_words(code.value)
 
 
-def _built_in(declared: ua.DataValue) -> DataType | None:
+def built_in_type(declared: ua.DataValue) -> DataType | None:
+    """The type of a number that a DataType attribute tells, where it is one of the standard's own."""
     data_type = None if declared.Value is None else declared.Value.Value
     if not isinstance(data_type, ua.NodeId) or data_type.NamespaceIndex != 0:
         return None

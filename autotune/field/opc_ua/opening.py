@@ -20,6 +20,7 @@ from cryptography.hazmat.primitives.serialization import Encoding
 
 from autotune.config.types import MessageSecurity, OpcUaEndpoint, SecurityPolicy
 from autotune.errors import LinkClosed, LinkError
+from autotune.field.facts import CertificateFact
 from autotune.field.opc_ua.certificates import (
     OwnCertificate,
     is_same_thumbprint,
@@ -65,14 +66,17 @@ class Opening:
         self._server: x509.Certificate | None = None
 
     @property
-    def own(self) -> OwnCertificate | None:
-        """Our certificate, once it was needed."""
-        return self._own
-
-    @property
-    def server(self) -> x509.Certificate | None:
-        """The server's certificate, once it was found to be the pinned one."""
-        return self._server
+    def certificates(self) -> tuple[CertificateFact, ...]:
+        """Those in use: ours once it was needed, the server's once it was found to be the pinned one."""
+        facts = []
+        if self._own is not None:
+            own = self._own
+            expires = own.certificate.not_valid_after_utc
+            facts.append(CertificateFact("our own", own.thumbprint, expires, str(own.path)))
+        if self._server is not None:
+            server = self._server
+            facts.append(CertificateFact("the server's", thumbprint_of(server), server.not_valid_after_utc))
+        return tuple(facts)
 
     async def open(self) -> Session:
         """A fresh, activated session.  Raises ``LinkTimeout``, or ``LinkClosed`` with what to do."""
