@@ -81,9 +81,17 @@ def poles(shape: Array) -> ComplexArray:
 
 
 def shape_of(poles_per_period: ComplexArray) -> Array:
-    """The shape parameters of these poles, all in the left half plane, conjugates beside each other."""
-    odd = len(poles_per_period) % 2
-    shape = [np.log(-poles_per_period[0].real)] if odd else []
-    for first, second in poles_per_period[odd:].reshape(-1, 2):
+    """The shape parameters of these poles, all in the left half plane, conjugates beside each other.
+
+    Real poles are paired with their nearest, so that a pair may turn complex from there.
+    """
+    found = poles_per_period
+    if not np.any(found.imag):
+        found = found[np.argsort(-found.real)]
+        if len(found) == 3 and found[2] * found[0] > found[1] ** 2:  # the slower two are the nearer
+            found = np.roll(found, 1)
+    odd = len(found) % 2
+    shape = [np.log(-found[0].real)] if odd else []
+    for first, second in found[odd:].reshape(-1, 2):
         shape += [np.log((first * second).real), np.log(-(first + second).real)]
-    return np.clip(np.array(shape), SHAPE_LOW, SHAPE_HIGH)
+    return np.asarray(np.clip(np.array(shape), SHAPE_LOW, SHAPE_HIGH))

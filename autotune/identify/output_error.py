@@ -7,7 +7,7 @@ counted in observed periods throughout.
 """
 
 from collections.abc import Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 
@@ -165,12 +165,6 @@ def refined(trace: Trace, start: Fit, tolerance: float = 1e-6, steps_at_most: in
     return fit
 
 
-def best_of(trace: Trace, structure: Structure, starts: Sequence[Array], refine: int = 2) -> Fit:
-    """The best fit from these starts: all are looked at, the best ``refine`` of them refined."""
-    looked = sorted((fitted(trace, structure, start) for start in starts), key=lambda fit: fit.misfit)
-    return min((refined(trace, fit) for fit in looked[:refine]), key=lambda fit: fit.misfit)
-
-
-def with_ramp(trace: Trace) -> Trace:
-    """The same test where PV may drift."""
-    return replace(trace, has_ramp=True)
+def best_of(trace: Trace, structure: Structure, starts: Sequence[Array]) -> Fit:
+    """The fit from the likeliest of these starts."""
+    return refined(trace, min((fitted(trace, structure, start) for start in starts), key=lambda fit: fit.misfit))

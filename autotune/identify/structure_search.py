@@ -15,41 +15,59 @@ from autotune.identify.waveforms import Array
 FIRST_DEAD_TIMES = (0.02, 0.1, 0.2, 0.3, 0.45)  # periods
 FIRST_LAGS = (0.03, 0.15, 0.5, 2.0, 20.0)
 LAG_SHARES = (0.15, 0.4, 0.7)  # of the dead time that a new lag takes over
-DEAD_TIME_KICKS = (0.4, 0.75, 1.3, 1.8)
+PAIR_SHARES, PAIR_DAMPINGS = (0.5, 0.9), (0.4, 0.75)
+DEAD_TIME_KICKS = ((0.4, 0.75), (1.3, 1.8))  # down, up
 
 
 def bank_fits(trace: Trace) -> tuple[Fit, ...]:
     """One fit a structure of the bank, in its order."""
     fits: dict[Structure, Fit] = {}
     for structure in BANK:
-        fits[structure] = best_of(trace, structure, list(_starts(structure, fits)))
+        found = [best_of(trace, structure, list(family)) for family in _start_families(structure, fits)]
+        fits[structure] = min(found, key=lambda fit: fit.misfit)
     return tuple(fits.values())
 
 
 def updated_fits(trace: Trace, earlier: tuple[Fit, ...]) -> tuple[Fit, ...]:
     """The fits of a test that has grown since: each structure from where it stood."""
-    return tuple(best_of(trace, fit.structure, [fit.parameters], refine=1) for fit in earlier)
+    return tuple(best_of(trace, fit.structure, [fit.parameters]) for fit in earlier)
 
 
-def _starts(structure: Structure, fits: dict[Structure, Fit]) -> Iterator[Array]:
+def _start_families(structure: Structure, fits: dict[Structure, Fit]) -> Iterator[Iterator[Array]]:
+    """Starts by where they come from; the best of each family deserves its own descent."""
     simpler = fits.get(Structure(structure.order - 1, structure.zeros))
+    if simpler is not None:
+        yield _with_another_lag(simpler)
+    elif structure.order == 1:
+        yield (np.array([-np.log(lag), dead_time]) for dead_time in FIRST_DEAD_TIMES for lag in FIRST_LAGS)
+    if structure == Structure(3, 0):
+        yield _with_a_pair(fits[Structure(1, 0)])
     if structure.zeros:
         plain = fits[Structure(structure.order, 0)]
-        for kick in DEAD_TIME_KICKS:
-            yield np.append(plain.shape, kick * plain.dead_time + 0.02)
-    elif simpler is None:
-        for dead_time in FIRST_DEAD_TIMES:
-            for lag in FIRST_LAGS:
-                yield np.array([-np.log(lag), dead_time])
-    if simpler is not None:
-        yield from _with_another_lag(simpler)
+        for kicks in DEAD_TIME_KICKS:
+            yield (np.append(plain.shape, kick * plain.dead_time + 0.02) for kick in kicks)
 
 
 def _with_another_lag(fit: Fit) -> Iterator[Array]:
+    """A lag that takes its time from the dead time, or from the fastest lag."""
     before = poles(fit.shape)
     for share in LAG_SHARES:
         lag = share * max(fit.dead_time, 0.03)
         yield np.append(shape_of(np.append(-1 / lag, before)), max(fit.dead_time - lag, 0.0))
+    fastest = int(np.argmin(before.real))
+    if before[fastest].imag == 0:
+        halves = np.append(2 * before[fastest], np.where(np.arange(len(before)) == fastest, 2 * before, before))
+        yield np.append(shape_of(halves), fit.dead_time)
+
+
+def _with_a_pair(fit: Fit) -> Iterator[Array]:
+    """A damped pair beside the one lag, of as much lag at low frequency (2 zeta/w) as it takes from the dead time."""
+    for share in PAIR_SHARES:
+        for damping in PAIR_DAMPINGS:
+            w = 2 * damping / (share * max(fit.dead_time, 0.03))
+            yield np.append(
+                np.concatenate((fit.shape, [2 * np.log(w), np.log(2 * damping * w)])), (1 - share) * fit.dead_time
+            )
 
 
 def polished(trace: Trace, fit: Fit) -> Fit:

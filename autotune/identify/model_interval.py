@@ -1,0 +1,195 @@
+"""How sure a fitted plant is: the covariance of its parameters, its ultimate point's interval, and draws.
+
+The residuals' influence on a parameter is known (least squares), and residuals that hang together, because no
+structure is quite the plant, count as W. K. Newey and K. D. West, Econometrica 55 (1987) 703; never less than white
+noise.  Beside it stand what structures of nearly the same BIC say, and floors for what no structure has.
+"""
+
+from dataclasses import dataclass
+from math import exp, hypot, log, sqrt
+
+import numpy as np
+from scipy.stats import norm, qmc
+
+from autotune.identify.model import ModelWithDraws, ProcessModel
+from autotune.identify.model_point import Crossing, crossing
+from autotune.identify.output_error import Fit
+from autotune.identify.plant_fit import PlantFits, model_in_seconds, process_model
+from autotune.identify.waveforms import Array
+
+GAIN_FLOOR_RATIO, PERIOD_FLOOR_RATIO = 0.004, 0.0012  # standard deviations: no plant is one of the structures
+LAGS_PER_PERIOD = 0.25  # over which residuals may hang together
+NEAR_TIE_BIC = 6.0
+WEIGHED_BIC = 12.0  # beyond, a weight of 0.2 %
+FLAT_RATIO = 1e-9
+COVERED = 1.959964
+DRAWS = 64
+DRAW_SD_AT_MOST = 2.5
+HALF_WIDTH_AT_MOST = log(2.0)  # of ln Ku: wider, the linear error tells nothing
+
+
+@dataclass(frozen=True, slots=True)
+class Sureness:
+    """One structure's ultimate point (periods) and what limits it.
+
+    ``gain_sd`` and ``period_sd`` are of the logarithms; ``covariance`` is that of shape, dead time, numerator.
+    """
+
+    fit: Fit
+    point: Crossing
+    gain_sd_ratio: float
+    period_sd_ratio: float
+    covariance: Array
+
+
+@dataclass(frozen=True, slots=True)
+class ModelPoint:
+    """ln Ku and ln of Tu in seconds of the best structure, with half widths (95 %) by cause, as ratios.
+
+    ``disagreeing`` are structures nearly as likely whose own interval doesn't hold the best one's point.
+    """
+
+    log_gain: float
+    log_period_s: float
+    gain_noise_ratio: float
+    period_noise_ratio: float
+    gain_spread_ratio: float
+    period_spread_ratio: float
+    kappa_ratio: float
+    disagreeing: tuple[Sureness, ...]
+
+    @property
+    def gain_half_ratio(self) -> float:
+        """Half width of ln Ku."""
+        return hypot(self.gain_noise_ratio, self.gain_spread_ratio, COVERED * GAIN_FLOOR_RATIO)
+
+    @property
+    def period_half_ratio(self) -> float:
+        """Half width of ln Tu."""
+        return hypot(self.period_noise_ratio, self.period_spread_ratio, COVERED * PERIOD_FLOOR_RATIO)
+
+
+def sureness(fit: Fit, samples_per_period: float) -> Sureness | None:
+    """Point and covariance of one structure; ``None`` where it has no ultimate point."""
+    point = crossing(fit)
+    if point is None:
+        return None
+    covariance = _covariance(fit, max(4, round(LAGS_PER_PERIOD * samples_per_period)))
+    variances = np.einsum("ip,pq,iq->i", point.gradients, covariance, point.gradients)
+    return Sureness(fit, point, sqrt(max(variances[0], 0.0)), sqrt(max(variances[1], 0.0)), covariance)
+
+
+def _covariance(fit: Fit, lags: int) -> Array:
+    """Of shape, dead time and numerator; a parameter at its bound, and a flat direction, count as known."""
+    rows = np.concatenate((fit.slopes, fit.columns))
+    known = np.zeros(len(rows), dtype=bool)
+    known[len(fit.slopes) - 1] = fit.dead_time <= 0
+    scale = np.where(known, np.inf, np.maximum(np.linalg.norm(rows, axis=1), 1e-300))
+    influence = np.linalg.pinv((rows / scale[:, None]).T, rcond=FLAT_RATIO) / scale[:, None]
+    kept = len(fit.slopes) + fit.structure.outputs
+    influence = influence[:kept]
+    samples = rows.shape[1]
+    freedom = samples / max(samples - len(rows), 1)
+    white = (influence @ influence.T) * fit.misfit / samples * freedom
+    moved = influence * fit.residual_pct
+    together = moved @ moved.T
+    for lag in range(1, min(lags, samples - 1) + 1):
+        across = moved[:, lag:] @ moved[:, :-lag].T
+        together += (1 - lag / (lags + 1)) * (across + across.T)
+    return _larger(white, together * freedom)
+
+
+def _larger(white: Array, together: Array) -> Array:
+    """Newey and West's covariance, raised to the white one in the directions where it is the smaller."""
+    scale = np.sqrt(np.maximum(np.diag(white), 1e-300))
+    ratio = together / np.outer(scale, scale)
+    base = white / np.outer(scale, scale)
+    root_value, root = np.linalg.eigh(base)
+    root_value = np.maximum(root_value, 1e-12 * root_value[-1])
+    half = root * np.sqrt(root_value)
+    inverse = (root / np.sqrt(root_value)).T
+    value, direction = np.linalg.eigh(inverse @ ratio @ inverse.T)
+    turned = half @ direction
+    return np.asarray((turned * np.maximum(value, 1.0)) @ turned.T * np.outer(scale, scale))
+
+
+def model_point(found: PlantFits) -> tuple[ModelPoint, tuple[tuple[Sureness, float], ...]] | None:
+    """The best structure's ultimate point with its widths, and all weighed structures; ``None`` where it has none."""
+    best_bic = found.best.bic
+    per_period = samples_per_period(found)
+    weighed = [
+        (sure, exp(-(fit.bic - best_bic) / 2))
+        for fit in found.fits
+        if fit.bic < best_bic + WEIGHED_BIC and (sure := sureness(fit, per_period)) is not None
+    ]
+    if not weighed or weighed[0][0].fit is not found.best:
+        return None
+    best = weighed[0][0]
+    total = sum(weight for _, weight in weighed)
+
+    def spread(points: list[float]) -> float:
+        return sqrt(sum(w * (x - points[0]) ** 2 for x, (_, w) in zip(points, weighed, strict=True)) / total)
+
+    point = ModelPoint(
+        log_gain=best.point.log_gain,
+        log_period_s=best.point.log_period + log(found.period_s),
+        gain_noise_ratio=COVERED * best.gain_sd_ratio,
+        period_noise_ratio=COVERED * best.period_sd_ratio,
+        gain_spread_ratio=COVERED * spread([sure.point.log_gain for sure, _ in weighed]),
+        period_spread_ratio=COVERED * spread([sure.point.log_period for sure, _ in weighed]),
+        kappa_ratio=best.point.kappa_ratio,
+        disagreeing=tuple(
+            sure for sure, _ in weighed if sure.fit.bic < best_bic + NEAR_TIE_BIC and _disagree(best, sure)
+        ),
+    )
+    return point, tuple((sure, weight / total) for sure, weight in weighed)
+
+
+def samples_per_period(found: PlantFits) -> float:
+    """Samples in one observed period, on the average."""
+    at = found.trace.stairs.sample_s
+    return len(at) / float(at[-1] - at[0])
+
+
+def _disagree(one: Sureness, other: Sureness) -> bool:
+    gain = abs(one.point.log_gain - other.point.log_gain)
+    return gain > COVERED * hypot(max(one.gain_sd_ratio, other.gain_sd_ratio), GAIN_FLOOR_RATIO)
+
+
+def model_with_draws(
+    found: PlantFits, weighed: tuple[tuple[Sureness, float], ...], because: tuple[str, ...]
+) -> ModelWithDraws:
+    """The best model, and draws from each weighed structure's covariance; their weights are the structures'.
+
+    The draws are a fixed low-discrepancy set within DRAW_SD_AT_MOST deviations of each direction; those without
+    an ultimate point or with a negative dead time are left out.
+    """
+    draws: list[ProcessModel] = []
+    weights: list[float] = []
+    for sure, weight in weighed:
+        models = list(_draws(sure, found.period_s, max(8, round(DRAWS * weight))))
+        draws += models
+        weights += [weight / len(models)] * len(models) if models else []
+    total = sum(weights)
+    return ModelWithDraws(
+        best=process_model(found.best, found.period_s),
+        draws=tuple(draws),
+        weights=tuple(weight / total for weight in weights),
+        because=because,
+    )
+
+
+def _draws(sure: Sureness, period_s: float, count: int) -> list[ProcessModel]:
+    order = len(sure.fit.shape)
+    size = len(sure.covariance)
+    cube = qmc.Halton(size, scramble=False).random(count + 1)[1:]
+    normal = np.clip(norm.ppf(cube), -DRAW_SD_AT_MOST, DRAW_SD_AT_MOST)
+    scale = np.sqrt(np.maximum(np.diag(sure.covariance), 1e-300))
+    value, direction = np.linalg.eigh(sure.covariance / np.outer(scale, scale))
+    moved = normal @ (direction * np.sqrt(np.maximum(value, 0.0))).T * scale
+    best = np.concatenate((sure.fit.parameters, sure.fit.numerator))
+    return [
+        model_in_seconds(drawn[:order], float(drawn[order]), drawn[order + 1 :], period_s)
+        for drawn in best + moved
+        if drawn[order] >= 0 and drawn[order + 1] > 0
+    ]
