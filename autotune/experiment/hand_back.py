@@ -80,7 +80,7 @@ def _is_readable(plan: TestPlan, sample: Sample) -> bool:
     return has_output and sample.mode is not LoopMode.NOT_KNOWN and (sample.guard is not None) == plan.has_guard
 
 
-def _is_as_found(plan: TestPlan, as_found: AsFound, sample: Sample) -> bool:
+def is_as_found(plan: TestPlan, as_found: AsFound, sample: Sample) -> bool:
     """Whether the loop reads as found; in automatic the output is the block's own and not compared."""
     if sample.mode is not as_found.mode or (not _is_sp_free(plan, as_found) and has_sp_changed(as_found, sample)):
         return False
@@ -95,7 +95,7 @@ def _is_sp_free(plan: TestPlan, as_found: AsFound) -> bool:
 def _after_restart(plan: TestPlan, as_found: AsFound, held: Held, sample: Sample) -> HandBackStep:
     if sample.boot_count is None:
         return HandBackWrites((), held)
-    if _is_as_found(plan, as_found, sample):
+    if is_as_found(plan, as_found, sample):
         return HandBackDone(HandBackResult.RESTORED, f"the PLC restarted and reads as found; {by_hand(as_found)}")
     return hand_back_overdue(as_found, "the PLC restarted, so nothing was written")
 
@@ -104,7 +104,7 @@ def _verify_only(plan: TestPlan, as_found: AsFound, held: Held, sample: Sample) 
     """The guard no longer passes anything of ours on: see what it left, and at most release the token."""
     if sample.guard is not None and sample.guard.holder not in (None, 0, held.token):
         return _taken(f"the PLC's guard is held by token {sample.guard.holder}", as_found)
-    if _is_as_found(plan, as_found, sample):
+    if is_as_found(plan, as_found, sample):
         result = HandBackResult.GUARD_GAVE_BACK if held.has_guard_given_back else HandBackResult.RESTORED
         return _release_once(held, sample, HandBackDone(result, by_hand(as_found)))
     if has_failed_pv(sample) and _is_at_home(plan, as_found, sample):

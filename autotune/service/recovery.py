@@ -15,14 +15,14 @@ from autotune.confirmed_write.plan import WritePlan
 from autotune.errors import LinkError, WriteForbidden
 from autotune.experiment.events import HandBackEnded, HandBackResult
 from autotune.experiment.gate import gate_hand_back
-from autotune.experiment.hand_back import by_hand
+from autotune.experiment.hand_back import by_hand, is_as_found
 from autotune.experiment.held import Held, is_ours
 from autotune.experiment.plan import TestPlan
 from autotune.field.link import LoopLink
 from autotune.field.translate import WireCommand, to_raw
 from autotune.loop.limits import AsFound
 from autotune.loop.mode import LoopMode
-from autotune.loop.sample import GuardState, Sample
+from autotune.loop.sample import Sample
 from autotune.loop.settings import BlockFields
 from autotune.loop.write import WriteReport
 from autotune.service.hand_back import HandBackRun
@@ -154,8 +154,10 @@ async def _look_and_give_back(
         sample = await reader.read_sample()
     except LinkError as fault:
         return HandBackEnded(now_s(), HandBackResult.NOT_CONFIRMED, f"{fault}; {by_hand(as_found)}")
-    held = held_at_the_end(intent, plan, sample)
-    doubt = why_not_ours(plan, as_found, held, sample, _age(intent, workplace.wall_clock()), loop.recover_within_s)
+    if sample.guard is None and is_as_found(plan, as_found, sample):
+        return HandBackEnded(now_s(), HandBackResult.RESTORED, f"nothing had to be written; {by_hand(as_found)}")
+    held = held_at_the_end(intent, plan)
+    doubt = why_not_ours(intent, plan, as_found, sample, workplace.wall_clock(), loop.recover_within_s)
     if doubt is not None:
         present = f"present: output {_shown(sample.op_pct)}, setpoint {_shown(sample.sp_pct)}, mode {sample.mode.value}"
         return HandBackEnded(now_s(), HandBackResult.NOT_CONFIRMED, f"{doubt}; {present}; {by_hand(as_found)}")
@@ -170,48 +172,53 @@ async def _look_and_give_back(
     return await HandBackRun(plan, as_found, held, reader, write).run()
 
 
-def held_at_the_end(intent: OpenIntent, plan: TestPlan, sample: Sample) -> Held:
-    """What we held when we died: the last writes of the journal, which may or may not have landed."""
+def held_at_the_end(intent: OpenIntent, plan: TestPlan) -> Held:
+    """What we held when we died.
+
+    The last write of the journal may never have gone out: we write it down before we send it.  So until its answer
+    is written down too, the loop may just as well stand where the write before has left it; both are ours.
+    """
     output, mode = intent.last_output, intent.last_mode
     held = Held(token=plan.token)
     if mode is not None:
-        held = replace(held, mode=mode.mode, modes_may_read=(mode.mode,))
-    if output is not None:
+        held = replace(held, mode=mode.mode, modes_may_read=intent.modes)
+    if output is not None and intent.outputs_pct:
         held = replace(
             held,
             op_pct=output.op_pct,
             sequence=output.sequence,
             heartbeat=output.heartbeat,
-            op_may_read_pct=(output.op_pct, output.op_pct),
+            op_may_read_pct=(min(intent.outputs_pct), max(intent.outputs_pct)),
         )
     return held
 
 
 def why_not_ours(
-    plan: TestPlan, as_found: AsFound, held: Held, sample: Sample, age: timedelta | None, within_s: float
+    intent: OpenIntent, plan: TestPlan, as_found: AsFound, sample: Sample, now: datetime, within_s: float
 ) -> str | None:
-    """Why nothing may be written now, or ``None``.
+    """Why nothing may be written now though nobody else has the loop, or ``None``.
 
-    By itself a recovery writes only when the token is still ours, the PLC has not restarted, mode and
-    output equal our last write and the intent is young.  A guard that gave back is only verified, which
-    ``next_hand_back_step`` sees to.
+    By itself a recovery writes only when the token is still ours, the PLC has not restarted, mode and output are
+    such as our last writes explain, and the intent is young.  Exactly these outputs count, none between them: a
+    block that was on its way has long arrived.  A guard that gave back, a restart and a mode that is not ours are
+    left to ``next_hand_back_step``, which writes nothing then but the release of our token.
     """
-    if sample.guard is not None and sample.guard.state is GuardState.GAVE_BACK:
+    if sample.guard is not None and not is_ours(sample.guard, plan.token):
         return None
     if as_found.boot_count is not None and sample.boot_count != as_found.boot_count:
-        return None  # the hand-back itself writes nothing after a restart
-    if sample.guard is not None and not is_ours(sample.guard, plan.token):
-        return None  # verified only
+        return None
+    if sample.mode not in (intent.modes or (as_found.mode,)):
+        return None
+    age = None if intent.last_utc is None else now - intent.last_utc
     if age is None or not timedelta(0) <= age <= timedelta(seconds=within_s):
         return f"the test broke off longer ago than recover_within_s = {within_s:g} s, so nothing is written"
-    in_reach = sample.op_pct is not None and held.has_op_in_reach(sample.op_pct, plan.limits.op_resolution_pct)
-    if sample.mode is LoopMode.MAN and held.op_pct is not None and not in_reach:
-        return f"the output is not at our last write of {held.op_pct:.2f} %, so nothing is written"
-    return None  # in another mode somebody took it: the hand-back sees that and writes nothing
-
-
-def _age(intent: OpenIntent, now: datetime) -> timedelta | None:
-    return None if intent.last_utc is None else now - intent.last_utc
+    resolution_pct = plan.limits.op_resolution_pct
+    is_explained = sample.op_pct is not None and any(
+        abs(sample.op_pct - output_pct) <= resolution_pct for output_pct in intent.outputs_pct
+    )
+    if sample.mode is LoopMode.MAN and intent.last_output is not None and not is_explained:
+        return f"the output is not at our last write of {intent.last_output.op_pct:.2f} %, so nothing is written"
+    return None
 
 
 def _shown(reading_pct: float | None) -> str:

@@ -35,6 +35,7 @@ from autotune.field.link import LoopLink
 from autotune.field.translate import WireCommand, to_raw
 from autotune.loop.outcome import Refusal
 from autotune.loop.write import WriteReport
+from autotune.service.clock import TICK_S
 from autotune.service.deaf import to_the_end
 from autotune.service.hand_back import HandBackRun
 from autotune.service.journal import Journal, LineKind
@@ -119,10 +120,11 @@ class TestRunner:
     async def _advance(self, grid: ScanGrid) -> None:
         """Wait for a wish, the next scan or the machine's own deadline, whichever comes first."""
         deadline_s = next_deadline_s(self.experiment)
-        wish = await self._wish_before(grid.due_s if deadline_s is None else min(grid.due_s, deadline_s))
+        due_s = grid.due_s if deadline_s is None else min(grid.due_s, deadline_s + TICK_S)
+        wish = await self._wish_before(due_s)
         if wish is not None:
             await self._feed(wish)
-        elif _now_s() < grid.due_s:
+        elif due_s < grid.due_s:
             await self._feed(TimePassed(_now_s()))
         else:
             missed = grid.take(_now_s())

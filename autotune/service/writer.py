@@ -25,6 +25,7 @@ from autotune.field.link import LoopLink
 from autotune.field.translate import field_to_raw, to_raw
 from autotune.loop.outcome import Refusal
 from autotune.loop.write import WriteReport
+from autotune.service.clock import TICK_S
 from autotune.service.deaf import to_the_end
 from autotune.service.journal import Journal
 from autotune.service.reading import LoopReader
@@ -84,7 +85,7 @@ class SettingsWriter:
         return state
 
     async def _wait(self, deadline_s: float | None) -> Event:
-        await asyncio.sleep(0.0 if deadline_s is None else max(deadline_s - _now_s(), 0.0))
+        await asyncio.sleep(0.0 if deadline_s is None else max(deadline_s + TICK_S - _now_s(), 0.0))
         return TimePassed(_now_s())
 
     async def _perform(self, command: Command) -> Event:
