@@ -117,7 +117,7 @@ async def terminal(*arguments: str | Path) -> AsyncIterator[Terminal]:
     termios.tcsetwinsize(slave, (50, 200))
     process = await asyncio.create_subprocess_exec(
         *_COMMAND, *map(str, arguments), cwd=ROOT, stdin=slave, stdout=slave, stderr=slave,
-        env=os.environ | {"TERM": "dumb"}, start_new_session=True, preexec_fn=_take_the_terminal,
+        env=os.environ | {"TERM": "xterm"}, start_new_session=True, preexec_fn=_take_the_terminal,
     )  # fmt: skip
     os.close(slave)
     shown = Terminal(master, process)
