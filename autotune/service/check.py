@@ -8,13 +8,18 @@ from statistics import median
 
 from autotune.config.types import LoopConfig
 from autotune.errors import LinkError, LinkRefused
+from autotune.field.facts import TellsFacts
 from autotune.field.link import LoopLink
 from autotune.loop.sample import Sample
 from autotune.loop.settings import BlockFields
+from autotune.service.clock import utc_now
 from autotune.service.diagnose import OpenLink, implausible_signals, missing_tags
 from autotune.service.readiness import Level, ReadinessFinding, judge_samples
 from autotune.service.reading import LoopReader
 from autotune.service.scan_grid import ScanGrid
+from autotune.service.server_facts import judge_facts
+
+_UNREADABLE = ("NODE_FAULT", "NODE_NO_NUMBER")
 
 
 @dataclass(frozen=True, slots=True)
@@ -42,16 +47,20 @@ async def check_loop(loop: LoopConfig, link: LoopLink, open_link: OpenLink, look
     """Read one loop for ``look_s`` seconds and judge it; nothing is written and nothing is raised for the wire."""
     reader = LoopReader(loop, link)
     try:
+        told = await _told_facts(loop, link)
+        if any(finding.code in _UNREADABLE for finding in told):
+            return LoopCheck(loop, told, None, None, None, None)
         misread = await _first_look(loop, link, reader, open_link)
         if misread:
-            return LoopCheck(loop, misread, None, None, None, None)
+            return LoopCheck(loop, (*misread, *told), None, None, None, None)
         settings = await reader.read_settings() if reader.has_settings else None
         samples = await look_around(loop, reader, look_s)
     except LinkError as fault:
         unreached = ReadinessFinding(Level.STOP, "LINK", str(fault), "see LINK in the list of codes")
         return LoopCheck(loop, (unreached,), None, None, None, None)
     trips = [sample.t_s - sample.taken.earliest_s - (loop.controller.plc_scan_s or 0.0) for sample in samples]
-    return LoopCheck(loop, judge_samples(loop, samples), samples[-1], settings, median(trips), _refresh_s(samples))
+    findings = (*told, *judge_samples(loop, samples))
+    return LoopCheck(loop, findings, samples[-1], settings, median(trips), _refresh_s(samples))
 
 
 async def look_around(loop: LoopConfig, reader: LoopReader, look_s: float) -> tuple[Sample, ...]:
@@ -65,6 +74,15 @@ async def look_around(loop: LoopConfig, reader: LoopReader, look_s: float) -> tu
         grid.take(now_s())
         samples.append(await reader.read_sample())
     return tuple(samples)
+
+
+async def _told_facts(loop: LoopConfig, link: LoopLink) -> tuple[ReadinessFinding, ...]:
+    """What the controller tells by itself, where its protocol can; judged before any reading is believed."""
+    if not isinstance(link, TellsFacts):
+        return ()
+    if not link.is_connected:
+        await link.connect()
+    return judge_facts(loop, await link.facts(), utc_now())
 
 
 async def _first_look(

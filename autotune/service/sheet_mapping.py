@@ -13,6 +13,7 @@ from autotune.design.proposal import ProposalSheet
 from autotune.experiment.phases import Phase
 from autotune.experiment.plan import TestPlan
 from autotune.experiment.state import Experiment
+from autotune.field.security import security_line
 from autotune.identify.findings import FindingsOrRefusal, OscillationPoint
 from autotune.loop.limits import AsFound
 from autotune.loop.outcome import Interval, Refusal
@@ -298,7 +299,8 @@ def costs_of(plan: TestPlan, loop: LoopConfig) -> tuple[str, ...]:
         costs.append("no guard in the PLC: late writes after our own death cannot be excluded")
     if not plan.has_clock_tags:
         costs.append("no PLC clock tags: unknown network delay is counted as dead time and widens the intervals")
-    return tuple(costs)
+    unprotected = security_line(loop.controller.endpoint)
+    return (*costs, *(() if unprotected is None else (unprotected,)))
 
 
 def outcome_section(experiment: Experiment, faults: Sequence[str]) -> schema.Outcome:

@@ -86,7 +86,8 @@ def server_faults(certificate: x509.Certificate, application_uri: str, host: str
     hosts = [*_names(certificate, x509.DNSName), *_addresses(certificate)]
     if host.lower() not in (name.lower() for name in hosts):
         listed = ", ".join(hosts) or "(none)"
-        yield f"it was made for the host {listed}, not for {host}: if that is this server, tell server_name"
+        hint = f'; if that is this server, add to the controller\'s table: server_name = "{hosts[0]}"' if hosts else ""
+        yield f"it was made for the host {listed}, not for {host}{hint}"
     usage = _extension(certificate, x509.KeyUsage)
     if not isinstance(usage, x509.KeyUsage) or not (usage.digital_signature and usage.key_encipherment):
         yield "its key usage does not allow to sign and to encipher keys"

@@ -136,7 +136,7 @@ class Opening:
         certificate = _first_certificate(endpoint, offer.ServerCertificate)
         seen = thumbprint_of(certificate)
         if not is_same_thumbprint(endpoint.server_thumbprint, seen):
-            raise LinkClosed(_not_pinned(endpoint, seen))
+            raise LinkClosed(f"{_not_pinned(endpoint, seen)}{self._own_in_words()}")
         host = endpoint.server_name or urlsplit(endpoint.url).hostname or ""
         faults = list(server_faults(certificate, offer.Server.ApplicationUri, host, datetime.now(UTC)))
         if faults:
@@ -145,6 +145,10 @@ class Opening:
                 "have a right certificate installed in the server and its thumbprint put into the file"
             )
         return certificate
+
+    def _own_in_words(self) -> str:
+        own = self._own
+        return "" if own is None else f"; let it trust ours in turn: {own.path}, SHA-256 thumbprint {own.thumbprint}"
 
     def _hint(self, fault: str) -> str:
         own = self._own
