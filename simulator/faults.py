@@ -163,8 +163,10 @@ def _run_plc(_wire: WireFaults, plc: Plc, _words: Sequence[str]) -> None:
     plc.is_in_stop = False
 
 
-def _restart_plc(wire: WireFaults, plc: Plc, _words: Sequence[str]) -> None:
-    plc.restart()
+def _restart_plc(wire: WireFaults, plc: Plc, words: Sequence[str]) -> None:
+    if words and words[0] not in ("warm", "cold"):
+        raise ValueError(f"no start is called {words[0]}")
+    plc.restart(is_cold=words[:1] == ["cold"])
     wire.close_requests += 1
 
 
@@ -244,7 +246,11 @@ FAULTS: dict[str, Fault] = {
     "close-connections": Fault("", "all connections are reset, once", _close_connections),
     "plc-stop": Fault("", "the PLC goes to stop: no scans, registers frozen, socket alive", _stop_plc),
     "plc-run": Fault("", "the PLC goes to run", _run_plc),
-    "restart": Fault("", "the PLC restarts, once: connections reset, clock from 0, boot_count + 1", _restart_plc),
+    "restart": Fault(
+        "[warm|cold]",
+        "the PLC restarts, once: connections reset, clock from 0, boot_count + 1; cold: blocks begin as engineered",
+        _restart_plc,
+    ),
     "transmitter": Fault("LOOP none|stuck|nan|high|low", "a transmitter fails", _fail_transmitter),
     "valve": Fault("LOOP none|stuck", "a valve sticks", _fail_valve),
     "load-step": Fault("LOOP PERCENT", "a step is added to the process input, for good", _step_load),

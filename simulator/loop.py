@@ -83,9 +83,7 @@ class Loop:
         self.process = Process(spec.process, input_pct=resting_input_pct, output_pct=pv_pct)
         self.valve = Valve(spec.valve, position_pct=spec.op_pct)
         self.transmitter = Transmitter(spec.transmitter, seed=seed, reading_pct=pv_pct)
-        self.block = PidBlock(
-            spec.block, spec.settings, pv_pct=pv_pct, sp_pct=pv_pct, op_pct=spec.op_pct, mode=spec.mode
-        )
+        self.block = self._block_as_engineered(pv_pct)
         self.guard = Guard(spec.guard)
         self.mailbox = Mailbox()
         self.watch = dict(spec.watch)
@@ -109,11 +107,22 @@ class Loop:
         """A person presses the enable button at the plant's own panel once."""
         self._enable_presses += 1
 
-    def restart(self) -> None:
-        """A cold start: guard and mailbox are empty; block, setpoint, output and settings are retained."""
+    def restart(self, *, is_cold: bool = False) -> None:
+        """The PLC starts again, with guard and mailbox empty.
+
+        After a warm start the block has kept mode, setpoint, output and settings, after a cold one it begins as
+        engineered: what IEC 61131-3 says of retained variables.
+        """
+        if is_cold:
+            self.block = self._block_as_engineered(self.process.output_pct)
         self.guard = Guard(self.spec.guard)
         self.mailbox = Mailbox()
         self._enable_presses = 0
+
+    def _block_as_engineered(self, pv_pct: float) -> PidBlock:
+        spec = self.spec
+        sp_pct = spec.to_pct(spec.sp_eu)
+        return PidBlock(spec.block, spec.settings, pv_pct=pv_pct, sp_pct=sp_pct, op_pct=spec.op_pct, mode=spec.mode)
 
     def scan_guard(self, clock_ms: int) -> None:
         """The guard's part of one PLC scan."""

@@ -57,14 +57,14 @@ class Plc:
             self._drive(loop)
         self.scan_count += 1
 
-    def restart(self) -> None:
-        """A cold start: the clock begins at 0, guards and mailboxes are empty, blocks keep what is retentive."""
+    def restart(self, *, is_cold: bool = False) -> None:
+        """Start again: the clock begins at 0, guards and mailboxes are empty; blocks keep what they held, unless cold."""
         self.boot_count = self.boot_count % 65535 + 1
         self._clock_offset_ms = -round(1000.0 * self.t_s)
         self.clock_ms = 0
         self.is_in_stop = False
         for loop in self.loops.values():
-            loop.restart()
+            loop.restart(is_cold=is_cold)
 
     async def run(self, after_scan: Callable[[float], Awaitable[None]] | None = None) -> None:
         """Scan at absolute deadlines until cancelled.  ``after_scan`` is told how many seconds ago the scan began."""

@@ -151,6 +151,18 @@ def test_faults_of_the_plc_and_of_the_field_can_be_switched_on_and_off(panel: Pa
     assert panel.wire.close_requests == 1
 
 
+def test_a_restart_is_warm_or_cold(panel: Panel) -> None:
+    loop = panel.plc.loops["TIC-204"]
+    loop.block.mode = Mode.MAN
+    modes = []
+    for start in ("warm", "cold"):
+        panel.answer(f"fault restart {start}")
+        modes.append(loop.block.mode)
+    assert modes == [Mode.MAN, Mode.AUTO]
+    assert "no start is called hot" in str(panel.answer("fault restart hot")["error"])
+    assert panel.plc.boot_count == 3
+
+
 def test_a_plc_in_stop_can_be_put_in_run_again(panel: Panel) -> None:
     panel.answer("fault plc-stop")
     assert panel.answer("fault plc-run") == {"ok": True}

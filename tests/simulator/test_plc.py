@@ -210,6 +210,22 @@ def test_a_restart_forgets_the_holder_and_keeps_the_block_as_it_was() -> None:
     assert (loop.block.mode, loop.block.op_pct) == (Mode.MAN, 60.0)
 
 
+def test_after_a_cold_restart_the_block_begins_as_engineered() -> None:
+    plc = quiet("fast-loop")
+    loop = plc.loops["TIC-1"]
+    engineered = loop.block.settings
+    loop.block.mode = Mode.MAN
+    loop.block.hold(60.0)
+    loop.block.sp_pct = 70.0
+    loop.block.settings = replace(engineered, gain=3.0)
+    run_scans(plc, 1.0)
+    plc.restart(is_cold=True)
+    assert (loop.block.mode, loop.block.op_pct, loop.block.sp_pct) == (Mode.AUTO, 45.0, 50.0)
+    assert loop.block.settings == engineered
+    run_scans(plc, 20.0)
+    assert loop.process.output_pct == pytest.approx(50.0, abs=0.1)
+
+
 def test_the_millisecond_clock_wraps_at_32_bits() -> None:
     plc = replace(load_rig("fast-loop"), clock_start_ms=2**32 - 50).build()
     assert plc.clock_ms == 2**32 - 50

@@ -1,0 +1,200 @@
+"""One pair: a plant, the recording wire, and the tool, each run afresh; and what can be done to them."""
+
+import asyncio
+import json
+import signal
+import subprocess
+from collections.abc import AsyncIterator, Sequence
+from contextlib import asynccontextmanager, suppress
+from pathlib import Path
+from typing import Any
+
+from tests.faults.evidence import PV_HIGH_EU, PV_LOW_EU, STEP_PCT, State
+from tests.faults.nursery import Nursery, Tool
+from tests.faults.wire import Wire
+from tests.system.bench import WITHOUT_GUARD, Change, write_bench
+from tests.system.plant import LOOP, SoftPlant, soft_plant
+
+LOOK_EVERY_S = 0.03
+TYPED = f"{LOOP}\nbench permit 7\n"
+SMALL_DISK_KIB = 1536
+
+QUICK: Sequence[Change] = (
+    ("look_around_s = 0.6", "look_around_s = 0.3"),
+    ("hold_s = 1.2", "hold_s = 0.6"),
+    ("dead_time_s = 0.5", "dead_time_s = 0.25"),
+    ("pv_low_eu = 25.0\npv_high_eu = 75.0", f"pv_low_eu = {PV_LOW_EU}\npv_high_eu = {PV_HIGH_EU}"),
+    ("step_up_pct = 15.0\nstep_down_pct = 15.0", f"step_up_pct = {STEP_PCT}\nstep_down_pct = {STEP_PCT}"),
+)
+
+
+class Pair:
+    """A running plant with the wire before it; ``seen`` is what the panel showed and when (event loop's clock)."""
+
+    def __init__(self, nursery: Nursery, plant: SoftPlant, wire: Wire, config: Path, network: str | None) -> None:
+        self.plant = plant
+        self.wire = wire
+        self.seen: list[tuple[float, State]] = []
+        self.taken: dict[str, Any] = {}
+        self.tool: Tool | None = None
+        self.is_plant_gone = False
+        self.network = network
+        self._nursery = nursery
+        self._config = config
+        self._runs = 0
+
+    @property
+    def folder(self) -> Path:
+        """Where configuration, data and the tool's words lie."""
+        return self._config.parent
+
+    @property
+    def data_dir(self) -> Path:
+        """Where the tool keeps journals and sheets."""
+        return self.folder / "data"
+
+    async def start(self, act: str, typed: str = TYPED) -> Tool:
+        """Start the tool: ``test`` or ``settings``."""
+        self._runs += 1
+        arguments = [act, str(self._config), LOOP]
+        self.tool = await self._nursery.start(arguments, typed, self.folder, f"run-{self._runs}", self.network)
+        return self.tool
+
+    def signal(self, number: signal.Signals) -> None:
+        """Send a signal to the tool."""
+        if self.tool is not None:
+            self.tool.signal(number)
+
+    async def press(self, line: str, **taken: Any) -> None:
+        """Somebody at the panel; ``taken`` names what is theirs afterwards."""
+        self.taken |= taken
+        await self.plant.press(line)
+
+    async def look(self) -> State:
+        """The loop and the PLC's restart count, as the panel shows them now."""
+        plant = await self.plant.press("state")
+        state: State = plant["loops"][LOOP] | {"boot_count": plant["boot_count"]}
+        self.seen.append((asyncio.get_running_loop().time(), state))
+        return state
+
+    async def keep_looking(self) -> None:
+        """Look at the panel until the plant is gone or nobody wants to know any more."""
+        with suppress(json.JSONDecodeError, ConnectionError):
+            while not self.is_plant_gone:
+                await self.look()
+                await asyncio.sleep(LOOK_EVERY_S)
+
+    async def kill_plant(self) -> None:
+        """The PLC is gone for good."""
+        self.is_plant_gone = True
+        await self.plant.kill()
+
+    async def heal(self) -> None:
+        """Undo what lasts: everything goes on and answers again."""
+        self.signal(signal.SIGCONT)
+        self.wire.heal()
+        self.pull_cable(is_pulled=False)
+        if not self.is_plant_gone:
+            self.plant.thaw()
+            await self.plant.press("clear-faults")
+
+    def pull_cable(self, *, is_pulled: bool) -> None:
+        """Pull the plug between the tool's network and ours, or put it back."""
+        if self.network is not None:
+            _ip(f"link set {self.network} {'down' if is_pulled else 'up'}")
+
+    def fill_disk(self) -> None:
+        """Write to the tool's disk until nothing more fits."""
+        with (self.data_dir / "filling").open("wb", buffering=0) as filling, suppress(OSError):
+            while True:
+                filling.write(b"\0" * 4096)
+
+
+@asynccontextmanager
+async def pair(
+    nursery: Nursery, folder: Path, *, has_guard: bool, network: str | None = None, has_small_disk: bool = False
+) -> AsyncIterator[Pair]:
+    """A fresh plant, wire and configuration in ``folder``; all ends with the block."""
+    async with soft_plant() as plant:
+        wire = Wire(plant.port)
+        host = "127.0.0.1" if network is None else _own_end(network)
+        port = await wire.open(host)
+        changes = [*QUICK, *(() if has_guard else WITHOUT_GUARD), ('host = "127.0.0.1"', f'host = "{host}"')]
+        config = write_bench(folder, port, changes)
+        bench = Pair(nursery, plant, wire, config, network)
+        if has_small_disk:
+            bench.data_dir.mkdir()
+            _run(f"mount -t tmpfs -o size={SMALL_DISK_KIB}k tmpfs {bench.data_dir}")
+        looking: asyncio.Task[None] | None = None
+        try:
+            await plant.press(f"enable {LOOP}")
+            await plant.until(lambda state: state["enable"])
+            await bench.look()
+            looking = asyncio.create_task(bench.keep_looking(), name="looking at the panel")
+            yield bench
+        finally:
+            plant_is_frozen_no_more(bench)
+            if looking is not None:
+                looking.cancel()
+                await asyncio.gather(looking, return_exceptions=True)
+            if bench.tool is not None and not bench.tool.is_over:
+                bench.tool.signal(signal.SIGKILL)
+                await bench.tool.ended()
+            await wire.close()
+            if has_small_disk:
+                _run(f"umount {bench.data_dir}")
+
+
+def plant_is_frozen_no_more(bench: Pair) -> None:
+    """Whoever waits for a frozen panel would wait for ever."""
+    with suppress(ProcessLookupError):
+        bench.plant.thaw()
+
+
+@asynccontextmanager
+async def network(number: int) -> AsyncIterator[str]:
+    """A network of its own for one tool at a time, joined to ours by a cable that can be pulled; yields its name."""
+    name = f"faults-{number}"
+    _ip(f"netns add {name}")
+    try:
+        _ip(f"link add {name} type veth peer name inside netns {name}")
+        _ip(f"addr add {_own_end(name)}/30 dev {name}")
+        _ip(f"link set {name} up")
+        for line in (f"addr add 10.231.{number}.2/30 dev inside", "link set inside up", "link set lo up"):
+            _ip(f"-n {name} {line}")
+        yield name
+    finally:
+        _ip(f"netns del {name}")
+
+
+def why_no_networks() -> str | None:
+    """Why this machine lets us make no network of our own, or ``None``."""
+    return _why_not(f"ip netns add faults-{PROBE}") or _why_not(f"ip netns del faults-{PROBE}")
+
+
+def why_no_small_disk(folder: Path) -> str | None:
+    """Why this machine lets us mount no small disk, or ``None``."""
+    return _why_not(f"mount -t tmpfs -o size=64k tmpfs {folder}") or _why_not(f"umount {folder}")
+
+
+PROBE = 99
+
+
+def _own_end(name: str) -> str:
+    return f"10.231.{name.rpartition('-')[2]}.1"
+
+
+def _ip(line: str) -> None:
+    _run(f"ip {line}")
+
+
+def _run(line: str) -> None:
+    subprocess.run(line.split(), check=True, capture_output=True)
+
+
+def _why_not(line: str) -> str | None:
+    try:
+        _run(line)
+    except (OSError, subprocess.CalledProcessError) as fault:
+        return f"{line.split()[0]}: {getattr(fault, 'stderr', b'') or fault!r}"
+    return None
