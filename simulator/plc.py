@@ -58,7 +58,7 @@ class Plc:
         self.scan_count += 1
 
     def restart(self, *, is_cold: bool = False) -> None:
-        """Start again: the clock begins at 0, guards and mailboxes are empty; blocks keep what they held, unless cold."""
+        """Start again: the clock begins at 0, guards and mailboxes are empty; warm, blocks keep what they held."""
         self.boot_count = self.boot_count % 65535 + 1
         self._clock_offset_ms = -round(1000.0 * self.t_s)
         self.clock_ms = 0

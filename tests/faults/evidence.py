@@ -91,9 +91,11 @@ def end_of(evidence: Evidence) -> End:
     """How the loop was left, by the panel; the tool's word decides only between loud and silent."""
     left = evidence.left
     if left is not None:
-        if evidence.taken and _matches(left, evidence.taken) and _is_let_go(left):
-            if is_said_released(evidence) or (not is_as_found(evidence, left) and lost_at_s(evidence) is None):
-                return End.RELEASED  # in the second case somebody took it when the tool had already gone
+        is_theirs = bool(evidence.taken) and _matches(left, evidence.taken) and _is_let_go(left)
+        # Somebody may also take it when the tool has already given it back and gone.
+        is_known = is_said_released(evidence) or (not is_as_found(evidence, left) and lost_at_s(evidence) is None)
+        if is_theirs and is_known:
+            return End.RELEASED
         if is_as_found(evidence, left) and not is_untrue(evidence, left):
             return End.RESTORED
     return End.STRANDED if is_loud(evidence) else End.SILENT

@@ -100,7 +100,8 @@ async def restart_plc_warm(pair: Pair, _: random.Random) -> None:
 
 async def restart_plc_cold(pair: Pair, _: random.Random) -> None:
     engineered = {name: pair.seen[0][1][name] for name in SETTINGS}  # as the plant was before anybody changed it
-    has_changed = any((await pair.look())[name] != number for name, number in engineered.items())
+    now = await pair.look()
+    has_changed = any(now[name] != number for name, number in engineered.items())
     await pair.press("fault restart cold", **(engineered if has_changed else {}))
 
 
