@@ -57,10 +57,13 @@ def rehearse(
     ] = False,
     loop: Annotated[str, typer.Option("--loop", metavar="LOOP", help="which loop of the juice skid")] = "TIC-204",
     link: Annotated[Link, typer.Option("--link", help="the protocol to reach it by")] = Link.MODBUS,
+    keep: Annotated[
+        Path | None, typer.Option("--keep", metavar="FOLDER", help="keep the records in this new folder")
+    ] = None,
     is_json: Json = False,
 ) -> None:
     """Do the whole job on the bundled soft plant over a real socket: check, test, confirm, write, read back."""
-    _run(rehearsing.rehearse(Voice(is_json=is_json), loop, link, is_scripted=scripted_operator))
+    _run(rehearsing.rehearse(Voice(is_json=is_json), loop, link, is_scripted=scripted_operator, keep=keep))
 
 
 @app.command()

@@ -6,6 +6,7 @@ itself has started.
 
 import tempfile
 from collections.abc import Sequence
+from contextlib import AbstractContextManager, nullcontext
 from pathlib import Path
 
 from autotune.cli.answers import quantities_answer, test_answer
@@ -17,6 +18,7 @@ from autotune.cli.settings import change_answer, confirmed_change
 from autotune.cli.soft_plant import Link, SoftPlant, rehearsal
 from autotune.cli.test import permitted_test, show_end
 from autotune.config.types import LoopConfig
+from autotune.errors import SheetError
 from autotune.loop.outcome import Refusal
 from autotune.service.aftermath import LoopAfter, watch_afterwards
 from autotune.service.changing import ChangeEnd, SettingsChange
@@ -59,13 +61,26 @@ class ScriptedOperator:
             self._voice.say(f" {number}. {caution}", style="caution")
 
 
-async def rehearse(voice: Voice, loop_name: str, link: Link, *, is_scripted: bool) -> ExitCode:
-    """Check, enable at the panel, test, compare, confirm, write, read back, watch; all on the soft plant."""
+async def rehearse(voice: Voice, loop_name: str, link: Link, *, is_scripted: bool, keep: Path | None) -> ExitCode:
+    """Check, enable at the panel, test, compare, confirm, write, read back, watch; all on the soft plant.
+
+    Its records are kept in the new folder ``keep``, or else not at all.
+    """
     operator: Operator = ScriptedOperator(voice) if is_scripted else PersonAtTheTerminal(voice)
-    with tempfile.TemporaryDirectory(prefix="autotune-rehearsal-") as folder:
+    with _records(keep) as folder:
         async with rehearsal(link, Path(folder)) as started:
             workplace = open_workplace(started.configuration, may_create=True)
             return await _whole_job(voice, workplace, workplace.loop(loop_name), started.plant, operator)
+
+
+def _records(keep: Path | None) -> AbstractContextManager[str]:
+    if keep is None:
+        return tempfile.TemporaryDirectory(prefix="autotune-rehearsal-")
+    try:
+        keep.mkdir(parents=True)
+    except OSError as fault:
+        raise SheetError(f"{keep}: {fault.strerror}; name a new folder with --keep") from fault
+    return nullcontext(str(keep))
 
 
 async def _whole_job(
