@@ -9,6 +9,7 @@ from autotune.cli.exit_codes import ExitCode
 from autotune.cli.operators import Operator
 from autotune.cli.printing import Voice
 from autotune.cli.sheets import stored_sheet
+from autotune.cli.signals import hear_signals
 from autotune.config.types import LoopConfig
 from autotune.confirmed_write.phases import Phase
 from autotune.confirmed_write.plan import WritePlan
@@ -113,7 +114,8 @@ async def confirmed_change(
     typed = operator.types_digest(BEFORE_SETTINGS_ARE_WRITTEN, digest_to_type(plan))
     if isinstance(typed, Refusal):
         return typed
-    ended = await change.write(kind, sheet_id, plan, typed, person_at_the_terminal(operator.name))
+    with hear_signals(change.put_back):
+        ended = await change.write(kind, sheet_id, plan, typed, person_at_the_terminal(operator.name))
     if not isinstance(ended, Refusal):
         phase = ended.state.phase
         voice.say(f"{phase.name}. {_what_became(ended)}", style=_STYLES[phase])

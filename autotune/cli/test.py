@@ -1,9 +1,8 @@
 """``test``: one supervised test on the terminal, from the look to the sheet."""
 
 import asyncio
-import signal
-from collections.abc import Iterator
-from contextlib import contextmanager
+from collections.abc import Coroutine
+from typing import Any
 
 from autotune.cli.answers import no_test_answer, proposals_table, show_findings, test_answer
 from autotune.cli.check import show_check
@@ -11,6 +10,7 @@ from autotune.cli.exit_codes import ExitCode
 from autotune.cli.live import watch
 from autotune.cli.operators import Operator
 from autotune.cli.printing import Voice
+from autotune.cli.signals import hear_signals
 from autotune.config.types import LoopConfig
 from autotune.experiment.phases import Phase
 from autotune.experiment.room import allowed_op_pct
@@ -19,6 +19,7 @@ from autotune.loop.limits import AsFound
 from autotune.loop.outcome import Refusal
 from autotune.service.cautions import BEFORE_THE_OUTPUT_MOVES, WHERE_SETTINGS_ARE_PROVED
 from autotune.service.check import LoopCheck
+from autotune.service.deaf import to_the_end
 from autotune.service.persons import person_at_the_terminal
 from autotune.service.readiness import Level
 from autotune.service.recovery import NOT_SETTLED, recover
@@ -71,10 +72,23 @@ async def permitted_test(
     person = person_at_the_terminal(operator.name)
     permission = Permission(person, words, tuple((caution, now) for caution in cautions), now)
     runner = supervised.prepare(is_no_guard_accepted=bool(consents))
-    test_task = asyncio.ensure_future(supervised.run(permission))
-    with _signals_abort(runner):
-        await watch(voice, loop, runner, test_task)
-        return await test_task
+    with hear_signals(runner.abort):
+        watched = _run_watched(voice, loop, runner, supervised.run(permission))
+        return await to_the_end(watched, lambda: runner.abort("the command is ending"))
+
+
+async def _run_watched(
+    voice: Voice, loop: LoopConfig, runner: TestRunner, run: Coroutine[Any, Any, TestEnd]
+) -> TestEnd:
+    """The test beside its picture.  A picture that fails ends the test; the loop is handed back before it is told."""
+    running = asyncio.ensure_future(run)
+    try:
+        await watch(voice, loop, runner, running)
+    except Exception:
+        runner.abort("the picture of the test failed")
+        await asyncio.wait({running})
+        raise
+    return await running
 
 
 async def dry_run(voice: Voice, workplace: Workplace, loop: LoopConfig) -> ExitCode:
@@ -144,22 +158,3 @@ def _refused(voice: Voice, looked: LoopCheck) -> ExitCode:
     voice.answer(no_test_answer("REFUSED", text, Refusal(first.code, first.text, first.remedy)))
     is_link = any(finding.code == "LINK" for finding in looked.findings)
     return ExitCode.LINK if is_link else ExitCode.NO
-
-
-@contextmanager
-def _signals_abort(runner: TestRunner) -> Iterator[None]:
-    """A signal to end is heard as "abort" as long as the test holds the loop."""
-    loop = asyncio.get_running_loop()
-    signals = [getattr(signal, name) for name in ("SIGINT", "SIGTERM", "SIGHUP") if hasattr(signal, name)]
-    try:
-        for number in signals:
-            loop.add_signal_handler(number, runner.abort, signal.Signals(number).name)
-    except NotImplementedError:  # Windows: Ctrl-C only
-        signal.signal(signal.SIGINT, lambda *_: loop.call_soon_threadsafe(runner.abort, "SIGINT"))
-        yield
-        return
-    try:
-        yield
-    finally:
-        for number in signals:
-            loop.remove_signal_handler(number)

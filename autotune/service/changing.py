@@ -7,16 +7,17 @@ from types import MappingProxyType
 from typing import Literal
 
 from autotune.config.types import LoopConfig
-from autotune.confirmed_write.confirmation import confirm, digest, short_digest
+from autotune.confirmed_write.confirmation import GOOD_FOR_S, check_confirmation, confirm, digest, short_digest
 from autotune.confirmed_write.limits import changed_fields, check_plan, write_order
 from autotune.confirmed_write.phases import Phase
-from autotune.confirmed_write.plan import WritePlan
+from autotune.confirmed_write.plan import Confirmation, WritePlan
 from autotune.confirmed_write.state import WritePace, WriteState
 from autotune.errors import SheetError
 from autotune.field.link import LoopLink
 from autotune.field.translate import held_fields
 from autotune.loop.outcome import Refusal
 from autotune.loop.settings import BlockFields
+from autotune.service.deaf import to_the_end
 from autotune.service.journal import FileJournal
 from autotune.service.persons import Person
 from autotune.service.reading import LoopReader
@@ -54,6 +55,9 @@ class SettingsChange:
         self._workplace = workplace
         self._link: LoopLink = workplace.open_link(loop)
         self._reader = LoopReader(loop, self._link)
+        self._shown_s: dict[str, float] = {}
+        self._spent: set[Confirmation] = set()
+        self._writer: SettingsWriter | None = None
 
     async def __aenter__(self) -> "SettingsChange":
         self._lock = self._workplace.hold(self.loop, f"change of settings of {self.loop.name}")
@@ -115,34 +119,87 @@ class SettingsChange:
             write_in_manual=self.loop.write_in_manual,
             sp_tracks_in_manual=self.loop.block.sp_tracks_in_manual,
         )
+        self._shown_s[digest(plan)] = asyncio.get_running_loop().time()
         return check_plan(plan) or plan
+
+    def put_back(self, by: str) -> None:
+        """Ask a write that is under way to put the settings as found back; does nothing when none is."""
+        if self._writer is not None:
+            self._writer.stop(by)
 
     async def write(
         self, kind: Literal["write", "restore"], sheet_id: str, plan: WritePlan, typed: str, person: Person
     ) -> ChangeEnd | Refusal:
         """Write what was confirmed by the digest typed, read it back and keep the addendum.
 
-        ``kind`` is ``write`` or ``restore``.  A refusal wrote nothing and is not kept.
-        Raises ``JournalError`` before anything is written.
+        ``kind`` is ``write`` or ``restore``.  The digest is good for one write, within ``GOOD_FOR_S`` of the plan
+        being made, since the numbers are compared from then on.  A refusal wrote no setting; it is kept as a note
+        only where the mode had been changed meanwhile.  A cancellation is heard as "put back", and raised only when
+        the addendum is kept.  Raises ``JournalError`` before anything is written.
         """
         axis = TimeAxis(asyncio.get_running_loop().time(), self._workplace.wall_clock())
-        confirmation = confirm(plan, typed, person.name, axis.start_s)
+        confirmation = self._confirm(plan, typed, person, axis.start_s)
         if isinstance(confirmation, Refusal):
             return confirmation
+        work = self._write(kind, sheet_id, axis, plan, confirmation, person)
+        return await to_the_end(work, lambda: self.put_back("the service is stopping"))
+
+    def _confirm(self, plan: WritePlan, typed: str, person: Person, now_s: float) -> Confirmation | Refusal:
+        shown_s = self._shown_s.get(digest(plan))
+        if shown_s is None:
+            return Refusal("CONFIRMATION_USED", "a confirmation is good for one write only", "show the numbers again")
+        confirmation = confirm(plan, typed, person.name, now_s, shown_s + GOOD_FOR_S - now_s)
+        if isinstance(confirmation, Refusal):
+            return confirmation
+        del self._shown_s[digest(plan)]
+        return check_confirmation(plan, confirmation, frozenset(self._spent), now_s) or confirmation
+
+    async def _write(
+        self,
+        kind: Literal["write", "restore"],
+        sheet_id: str,
+        axis: TimeAxis,
+        plan: WritePlan,
+        confirmation: Confirmation,
+        person: Person,
+    ) -> ChangeEnd | Refusal:
         tail = self._workplace.new_token()
         journal_id = f"{schema.sheet_id(self.loop.name, axis.start_utc, tail)}-{kind}"
         journal = FileJournal.create(self._workplace.data_dir, journal_id, wall_clock=self._workplace.wall_clock)
-        writer = SettingsWriter(self.loop, self._link, journal)
+        writer = self._writer = SettingsWriter(self.loop, self._link, journal)
+        spent = frozenset(self._spent)
+        self._spent.add(confirmation)
         try:
-            state = await writer.write(plan, confirmation, frozenset(), self._pace())
+            state = await writer.write(plan, confirmation, spent, self._pace())
+        except BaseException as fault:
+            if writer.state is not None and writer.has_written:
+                broken = f"broken off by {type(fault).__name__}: {fault}"
+                await self._keep(self._addendum(kind, sheet_id, axis, writer.state, writer, person, broken))
+            raise
         finally:
             journal.close()
         if isinstance(state, Refusal):
             return state
         if state.phase is Phase.REFUSED:
+            if state.is_taken:
+                await self._keep(self._note(sheet_id, state, person))
             return state.because[0]
-        addendum = self._addendum(kind, sheet_id, axis, state, writer, person)
-        return ChangeEnd(state, await asyncio.to_thread(self._workplace.store.append_addendum, addendum))
+        return ChangeEnd(state, await self._keep(self._addendum(kind, sheet_id, axis, state, writer, person)))
+
+    async def _keep(self, addendum: schema.Addendum) -> str:
+        return await self._workplace.in_thread(self._workplace.store.append_addendum, addendum)
+
+    def _note(self, sheet_id: str, state: WriteState, person: Person) -> schema.Note:
+        """No setting was written, but the mode was changed and given back: that isn't nothing."""
+        reasons = "; ".join(str(refusal) for refusal in state.because)
+        bump = "" if state.op_bump_pct is None else f"; the output moved by {state.op_bump_pct:+.2f} % meanwhile"
+        return schema.Note(
+            sheet_id=sheet_id,
+            utc=self._workplace.wall_clock(),
+            person=person_line(person),
+            text=f"{state.plan.proposal} was not written, though the loop had been asked to manual for it and given "
+            f"back: {reasons}{bump}",
+        )
 
     def _pace(self) -> WritePace:
         """Settle for two scans of the slower of us and the PLC, so that a reading can show what was written."""
@@ -157,15 +214,17 @@ class SettingsChange:
         state: WriteState,
         writer: SettingsWriter,
         person: Person,
+        broken: str | None = None,
     ) -> schema.Change:
         plan = state.plan
+        told = (*(str(refusal) for refusal in state.because), *writer.faults, *((broken,) if broken else ()))
         read_back = None if state.last_read is None else state.last_read.fields
         return schema.Change(
             kind=kind,
             sheet_id=sheet_id,
             utc=self._workplace.wall_clock(),
             person=person_line(person),
-            text="; ".join(str(refusal) for refusal in state.because),
+            text="; ".join(told),
             source=plan.proposal,
             as_found=settings_quantities(self.loop, plan.as_found),
             wanted=settings_quantities(self.loop, plan.fields),
@@ -185,7 +244,7 @@ class SettingsChange:
                 for write in writer.writes
             ),
             read_back=settings_quantities(self.loop, read_back),
-            result=_RESULTS[state.phase],
+            result=_RESULTS.get(state.phase, "UNVERIFIED"),  # a write that broke off was shown to be nothing
             op_bump_pct=state.op_bump_pct,
         )
 

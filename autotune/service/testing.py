@@ -11,13 +11,14 @@ from autotune.config.test_plan import plan_for
 from autotune.config.types import LoopConfig
 from autotune.design.proposal import ProposalSheet
 from autotune.design.propose import propose
-from autotune.errors import AutotuneError
 from autotune.experiment.state import Experiment, record
 from autotune.field.link import LoopLink
 from autotune.identify.findings import Findings, FindingsOrRefusal
+from autotune.loop.outcome import Refusal
 from autotune.loop.record import TimeBase
 from autotune.loop.settings import BlockFields
 from autotune.service.check import LoopCheck, check_loop
+from autotune.service.deaf import to_the_end
 from autotune.service.journal import FileJournal
 from autotune.service.persons import Person
 from autotune.service.runner import TestRunner
@@ -116,34 +117,49 @@ class SupervisedTest:
     async def run(self, permission: Permission) -> TestEnd:
         """Run the prepared and permitted test, identify, propose and keep the sheet, whatever the end.
 
-        Raises what broke a contract, after the hand-back and after the sheet was kept.
+        A cancellation is heard as "abort".  It and whatever else broke a contract are raised after the hand-back and
+        after the sheet was kept.
         """
+        return await to_the_end(self._run(permission), lambda: self.runner.abort("the service is stopping"))
+
+    async def _run(self, permission: Permission) -> TestEnd:
         runner, journal = self.runner, self._journal
         try:
             broken = await self._finish(runner)
         finally:
             journal.close()
-        findings = await self._identify(runner.experiment)
         settings = None if self._check is None else self._check.settings
-        proposed = self._propose(findings, settings)
+        findings, proposed = await self._conclude(runner, settings)
         told = _Told(runner, findings, proposed, settings, journal.file)
         sheet = self._sheet(self._sheet_id, self._axis, permission, told)
-        sheet_hash = await asyncio.to_thread(self._workplace.store.append, sheet)
+        sheet_hash = await self._workplace.in_thread(self._workplace.store.append, sheet)
         if broken is not None:
             raise broken
         return TestEnd(runner.experiment, findings, proposed, settings, sheet, sheet_hash, tuple(runner.faults))
 
     async def _finish(self, runner: TestRunner) -> BaseException | None:
-        """Run to the end; what broke is kept for after the sheet."""
+        """Run to the end; what broke, whatever it is, is kept for after the sheet."""
         try:
             await runner.run()
-        except (AutotuneError, asyncio.CancelledError) as broken:
+        except (Exception, asyncio.CancelledError) as broken:  # noqa: BLE001 - raised once the sheet is kept
             return broken
         return None
 
-    async def _identify(self, experiment: Experiment) -> FindingsOrRefusal | None:
-        recorded = record(experiment)
-        return None if recorded is None else await self._workplace.estimator.measure(recorded)
+    async def _conclude(
+        self, runner: TestRunner, settings: BlockFields | None
+    ) -> tuple[FindingsOrRefusal | None, ProposalSheet | None]:
+        """Findings and proposals; a slip of ours in them costs these, never the sheet with what was measured."""
+        recorded = record(runner.experiment)
+        if recorded is None:
+            return None, None
+        findings: FindingsOrRefusal | None = None
+        try:
+            findings = await self._workplace.estimator.measure(recorded)
+            return findings, self._propose(findings, settings)
+        except Exception as fault:  # noqa: BLE001 - told on the sheet
+            runner.faults.append(f"{type(fault).__name__}: {fault}")
+            lost = Refusal("NOT_CONCLUDED", f"the conclusion failed: {fault}", "report it with the sheet's samples")
+            return findings or lost, None
 
     def _propose(self, findings: FindingsOrRefusal | None, settings: BlockFields | None) -> ProposalSheet | None:
         if not isinstance(findings, Findings):

@@ -1,9 +1,11 @@
 """Where one configuration does its work: its store of sheets, its locks, how it reaches controllers."""
 
+import asyncio
 import secrets
-from collections.abc import Callable
+from collections.abc import Awaitable, Callable
 from dataclasses import dataclass, field
 from pathlib import Path
+from typing import Any, Protocol, TypeVar
 
 from autotune.config.types import Configuration, Endpoint, LoopConfig, ModbusEndpoint
 from autotune.errors import Complaint, ConfigError, SheetError
@@ -15,7 +17,16 @@ from autotune.service.locks import HeldLock, LockedThing, Tenant, hold
 from autotune.sheet.sqlite_store import SqliteStore
 from autotune.sheet.store import SheetStore
 
+T = TypeVar("T")
 NewToken = Callable[[], int]
+
+
+class InThread(Protocol):
+    """Runs what blocks without holding up the event loop."""
+
+    def __call__(self, work: Callable[..., T], /, *args: Any) -> Awaitable[T]:
+        """Run ``work(*args)`` and wait for what it returns."""
+        ...
 
 
 def new_token() -> int:
@@ -33,6 +44,7 @@ class Workplace:
     estimator: Estimator = field(default_factory=WorkerEstimator)
     wall_clock: WallClock = field(default=utc_now)
     new_token: NewToken = field(default=new_token)
+    in_thread: InThread = field(default=asyncio.to_thread)
 
     @property
     def data_dir(self) -> Path:
