@@ -38,7 +38,7 @@ SPEC = LoopSpec(
     valve=ValveSpec(),
     transmitter=TransmitterSpec(noise_pct=0.02),
     block=BlockSpec(scan_s=SCAN_S),
-    settings=Settings(0.4, 1.5, 0.0),
+    settings=Settings(0.375, 1.5, 0.0),
     guard=GuardLimits(op_low_pct=10.0, op_high_pct=90.0, pv_low_eu=30.0, pv_high_eu=120.0, timeout_s=1.0),
     watch=(),
     int_scales=(),
