@@ -5,8 +5,9 @@ from collections.abc import Sequence
 from autotune.cli.exit_codes import ExitCode
 from autotune.cli.printing import Voice
 from autotune.config.types import LoopConfig
+from autotune.service.answers import check_answer
 from autotune.service.check import LoopCheck, check_loop
-from autotune.service.local_api import CheckAnswer, ChecksAnswer, FindingAnswer, settings_answer
+from autotune.service.local_api import ChecksAnswer
 from autotune.service.readiness import Level
 from autotune.service.sheet_mapping import controller_line, settings_quantities
 from autotune.service.workplace import Workplace
@@ -51,27 +52,6 @@ def show_check(voice: Voice, looked: LoopCheck) -> None:
     verdict = ("fit to test", "good") if looked.is_fit else ("not fit to test: see the lines marked 'stop'", "stop")
     voice.say(f"  {verdict[0]}", style=verdict[1])
     voice.say()
-
-
-def check_answer(looked: LoopCheck) -> CheckAnswer:
-    """The same as data."""
-    loop, sample = looked.loop, looked.sample
-    pv_pct, sp_pct, op_pct = (None, None, None) if sample is None else (sample.pv_pct, sample.sp_pct, sample.op_pct)
-    return CheckAnswer(
-        loop=loop.name,
-        fit=looked.is_fit,
-        findings=tuple(
-            FindingAnswer(level=one.level.value, code=one.code, text=one.text, remedy=one.remedy)
-            for one in looked.findings
-        ),
-        mode=None if sample is None else sample.mode.value,
-        pv_eu=None if pv_pct is None else loop.pv_span.to_eu(pv_pct),
-        sp_eu=None if sp_pct is None else loop.pv_span.to_eu(sp_pct),
-        op_eu=None if op_pct is None else loop.op_span.to_eu(op_pct),
-        settings=settings_answer(looked.settings),
-        round_trip_s=looked.round_trip_s,
-        refresh_s=looked.refresh_s,
-    )
 
 
 def _readings(loop: LoopConfig, looked: LoopCheck) -> str:

@@ -9,18 +9,18 @@ from collections.abc import Sequence
 from contextlib import AbstractContextManager, nullcontext
 from pathlib import Path
 
-from autotune.cli.answers import quantities_answer, test_answer
 from autotune.cli.check import show_check
 from autotune.cli.exit_codes import ExitCode
 from autotune.cli.operators import Operator, PersonAtTheTerminal
 from autotune.cli.printing import Voice
-from autotune.cli.settings import change_answer, confirmed_change
+from autotune.cli.settings import confirmed_change
 from autotune.cli.soft_plant import Link, SoftPlant, rehearsal
 from autotune.cli.test import permitted_test, show_end
 from autotune.config.types import LoopConfig
 from autotune.errors import SheetError
 from autotune.loop.outcome import Refusal
 from autotune.service.aftermath import LoopAfter, watch_afterwards
+from autotune.service.answers import change_answer, quantities_answer, test_answer
 from autotune.service.changing import ChangeEnd, SettingsChange
 from autotune.service.local_api import (
     LoopFoundAnswer,

@@ -4,7 +4,7 @@ from typing import Literal
 
 from rich.table import Table
 
-from autotune.cli.answers import proposals_answer, proposals_table
+from autotune.cli.answers import proposals_table
 from autotune.cli.exit_codes import ExitCode
 from autotune.cli.operators import Operator
 from autotune.cli.printing import Voice
@@ -14,6 +14,7 @@ from autotune.config.types import LoopConfig
 from autotune.confirmed_write.phases import Phase
 from autotune.confirmed_write.plan import WritePlan
 from autotune.loop.outcome import Refusal
+from autotune.service.answers import change_answer, change_in_words, proposals_answer
 from autotune.service.cautions import BEFORE_SETTINGS_ARE_WRITTEN
 from autotune.service.changing import ChangeEnd, SettingsChange, digest_to_type, earlier_settings
 from autotune.service.local_api import WriteAnswer
@@ -118,7 +119,7 @@ async def confirmed_change(
         ended = await change.write(kind, sheet_id, plan, typed, person_at_the_terminal(operator.name))
     if not isinstance(ended, Refusal):
         phase = ended.state.phase
-        voice.say(f"{phase.name}. {_what_became(ended)}", style=_STYLES[phase])
+        voice.say(f"{phase.name}. {change_in_words(ended)}", style=_STYLES[phase])
     return ended
 
 
@@ -137,24 +138,3 @@ def show_plan(voice: Voice, loop: LoopConfig, plan: WritePlan) -> None:
     voice.say(f"{loop.name}  {loop.service}: {plan.proposal}", style="head")
     voice.console.print(table)
     voice.say(f"Written from top to bottom, {how}; each value is read back before the next one goes.")
-
-
-def change_answer(ended: ChangeEnd) -> WriteAnswer:
-    """A change's end as data."""
-    return WriteAnswer(
-        outcome=ended.state.phase.name, read_back_equal=ended.is_read_back_equal, text=_what_became(ended)
-    )
-
-
-def _what_became(ended: ChangeEnd) -> str:
-    reasons = " ".join(f"{refusal}." for refusal in ended.state.because)
-    bump = ended.state.op_bump_pct
-    bumped = "" if bump is None else f"The output moved by {bump:+.2f} % when the mode went back."
-    match ended.state.phase:
-        case Phase.WRITTEN:
-            what = "The controller holds the confirmed values."
-        case Phase.PUT_BACK:
-            what = "The settings as found are back in the controller."
-        case _:
-            what = "GO TO THE PANEL NOW and compare the settings and the mode with the sheet."
-    return " ".join(part for part in (what, reasons, bumped) if part)

@@ -10,7 +10,7 @@ import getpass
 import json
 import os
 import socket
-from collections.abc import Iterable
+from collections.abc import Callable, Iterable
 from contextlib import ExitStack, suppress
 from dataclasses import asdict, dataclass
 from datetime import UTC
@@ -25,6 +25,8 @@ from autotune.errors import LoopBusy
 from autotune.service.clock import WallClock, utc_now
 
 LockedThing = Literal["loop", "endpoint", "unit"]
+Named = tuple[LockedThing, str]
+"""Kind and name of what is locked, as ``("loop", "TIC-204")``."""
 
 # Held by the process, not by the thread that happened to take it: any thread may release.
 _AT_ONCE: dict[str, Any] = {"timeout": 0, "thread_local": False}
@@ -73,17 +75,36 @@ class HeldLock:
         self.release()
 
 
-def hold(data_dir: Path, things: Iterable[tuple[LockedThing, str]], tenant: Tenant) -> HeldLock:
-    """Take all the locks or none, at once and without waiting.
+Hold = Callable[[Path, Iterable[Named], Tenant], HeldLock]
+"""Takes all the locks named or none, for a tenant; raises ``LoopBusy``."""
 
-    ``things`` are (kind, name), as ``("loop", "TIC-204")``.  Raises ``LoopBusy``, which says who holds
-    which of them and since when, or why the lock can't be taken.
+
+def hold(data_dir: Path, things: Iterable[Named], tenant: Tenant) -> HeldLock:
+    """Take all the locks or none, at once and without waiting.  Raises ``LoopBusy``,
+    which says who holds which of them and since when, or why the lock can't be taken.
     """
     folder = data_dir / "locks"
     with ExitStack() as taken:
         for kind, name in sorted(set(things)):  # one order for everybody
             _take(folder, kind, name, tenant, taken)
         return HeldLock(taken.pop_all())
+
+
+class HouseLocks:
+    """One master per thing within a process that already holds the locks of this machine for all of them."""
+
+    def __init__(self) -> None:
+        self._held: dict[Named, Tenant] = {}
+
+    def hold(self, data_dir: Path, things: Iterable[Named], tenant: Tenant) -> HeldLock:  # noqa: ARG002 - as ``hold``
+        """Take all of them or none, at once; raises ``LoopBusy``, which says who holds which of them."""
+        with ExitStack() as taken:
+            for thing in sorted(set(things)):
+                if (other := self._held.get(thing)) is not None:
+                    raise LoopBusy(f"{' '.join(thing)} is taken since {other.since_utc}: {other.doing}")
+                self._held[thing] = tenant
+                taken.callback(self._held.pop, thing)
+            return HeldLock(taken.pop_all())
 
 
 def _take(folder: Path, kind: LockedThing, name: str, tenant: Tenant, taken: ExitStack) -> None:

@@ -13,7 +13,7 @@ from autotune.field import open_link
 from autotune.field.link import LoopLink
 from autotune.service.clock import WallClock, utc_now
 from autotune.service.estimator import Estimator, WorkerEstimator
-from autotune.service.locks import HeldLock, LockedThing, Tenant, hold
+from autotune.service.locks import HeldLock, Hold, Named, Tenant, hold
 from autotune.sheet.sqlite_store import SqliteStore
 from autotune.sheet.store import SheetStore
 
@@ -45,6 +45,7 @@ class Workplace:
     wall_clock: WallClock = field(default=utc_now)
     new_token: NewToken = field(default=new_token)
     in_thread: InThread = field(default=asyncio.to_thread)
+    take: Hold = field(default=hold)
 
     @property
     def data_dir(self) -> Path:
@@ -63,9 +64,13 @@ class Workplace:
 
     def hold(self, loop: LoopConfig, doing: str) -> HeldLock:
         """Become the one master of a loop, its plant unit and its endpoint on this machine; raises ``LoopBusy``."""
-        endpoint = _endpoint_line(loop.controller.endpoint)
-        things: tuple[tuple[LockedThing, str], ...] = (("loop", loop.name), ("endpoint", endpoint), ("unit", loop.unit))
-        return hold(self.data_dir, things, Tenant.present(doing, self.wall_clock))
+        return self.take(self.data_dir, things_of(loop), Tenant.present(doing, self.wall_clock))
+
+
+def things_of(loop: LoopConfig) -> tuple[Named, ...]:
+    """What has one master at a time, for this loop: itself, its endpoint and its plant unit."""
+    endpoint = endpoint_line(loop.controller.endpoint)
+    return ("loop", loop.name), ("endpoint", endpoint), ("unit", loop.unit)
 
 
 def open_workplace(configuration: Configuration, *, may_create: bool) -> Workplace:
@@ -84,5 +89,6 @@ def open_workplace(configuration: Configuration, *, may_create: bool) -> Workpla
     return Workplace(configuration, SqliteStore.create(file))
 
 
-def _endpoint_line(endpoint: Endpoint) -> str:
+def endpoint_line(endpoint: Endpoint) -> str:
+    """The address of a controller, as its lock is called."""
     return f"{endpoint.host}:{endpoint.port}" if isinstance(endpoint, ModbusEndpoint) else endpoint.url
