@@ -46,9 +46,9 @@ class Running:
         """Send a signal to the command alone."""
         self._process.send_signal(number)
 
-    async def ended(self) -> Ran:
+    async def ended(self, patience_s: float = PATIENCE_S) -> Ran:
         """Wait for its end."""
-        async with asyncio.timeout(PATIENCE_S):
+        async with asyncio.timeout(patience_s):
             out, err = await self._process.communicate()
         assert self._process.returncode is not None
         return Ran(self._process.returncode, out.decode(), err.decode())
@@ -65,9 +65,9 @@ async def start(*arguments: str | Path, typed: str = "") -> Running:
     return Running(process)
 
 
-async def run(*arguments: str | Path, typed: str = "") -> Ran:
+async def run(*arguments: str | Path, typed: str = "", patience_s: float = PATIENCE_S) -> Ran:
     """Run a command to its end."""
-    return await (await start(*arguments, typed=typed)).ended()
+    return await (await start(*arguments, typed=typed)).ended(patience_s)
 
 
 class Terminal:

@@ -12,7 +12,7 @@ from autotune.sheet import schema
 from tests.system.bench import Change, bench_workplace, permission, write_bench
 from tests.system.command import Terminal, run, terminal
 from tests.system.plant import LOOP, SoftPlant, State, as_real, moved, soft_plant
-from tests.system.together import Outcomes, Scenario, run_together
+from tests.system.together import Outcomes, Scenario, Together
 
 pytestmark = pytest.mark.socket
 
@@ -159,17 +159,18 @@ async def permits(shown: Terminal) -> None:
     shown.types("bench permit 3\n")
 
 
+SCENARIOS: dict[str, Scenario[Act | Job]] = {
+    "settings": settings_changed,
+    "smaller steps and finish": keys,
+    "Ctrl-C in the middle": control_c,
+    "Ctrl-C at the question": control_c_at_the_question,
+    "another name": another_name,
+}
+
+
 @pytest.fixture(scope="module")
-def outcomes(request: pytest.FixtureRequest, tmp_path_factory: pytest.TempPathFactory) -> Outcomes[Act | Job]:
-    folder = tmp_path_factory.mktemp("terminal")
-    scenarios: dict[str, Scenario[Act | Job]] = {
-        "settings": lambda: settings_changed(folder / "settings"),
-        "smaller steps and finish": lambda: keys(folder / "keys"),
-        "Ctrl-C in the middle": lambda: control_c(folder / "middle"),
-        "Ctrl-C at the question": lambda: control_c_at_the_question(folder / "question"),
-        "another name": lambda: another_name(folder / "name"),
-    }
-    return run_together(request, scenarios)
+def outcomes(together: Together) -> Outcomes[Act | Job]:
+    return together.of(Path(__file__).stem, SCENARIOS)
 
 
 @pytest.fixture

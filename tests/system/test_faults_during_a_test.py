@@ -16,7 +16,7 @@ from autotune.service.runner import TestRunner
 from autotune.service.testing import SupervisedTest, TestEnd
 from tests.system.bench import bench_workplace, permission
 from tests.system.plant import LOOP, PATIENCE_S, SoftPlant, State, moved, soft_plant
-from tests.system.together import Outcomes, run_together
+from tests.system.together import Outcomes, Scenario, Together
 
 pytestmark = pytest.mark.socket
 
@@ -182,18 +182,18 @@ async def happens(folder: Path, moment: Moment, strike: Strike) -> Story:
         return Story(end, found, struck, left, len(open_intents(workplace.data_dir)))
 
 
-NAMES = [f"{moment}, {strike}" for strike in STRIKES for moment in MOMENTS]
+def _scenario(moment: Moment, strike: Strike) -> Scenario[Story]:
+    return lambda folder: happens(folder, moment, strike)
+
+
+SCENARIOS = {
+    f"{moment}, {strike}": _scenario(MOMENTS[moment], STRIKES[strike]) for strike in STRIKES for moment in MOMENTS
+}
 
 
 @pytest.fixture(scope="module")
-def stories(request: pytest.FixtureRequest, tmp_path_factory: pytest.TempPathFactory) -> Outcomes[Story]:
-    folder = tmp_path_factory.mktemp("faults")
-
-    def scenario(name: str) -> Callable[[], Awaitable[Story]]:
-        moment, strike = name.split(", ")
-        return lambda: happens(folder / name.replace(" ", "-"), MOMENTS[moment], STRIKES[strike])
-
-    return run_together(request, {name: scenario(name) for name in NAMES})
+def stories(together: Together) -> Outcomes[Story]:
+    return together.of(Path(__file__).stem, SCENARIOS)
 
 
 def at_every_moment(strike: str) -> pytest.MarkDecorator:
@@ -332,7 +332,7 @@ def test_after_a_restart_of_the_plc_nothing_is_written(stories: Outcomes[Story],
     assert (left["mode"], left["op"], left["heartbeat"], left["sequence"]) == ("MAN", struck["op"], 0, 0)
 
 
-@pytest.mark.parametrize("name", NAMES)
+@pytest.mark.parametrize("name", SCENARIOS)
 def test_every_end_is_kept_with_its_sheet_and_its_journal(stories: Outcomes[Story], name: str) -> None:
     story = stories.of(name)
     assert story.open_intents == 0

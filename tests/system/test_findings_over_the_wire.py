@@ -12,7 +12,7 @@ from autotune.service.estimator import WorkerEstimator
 from autotune.service.testing import SupervisedTest
 from tests.system.bench import WITHOUT_CLOCK_TAGS, Change, bench_workplace, permission
 from tests.system.plant import LOOP, soft_plant
-from tests.system.together import Outcomes, Scenario, run_together
+from tests.system.together import Outcomes, Scenario, Together
 from tests.system.true_plant import true_plant
 
 pytestmark = pytest.mark.socket
@@ -34,14 +34,16 @@ async def identified(folder: Path, changes: tuple[Change, ...]) -> Findings:
     return ended.findings
 
 
+def _scenario(changes: tuple[Change, ...]) -> Scenario[Findings]:
+    return lambda folder: identified(folder, changes)
+
+
+SCENARIOS = {name: _scenario(changes) for name, changes in CONFIGURATIONS.items()}
+
+
 @pytest.fixture(scope="module")
-def findings(request: pytest.FixtureRequest, tmp_path_factory: pytest.TempPathFactory) -> Outcomes[Findings]:
-    folder = tmp_path_factory.mktemp("findings")
-
-    def scenario(name: str) -> Scenario[Findings]:
-        return lambda: identified(folder / name.replace(" ", "-"), CONFIGURATIONS[name])
-
-    return run_together(request, {name: scenario(name) for name in CONFIGURATIONS})
+def findings(together: Together) -> Outcomes[Findings]:
+    return together.of(Path(__file__).stem, SCENARIOS)
 
 
 @pytest.mark.parametrize("name", ["with clock tags"])

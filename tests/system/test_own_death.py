@@ -10,7 +10,7 @@ import pytest
 from tests.system.bench import WITHOUT_GUARD, Change, write_bench
 from tests.system.command import Ran, Running, run, start
 from tests.system.plant import LOOP, SoftPlant, State, moved, soft_plant
-from tests.system.together import Outcomes, Scenario, run_together
+from tests.system.together import Outcomes, Scenario, Together
 
 pytestmark = pytest.mark.socket
 
@@ -105,20 +105,21 @@ async def paused(folder: Path) -> Story:
         return Story(found, struck, await plant.scan_on(5), ran)
 
 
+SCENARIOS: dict[str, Scenario[Story]] = {
+    "killed too long ago": killed_too_long_ago,
+    "killed with a guard": killed_with_a_guard,
+    "killed without a guard": killed_without_a_guard,
+    "killed and taken": killed_and_taken,
+    "paused": paused,
+    "SIGTERM": lambda folder: signalled(folder, signal.SIGTERM),
+    "SIGINT": lambda folder: signalled(folder, signal.SIGINT),
+    "SIGHUP": lambda folder: signalled(folder, signal.SIGHUP),
+}
+
+
 @pytest.fixture(scope="module")
-def stories(request: pytest.FixtureRequest, tmp_path_factory: pytest.TempPathFactory) -> Outcomes[Story]:
-    folder = tmp_path_factory.mktemp("death")
-    scenarios: dict[str, Scenario[Story]] = {
-        "SIGTERM": lambda: signalled(folder / "term", signal.SIGTERM),
-        "SIGINT": lambda: signalled(folder / "int", signal.SIGINT),
-        "SIGHUP": lambda: signalled(folder / "hup", signal.SIGHUP),
-        "killed with a guard": lambda: killed_with_a_guard(folder / "guard"),
-        "killed without a guard": lambda: killed_without_a_guard(folder / "bare"),
-        "killed too long ago": lambda: killed_too_long_ago(folder / "old"),
-        "killed and taken": lambda: killed_and_taken(folder / "taken"),
-        "paused": lambda: paused(folder / "paused"),
-    }
-    return run_together(request, scenarios, at_once=8)
+def stories(together: Together) -> Outcomes[Story]:
+    return together.of(Path(__file__).stem, SCENARIOS)
 
 
 def is_as_found(story: Story) -> bool:

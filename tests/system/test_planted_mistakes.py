@@ -21,7 +21,7 @@ from autotune.service.workplace import Workplace
 from simulator.rig import find_rig
 from tests.system.bench import Change, bench_workplace, permission
 from tests.system.plant import LOOP, State, as_real, moved, soft_plant
-from tests.system.together import Outcomes, Scenario, run_together
+from tests.system.together import Outcomes, Scenario, Together
 
 pytestmark = pytest.mark.socket
 
@@ -182,16 +182,16 @@ async def tried(folder: Path, mistake: Mistake) -> Named:
         return Named(code, text, before, await plant.state(), operator.cautions)
 
 
+def _scenario(mistake: Mistake) -> Scenario[Named]:
+    return lambda folder: tried(folder, mistake)
+
+
+SCENARIOS = {name: _scenario(mistake) for name, mistake in MISTAKES.items()}
+
+
 @pytest.fixture(scope="module")
-def named(request: pytest.FixtureRequest, tmp_path_factory: pytest.TempPathFactory) -> Outcomes[Named]:
-    folder = tmp_path_factory.mktemp("mistakes")
-
-    def scenario(number: int, mistake: Mistake) -> Scenario[Named]:
-        return lambda: tried(folder / str(number), mistake)
-
-    return run_together(
-        request, {name: scenario(number, mistake) for number, (name, mistake) in enumerate(MISTAKES.items())}
-    )
+def named(together: Together) -> Outcomes[Named]:
+    return together.of(Path(__file__).stem, SCENARIOS)
 
 
 @pytest.mark.parametrize("name", MISTAKES)
