@@ -12,6 +12,7 @@ from autotune.cli import convert as converting
 from autotune.cli import rehearse as rehearsing
 from autotune.cli import settings as setting
 from autotune.cli import sheets
+from autotune.cli import tags as listing
 from autotune.cli import test as testing
 from autotune.cli.exit_codes import ExitCode
 from autotune.cli.operators import PersonAtTheTerminal
@@ -192,3 +193,41 @@ def convert(
     wanted = converting.Notation(to, to_gain, to_integral, to_derivative)
     fields = BlockFields(gain, integral, derivative)
     raise typer.Exit(converting.convert(Voice(is_json=is_json), fields, given, wanted))
+
+
+@app.command("list-tags")
+def list_tags(
+    config: Config,
+    controller: Annotated[
+        str | None, typer.Option("--controller", metavar="NAME", help="which OPC UA server, where there are several")
+    ] = None,
+    under: Annotated[
+        str, typer.Option("--under", metavar="NODE", help="begin there: a node id, or a path such as /2:Skid")
+    ] = "",
+    draft: Annotated[
+        str | None,
+        typer.Option("--draft", metavar="OBJECT", help="draft the section of this object's loop, or of all below it"),
+    ] = None,
+    is_json: Json = False,
+) -> None:
+    """Show what an OPC UA server holds, or draft loop sections from it (TOML); the file's loops may be unfinished."""
+    _run(listing.show_tags(Voice(is_json=is_json), config, controller, under, draft))
+
+
+@app.command("import-tags")
+def import_tags(
+    file: Annotated[
+        Path,
+        typer.Argument(
+            metavar="FILE.csv",
+            help="a list with the header name,table,address,type,scale,unit,bit (the last three may be missing), "
+            "separated by commas, semicolons or tabs; a name ends in the tag, such as TIC-204.PV",
+        ),
+    ],
+    controller: Annotated[
+        str, typer.Option("--controller", metavar="NAME", help="the Modbus controller that the loops belong to")
+    ] = "",
+    is_json: Json = False,
+) -> None:
+    """Draft loop sections (TOML) from a CSV list of Modbus tags."""
+    raise typer.Exit(listing.import_tags(Voice(is_json=is_json), file, controller))

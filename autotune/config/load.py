@@ -62,6 +62,23 @@ def load(path: Path | str, overrides: Mapping[str, Override] | None = None) -> C
     return _configuration(path, draft)
 
 
+def load_controllers(path: Path | str) -> tuple[Controller, ...]:
+    """The controllers of a configuration, whose loops may be missing or unfinished.
+
+    Raises ``ConfigError`` with every complaint about the files, their tops, controllers and blocks.
+    """
+    path = Path(path)
+    documents = gather(path, {})
+    draft = _Draft(documents)
+    if documents.tops:
+        _read_tops(path, draft)
+        _read_controllers_and_blocks(draft)
+    if documents.complaints or draft.file is None:
+        raise ConfigError(_once_each(documents.complaints))
+    data_dir = path.parent / draft.file.data_dir
+    return tuple(_controller(name, draft, path.parent, data_dir) for name in draft.controllers)
+
+
 def _read_tops(path: Path, draft: _Draft) -> None:
     top, *included = draft.documents.tops
     draft.file = _table(draft.documents, top, FileTable)
