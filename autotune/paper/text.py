@@ -3,8 +3,25 @@
 from collections.abc import Iterable, Iterator, Sequence
 from datetime import UTC, tzinfo
 
-from autotune.paper.words import OUTCOMES, RESULTS, WIDTH, exact, instant, plain, quantity, shown, wrapped
-from autotune.sheet.schema import AsFound, Change, Person, Quantity, Recovery, Sheet, Span
+from autotune.paper.words import (
+    RESULTS,
+    WIDTH,
+    amount_of,
+    between,
+    both,
+    exact,
+    instant,
+    newest_change,
+    outcome_line,
+    person_line,
+    plain,
+    quantity,
+    shown,
+    span_line,
+    what_to_do,
+    wrapped,
+)
+from autotune.sheet.schema import AsFound, Change, Quantity, Recovery, Sheet
 from autotune.sheet.store import StoredSheet
 
 
@@ -46,17 +63,15 @@ def _identity(sheet: Sheet, zone: tzinfo) -> Iterator[str]:
         ("Loop", f"{sheet.loop}  {sheet.service}"),
         ("Unit", f"{sheet.unit}, controller {sheet.controller}"),
         ("Started", f"{instant(sheet.started_utc, zone)}, lasted {shown(length_s, 's')}"),
-        ("Tested by", _person(sheet.person)),
-        ("PV span", _span(sheet.pv_span)),
-        ("OP span", _span(sheet.op_span)),
+        ("Tested by", person_line(sheet.person)),
+        ("PV span", span_line(sheet.pv_span)),
+        ("OP span", span_line(sheet.op_span)),
     )
 
 
 def _outcome(sheet: Sheet) -> Iterator[str]:
-    code = f" ({sheet.outcome.code})" if sheet.outcome.code else ""
-    yield from wrapped(f"{sheet.outcome.ended}{code}: {sheet.outcome.text}")
-    is_untouched = sheet.outcome.ended == "ABORTED" and sheet.as_found is None and not sheet.writes
-    yield from wrapped("The loop was not touched." if is_untouched else OUTCOMES[sheet.outcome.ended])
+    yield from wrapped(outcome_line(sheet))
+    yield from wrapped(what_to_do(sheet))
 
 
 def _as_found_as_left(stored: StoredSheet, zone: tzinfo) -> Iterator[str]:
@@ -64,7 +79,7 @@ def _as_found_as_left(stored: StoredSheet, zone: tzinfo) -> Iterator[str]:
     if found is None:
         return
     yield from _loop_state(found, stored.sheet)
-    change = next((entry for entry in reversed(stored.addenda) if isinstance(entry, Change)), None)
+    change = newest_change(stored)
     if change is not None:
         yield from wrapped(f"Settings as left: {change.result}, {instant(change.utc, zone)}")
         yield from _settings(("as found", found.settings), ("as left", change.read_back))
@@ -76,9 +91,9 @@ def _as_found_as_left(stored: StoredSheet, zone: tzinfo) -> Iterator[str]:
 def _loop_state(state: AsFound, sheet: Sheet) -> Iterator[str]:
     yield from _rows(
         ("Mode", state.mode),
-        ("Output", _both(state.op_pct, state.op_eu, sheet.op_span)),
-        ("Setpoint", _both(state.sp_pct, state.sp_eu, sheet.pv_span)),
-        ("PV", _both(state.pv_pct, state.pv_eu, sheet.pv_span)),
+        ("Output", both(state.op_pct, state.op_eu, sheet.op_span)),
+        ("Setpoint", both(state.sp_pct, state.sp_eu, sheet.pv_span)),
+        ("PV", both(state.pv_pct, state.pv_eu, sheet.pv_span)),
     )
 
 
@@ -89,7 +104,7 @@ def _settings(*columns: tuple[str, Sequence[Quantity]]) -> Iterator[str]:
     yield from _table(
         ("", *(title for title, _ in columns)),
         [
-            (field.label, *(exact(_amount(column, field.name), field.unit) for _, column in columns))
+            (field.label, *(exact(amount_of(column, field.name), field.unit) for _, column in columns))
             for field in columns[0][1]
         ],
     )
@@ -107,8 +122,8 @@ def _planned(sheet: Sheet) -> Iterator[str]:
         ("Excitation", f"{plan.kind}, first {plan.first_move}"),
         ("Steps", f"up {shown(plan.step_up_pct, '%')}, down {shown(plan.step_down_pct, '%')} of OP span"),
         ("Hysteresis", f"{hysteresis} (half-width)"),
-        ("Output limits", _range(limits.op_low_pct, limits.op_high_pct, sheet.op_span)),
-        ("PV limits", _range(limits.pv_low_pct, limits.pv_high_pct, sheet.pv_span)),
+        ("Output limits", between(limits.op_low_pct, limits.op_high_pct, sheet.op_span)),
+        ("PV limits", between(limits.pv_low_pct, limits.pv_high_pct, sheet.pv_span)),
         ("Scan", f"ours {shown(plan.scan_s, 's')}, controller's {shown(plan.plc_scan_s, 's')}"),
         ("Guard", "armed in the controller" if plan.has_guard else "none in the controller"),
     )
@@ -128,12 +143,6 @@ def _events(sheet: Sheet, zone: tzinfo) -> Iterator[str]:
         )
 
 
-def _range(low_pct: float, high_pct: float, span: Span) -> str:
-    width_eu = (span.high_eu - span.low_eu) / 100.0
-    low, high = (_both(pct, span.low_eu + pct * width_eu, span, 4) for pct in (low_pct, high_pct))
-    return f"{low} to {high}"
-
-
 def _cycles(sheet: Sheet) -> Iterator[str]:
     if sheet.findings is None or not sheet.findings.cycles:
         return
@@ -143,7 +152,7 @@ def _cycles(sheet: Sheet) -> Iterator[str]:
             str(n),
             f"{cycle.from_s:.1f} s",
             shown(cycle.period_s, "s"),
-            _both(cycle.pv_amplitude_pct, cycle.pv_amplitude_pct * (span.high_eu - span.low_eu) / 100.0, span, 4),
+            both(cycle.pv_amplitude_pct, cycle.pv_amplitude_pct * (span.high_eu - span.low_eu) / 100.0, span, 4),
             shown(cycle.amplitude_pct, "%"),
         )
         for n, cycle in enumerate(sheet.findings.cycles, start=1)
@@ -194,7 +203,7 @@ def _proposals(sheet: Sheet) -> Iterator[str]:
 
 def _addenda(stored: StoredSheet, zone: tzinfo) -> Iterator[str]:
     for entry, link in zip(stored.addenda, stored.entries[1:], strict=True):
-        yield from wrapped(f"{entry.kind.upper()}, {instant(entry.utc, zone)}, {_person(entry.person)}")
+        yield from wrapped(f"{entry.kind.upper()}, {instant(entry.utc, zone)}, {person_line(entry.person)}")
         if entry.text:
             yield from wrapped(entry.text, "    ")
         if isinstance(entry, Change):
@@ -258,24 +267,3 @@ def _table(titles: Sequence[str], rows: Sequence[Sequence[str]]) -> Iterator[str
 def _bullets(texts: Iterable[str], indent: str = "") -> Iterator[str]:
     for text in texts:
         yield from wrapped(f"- {text}", indent)
-
-
-def _both(pct: float | None, eu: float | None, span: Span, digits: int = 5) -> str:
-    """A reading in percent and, where that is another number, in engineering units."""
-    if pct is None:
-        return "not known"
-    is_percent = (span.low_eu, span.high_eu, span.unit) == (0.0, 100.0, "%")
-    told = shown(pct, "%", digits)
-    return told if eu is None or is_percent else f"{told} = {shown(eu, span.unit, digits)}"
-
-
-def _span(span: Span) -> str:
-    return f"0 % = {shown(span.low_eu, span.unit)}, 100 % = {shown(span.high_eu, span.unit)}"
-
-
-def _amount(column: Sequence[Quantity], name: str) -> float | None:
-    return next((field.amount for field in column if field.name == name), None)
-
-
-def _person(person: Person) -> str:
-    return person.name if person.is_authenticated else f"{person.name} (typed, not authenticated)"

@@ -1,10 +1,11 @@
 """Figures, instants and outcomes as a person reads them.  Undefined is said, never left blank."""
 
 import textwrap
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from datetime import datetime, tzinfo
 
-from autotune.sheet.schema import Quantity
+from autotune.sheet.schema import Change, Person, Quantity, Sheet, Span
+from autotune.sheet.store import StoredSheet
 
 WIDTH = 100
 
@@ -60,6 +61,58 @@ def wrapped(text: str, indent: str = "") -> Iterator[str]:
     """Lines of at most ``WIDTH`` columns; later lines stand under the first one's text."""
     lead = indent + " " * (len(text) - len(text.lstrip("- ")))
     yield from textwrap.wrap(plain(text), WIDTH, initial_indent=indent, subsequent_indent=lead) or [indent.rstrip()]
+
+
+def outcome_line(sheet: Sheet) -> str:
+    """How the test ended, with its code."""
+    code = f" ({sheet.outcome.code})" if sheet.outcome.code else ""
+    return f"{sheet.outcome.ended}{code}: {sheet.outcome.text}"
+
+
+def what_to_do(sheet: Sheet) -> str:
+    """What the outcome means for the loop."""
+    is_untouched = sheet.outcome.ended == "ABORTED" and sheet.as_found is None and not sheet.writes
+    return "The loop was not touched." if is_untouched else OUTCOMES[sheet.outcome.ended]
+
+
+def newest_change(stored: StoredSheet) -> Change | None:
+    """The last confirmed change of settings that was added to the sheet."""
+    return next((entry for entry in reversed(stored.addenda) if isinstance(entry, Change)), None)
+
+
+def both(pct: float | None, eu: float | None, span: Span, digits: int = 5) -> str:
+    """A reading in percent and, where that is another number, in engineering units."""
+    if pct is None:
+        return "not known"
+    is_percent = (span.low_eu, span.high_eu, span.unit) == (0.0, 100.0, "%")
+    told = shown(pct, "%", digits)
+    return told if eu is None or is_percent else f"{told} = {shown(eu, span.unit, digits)}"
+
+
+def to_eu(pct: float, span: Span) -> float:
+    """Percent of span in engineering units."""
+    return span.low_eu + pct * (span.high_eu - span.low_eu) / 100.0
+
+
+def between(low_pct: float, high_pct: float, span: Span) -> str:
+    """A range of a signal in both units."""
+    low, high = (both(pct, to_eu(pct, span), span, 4) for pct in (low_pct, high_pct))
+    return f"{low} to {high}"
+
+
+def span_line(span: Span) -> str:
+    """The ends of a span."""
+    return f"0 % = {shown(span.low_eu, span.unit)}, 100 % = {shown(span.high_eu, span.unit)}"
+
+
+def amount_of(column: Sequence[Quantity], name: str) -> float | None:
+    """The amount of the quantity called ``name``; ``None`` where the column lacks it."""
+    return next((field.amount for field in column if field.name == name), None)
+
+
+def person_line(person: Person) -> str:
+    """A person as the sheet may name them."""
+    return person.name if person.is_authenticated else f"{person.name} (typed, not authenticated)"
 
 
 def _digits(number: float, digits: int) -> str:
