@@ -2,7 +2,8 @@
 
 One command is out at a time.  Each field is read back before the next is written; nothing on the wire is
 ever taken to mean "not applied".  What fails after a write is put back as found.  The mode is never
-fought over: once a person has changed it, nothing more is written, and the end says what was read.
+fought over: once a person has changed it, nothing more is written, and the end says what was read.  The same
+holds once a person has moved the output that we hold in manual; then the loop stays in manual, and that is said loudly.
 Settings that are neither the old nor the new ones are left alone, in the mode that they are in, and the
 end is loud: automatic isn't given back onto settings that nobody chose.
 """
@@ -34,6 +35,7 @@ from autotune.confirmed_write.reasons import (
     not_held,
     not_manual,
     not_read,
+    output_taken,
     settings_differ,
     unverified,
     write_refused,
@@ -48,6 +50,9 @@ from autotune.loop.write import WriteOutcome
 
 SP_SAME_PCT = 0.05
 """Setpoints closer than this are one: half a unit in the first decimal of a percent display."""
+
+OP_HELD_PCT = 0.5
+"""An output held in manual reads no farther from where it was than this: coarse read-backs of positions included."""
 
 
 def begin(
@@ -179,6 +184,8 @@ def _verify(state: WriteState, reading: SettingsRead) -> Step:
     plan, name = state.plan, state.plan.order[state.written - 1]
     if reading.mode is not state.mode_held:
         return _put_back(state, Trigger.NOT_HELD, mode_taken(reading.mode), reading.t_s)
+    if (moved := _output_taken(state, reading)) is not None:
+        return _put_back(state, Trigger.NOT_HELD, moved, reading.t_s)
     if state.cancelled_by is not None:
         return _put_back(state, Trigger.NOT_HELD, cancelled(state), reading.t_s)
     if any(not _is_expected(state, other, reading.fields) for other in FIELD_NAMES if other != name):
@@ -203,6 +210,8 @@ def _prove(state: WriteState, reading: SettingsRead) -> Step:
         if not changed_fields(plan.as_found, reading.fields):
             return _go(state, Trigger.SEEN_OLD)
         return _unverified(state, "the mode was changed while the settings were neither all old nor all new")
+    if (moved := _output_taken(state, reading)) is not None:
+        return _leave_in_manual(state, moved)
     if _touched_by_others(state, reading.fields):
         return _unverified(state, "somebody else changed the settings meanwhile, so nothing more was written")
     left = [name for name in plan.order[: state.written] if name in changed_fields(plan.as_found, reading.fields)]
@@ -238,6 +247,8 @@ def _return(state: WriteState, reading: SettingsRead) -> Step:
         return _give_setpoint_back(state, reading)
     if not state.is_taken or reading.mode is not LoopMode.MAN:
         return _go(replace(state, because=(*state.because, mode_taken(reading.mode))), state.ends_at)
+    if (moved := _output_taken(state, reading)) is not None:
+        return _leave_in_manual(state, moved)
     if not reading.t_s < state.give_up_s:
         return _unverified(state, f"the loop is still in manual and was found in {state.mode_found.value}")
     if state.is_mode_acknowledged:
@@ -304,6 +315,15 @@ def _release(state: WriteState, refusal: Refusal, t_s: float) -> Step:
     return _give_back(state, Trigger.TAKE_FAILED, Trigger.NOTHING_WRITTEN, t_s)
 
 
+def _leave_in_manual(state: WriteState, moved: Refusal) -> Step:
+    """Somebody works with the output in manual: automatic would undo what they do."""
+    if moved.code not in [refusal.code for refusal in state.because]:
+        state = replace(state, because=(*state.because, moved))
+    return _unverified(
+        state, f"the loop is in manual and was found in {state.mode_found.value}; nothing more was written"
+    )
+
+
 def _refuse(state: WriteState, refusal: Refusal) -> Step:
     return _go(state, Trigger.NOTHING_WRITTEN, because=(*state.because, refusal))
 
@@ -343,6 +363,14 @@ def _touched_by_others(state: WriteState, fields: BlockFields) -> bool:
     """Whether a field holds a number that can't come from us; the last one sent may hold anything."""
     others = [name for name in changed_fields(state.plan.as_found, fields) if name != state.last_sent]
     return any(not _is_expected(state, name, fields) for name in others)
+
+
+def _output_taken(state: WriteState, reading: SettingsRead) -> Refusal | None:
+    """What to say when the output that we hold in manual was moved; ``None`` while it stands, or can't be told."""
+    held_pct, read_pct = state.op_held_pct, reading.op_pct
+    if not state.is_taken or reading.mode is not LoopMode.MAN or held_pct is None or read_pct is None:
+        return None
+    return None if abs(read_pct - held_pct) <= OP_HELD_PCT else output_taken(held_pct, read_pct)
 
 
 def _number(fields: BlockFields, name: str) -> float:

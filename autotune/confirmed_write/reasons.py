@@ -39,6 +39,15 @@ def mode_taken(mode: LoopMode) -> Refusal:
     )
 
 
+def output_taken(held_pct: float, read_pct: float) -> Refusal:
+    """Somebody else moved the output in manual: the loop is theirs."""
+    return Refusal(
+        "OUTPUT_TAKEN",
+        f"the output was moved from {held_pct:.2f} % to {read_pct:.2f} % by somebody else",
+        "the loop was left in manual, where they have it",
+    )
+
+
 def not_manual(detail: str) -> Refusal:
     """The loop did not go to manual."""
     return Refusal("NOT_MANUAL", f"the loop did not go to manual ({detail})", "put it in manual by hand, then write")

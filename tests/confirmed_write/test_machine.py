@@ -392,6 +392,46 @@ def test_a_mode_taken_during_the_return_is_left_with_a_notice() -> None:
     assert controller.mode is CAS
 
 
+def _moves_output(controller: Controller) -> None:
+    controller.op_pct = 20.0
+
+
+@pytest.mark.parametrize("write", [1, 2, 3])
+def test_an_output_that_a_person_moves_in_manual_is_theirs_and_the_loop_stays_in_manual_loudly(write: int) -> None:
+    def on_command(controller: Controller, command: Command) -> None:
+        if isinstance(command, ReadSettings) and len(controller.writes) == write:
+            _moves_output(controller)
+
+    controller = Controller(on_command=on_command)
+    state = run(controller)
+    assert (state.phase, _codes(state)) == (Phase.UNVERIFIED, ["OUTPUT_TAKEN", "UNVERIFIED"])
+    assert (len(controller.writes), controller.modes, controller.op_pct) == (write, [MAN], 20.0)
+    assert "from 40.00 % to 20.00 %" in state.because[0].reason
+    assert "is in manual and was found in AUTO" in state.because[1].reason
+
+
+def test_an_output_moved_while_the_settings_go_back_or_the_mode_does_is_theirs_too() -> None:
+    putting_back = Controller(
+        on_write=_on_write((APPLIED, True), (REFUSED, False)), on_command=_before(WriteField, 3, _moves_output)
+    )
+    returning = Controller(on_mode=_unheard_return(), on_command=_before(ReadSettings, 6, _moves_output))
+    for controller, modes in ((putting_back, [MAN]), (returning, [MAN, AUTO])):
+        state = run(controller)
+        assert state.phase is Phase.UNVERIFIED
+        assert _codes(state)[-2:] == ["OUTPUT_TAKEN", "UNVERIFIED"]
+        assert (controller.modes, controller.mode) == (modes, MAN)
+
+
+def _unheard_return() -> Callable[[LoopMode], tuple[WriteOutcome, bool]]:
+    return lambda mode: (APPLIED, True) if mode is MAN else (NOT_HEARD, False)
+
+
+@pytest.mark.parametrize("read_pct", [40.5, None])
+def test_an_output_held_within_its_read_back_or_not_read_at_all_is_no_sign_of_a_person(read_pct: float | None) -> None:
+    controller = Controller(on_command=_before(ReadSettings, 3, lambda plant: setattr(plant, "op_pct", read_pct)))
+    assert run(controller).phase is Phase.WRITTEN
+
+
 def test_a_mode_changed_while_the_loop_was_found_in_manual_is_left_too() -> None:
     controller = Controller(mode=MAN, on_command=_before(ReadSettings, 5, lambda plant: plant.set_mode(AUTO)))
     state = run(controller)
