@@ -69,6 +69,7 @@ class UaPlant:
         self.script: deque[Trouble] = deque()
         self.refusal = StatusCodes.BadUserAccessDenied
         self.refused_nodes: dict[str, int] = {}
+        self.write_fault: int | None = None
         self.reactions: deque[Trouble] = deque()
         self.requests: list[tuple[str, tuple[str, ...]]] = []
         self.server = Server(iserver=_TroubledServer(self))
@@ -104,6 +105,7 @@ class UaPlant:
         """As at rest, without trouble."""
         for trouble in (self.script, self.reactions, self.requests, self.refused_nodes):
             trouble.clear()
+        self.write_fault = None
         for name, (kind, raw) in self.held_at_rest.items():
             self.put(name, ua.DataValue(ua.Variant(raw, _VARIANTS[kind])))
 
@@ -115,6 +117,23 @@ class UaPlant:
         """The number in the node."""
         raw: RawValue = self.call(self._held(name)).Value.Value
         return raw
+
+    def place(self, name: str, node_id: str, kind: DataType = DataType.REAL, raw: RawValue = 1.0) -> None:
+        """A node of that name in the skid, instead of the one there was."""
+        self.call(self._place(name, node_id, kind, raw))
+
+    async def _place(self, name: str, node_id: str, kind: DataType, raw: RawValue) -> None:
+        if name in self._nodes:
+            await self.server.delete_nodes([self._nodes[name]])
+        skid = await self.server.nodes.objects.get_child(["2:Pasteuriser"])
+        node = await skid.add_variable(
+            ua.NodeId.from_string(node_id),
+            ua.QualifiedName(name, 2),
+            raw,
+            _VARIANTS[kind],
+        )
+        await node.set_writable()
+        self._nodes[name] = node
 
     async def _put(self, name: str, answer: ua.DataValue) -> None:
         await self.server.write_attribute_value(self._nodes[name].nodeid, answer)
@@ -175,6 +194,8 @@ class _TroubledSession(InternalSession):
         if self.plant is None:
             return await super().write(params)
         plant = self.plant
+        if plant.write_fault is not None:
+            raise ServiceError(plant.write_fault)
         trouble = plant.script.popleft() if plant.script else Trouble.NONE
         names = [str(one.NodeId.Identifier) for one in params.NodesToWrite]
         plant.requests.append(("write", tuple(names)))
@@ -201,6 +222,8 @@ class Wire:
 
     def __init__(self, plant: UaPlant) -> None:
         self.heard = asyncio.Event()
+        self.left = asyncio.Event()
+        """Set when the link has closed, and all that it sent was seen."""
         self.port = 0
         self.octets_up = bytearray()
         self._plant = plant
@@ -251,6 +274,7 @@ class Wire:
                 self.octets_up += octets
                 plant.write(octets)
                 await plant.drain()
+        self.left.set()
         plant.transport.abort()
 
     async def _down(self, plant: asyncio.StreamReader, writer: asyncio.StreamWriter) -> None:

@@ -52,6 +52,7 @@ class OpcUaLink:
         self._opening = Opening(endpoint)
         self._session: Session | None = None
         self._nodes: dict[str, FoundNode] = {}
+        self._barred: frozenset[ua.NodeId] = frozenset()
         self._one_at_a_time = asyncio.Lock()
         self._back_off = back_off or BackOff(endpoint.connect_gap_s)
 
@@ -75,6 +76,7 @@ class OpcUaLink:
             session = await self._opening.open()
             try:
                 self._take(await find_nodes(session, self._tags))
+                self._barred = await self._find_barred(session)
             except LinkRefused as refusal:
                 session.drop()
                 raise LinkClosed(f"{refusal} (finding the nodes)") from refusal
@@ -182,6 +184,12 @@ class OpcUaLink:
             held = node.held or (None if former is None else former.held)
             self._nodes[name] = FoundNode(node.node_id, node.name, held, node.fault)
 
+    async def _find_barred(self, session: Session) -> frozenset[ua.NodeId]:
+        """The nodes that the site never lets write, whatever name leads to them."""
+        told = {text: OpcUaTag(text) for text in self._endpoint.never_written}
+        found = (await find_nodes(session, told)).values() if told else ()
+        return frozenset(node.node_id for node in found if node.node_id is not None)
+
     def _unfound(self, name: str) -> Reading:
         return Reading(None, Quality.BAD, reason=self._nodes[name].fault)
 
@@ -214,6 +222,8 @@ class OpcUaLink:
             raise WriteForbidden(
                 f"{name!r} can't be written: {node.fault or 'its type is not known, it never held a number'}"
             )
+        if node.node_id in self._barred:
+            raise WriteForbidden(f"{name!r} is {node.name}, which the site's limits never let write")
         if told is not None and told is not node.held:
             raise WriteForbidden(
                 f"{name!r} is a {told.value} in the file, but {node.name} holds a {node.held.value}; correct the type"

@@ -63,7 +63,7 @@ def to_answer(held: DataType, raw: RawValue) -> ua.DataValue:
 
     Raises ``WriteForbidden`` for NaN, infinity, what the type can't hold, and a fraction in a whole number.
     """
-    return ua.DataValue(ua.Variant(as_held(held, raw), _VARIANT_TYPES[held]))
+    return ua.DataValue(ua.Variant(as_held(held, raw), _VARIANT_TYPES[held]), StatusCode=None)
 
 
 def as_held(held: DataType, raw: RawValue) -> RawValue:
