@@ -1,0 +1,175 @@
+"""Robust optimum: the least integrated error after a load step that the limits on Ms, Mt and noise allow.
+
+For given times the gain follows from intervals (``gain_intervals``), so that a PI is a search along one
+line and a PID one over a plane.  Everything is judged on the sampled loop and in the block's own form and filter.
+"""
+
+from collections.abc import Callable
+from dataclasses import dataclass
+from math import ceil, exp, inf, isfinite, sqrt
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.optimize import minimize
+
+from autotune.design.block_response import BlockTerms, block_equation, block_terms
+from autotune.design.gain_intervals import LoopLimits, admissible_tops
+from autotune.design.held import HeldPlant, held_plant
+from autotune.design.loop_grid import SeenPlant
+from autotune.design.margins import turns_say_stable
+from autotune.design.responses import ClosedLoop, closed_loop, horizon_scans, load_iae_pct_s
+from autotune.loop.settings import BlockDescription, PidSettings
+
+Array = NDArray[np.float64]
+
+_SIMULATED_PER_PERIOD = 200.0
+"""Scans per ultimate period beyond which a response doesn't get truer, only dearer."""
+
+_TIMES = np.geomspace(0.02, 60.0, 36)
+"""Integral times over the ultimate period that a PI is first sought among."""
+
+_GOLDEN_TURNS = 12
+_PID_STARTS = ((0.5, 0.12), (0.9, 0.3))
+"""Ti over that of the PI's optimum, and Td over the ultimate period."""
+
+_PID_TURNS_AT_MOST = 90
+
+_WITHIN_GRID_RATIO = 3.0
+"""Least |L| at the lowest frequency of the grid: a loop that crosses below it is not judged by it."""
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class LoopBench:
+    """A plant under a block, ready to be tried with many settings: grid for the limits, held plant for responses."""
+
+    plant: SeenPlant
+    block: BlockDescription
+    terms: BlockTerms
+    simulated: HeldPlant
+    scans: int
+
+    @property
+    def period_s(self) -> float:
+        """The ultimate period that times are counted in."""
+        return 2.0 * np.pi / self.plant.ultimate_rad_per_s
+
+    def loop(self, settings: PidSettings) -> ClosedLoop:
+        """The closed loop with settings in the block's form."""
+        return closed_loop(self.simulated, block_equation(self.block, settings, self.simulated.scan_s))
+
+
+@dataclass(frozen=True, slots=True)
+class Found:
+    """Settings that hold the limits, with the load-step IAE (% s per % of load)."""
+
+    settings: PidSettings
+    iae_pct_s: float
+
+
+def loop_bench(plant: SeenPlant, block: BlockDescription) -> LoopBench:
+    """``plant`` must be sampled.  Raises ``ValueError`` for a continuous one."""
+    if plant.held is None:
+        raise ValueError("an optimum needs the block's scan")
+    period_s = 2.0 * np.pi / plant.ultimate_rad_per_s
+    simulated = simulated_plant(plant, plant.held, period_s)
+    return LoopBench(
+        plant,
+        block,
+        block_terms(block, plant.w_rad_per_s, plant.held.scan_s),
+        simulated,
+        horizon_scans(simulated.scan_s, period_s, None),
+    )
+
+
+def simulated_plant(plant: SeenPlant, held: HeldPlant, period_s: float) -> HeldPlant:
+    """The held plant, with a scan that is long enough to be worth computing; the hold's extra delay is taken off."""
+    times = max(1, ceil(period_s / _SIMULATED_PER_PERIOD / held.scan_s))
+    if times == 1:
+        return held
+    scan_s = times * held.scan_s
+    excess_s = (scan_s - held.scan_s) / 2.0
+    return held_plant(plant.model, scan_s, max(-plant.model.dead_time_s, plant.op_delay_s - excess_s))
+
+
+def best_pi(bench: LoopBench, limits: LoopLimits) -> Found | None:
+    """The PI with the least load-step IAE within the limits, or ``None`` where no gain is admissible."""
+    logs = np.log(_TIMES * bench.period_s)
+    tried = [_with_times(bench, limits, exp(x), None) for x in logs]
+    at = min(range(len(logs)), key=lambda i: tried[i][0])
+    if not isfinite(tried[at][0]):
+        return None
+    low, high = float(logs[max(0, at - 1)]), float(logs[min(len(logs) - 1, at + 1)])
+    best = _golden(lambda x: _with_times(bench, limits, exp(x), None)[0], low, high)
+    iae_pct_s, gain = _with_times(bench, limits, exp(best), None)
+    if iae_pct_s > tried[at][0]:
+        best, (iae_pct_s, gain) = float(logs[at]), tried[at]
+    return Found(PidSettings(bench.block.form, gain, exp(best), None), iae_pct_s)
+
+
+def best_pid(bench: LoopBench, limits: LoopLimits, pi: Found) -> Found | None:
+    """The PID with the least load-step IAE within the limits, sought from the best PI; ``None`` if none is better."""
+    ti_s = pi.settings.integral_time_s or bench.period_s
+    best: tuple[float, Array] = (inf, np.zeros(2))
+    for ti_ratio, td_ratio in _PID_STARTS:
+        start = np.log([ti_ratio * ti_s, td_ratio * bench.period_s])
+        cost, x = _simplex(lambda x: _with_times(bench, limits, exp(x[0]), exp(x[1]))[0], start)
+        best = min(best, (cost, x), key=lambda pair: pair[0])
+    cost, x = _simplex(lambda x: _with_times(bench, limits, exp(x[0]), exp(x[1]))[0], best[1], size=0.1)
+    iae_pct_s, gain = _with_times(bench, limits, exp(x[0]), exp(x[1]))
+    if not iae_pct_s < pi.iae_pct_s:
+        return None
+    return Found(PidSettings(bench.block.form, gain, exp(x[0]), exp(x[1])), iae_pct_s)
+
+
+def iae_pct_s(bench: LoopBench, settings: PidSettings) -> float:
+    """Load-step IAE of a stable loop, % s per % of load."""
+    ti_s = settings.integral_time_s
+    lasting = None if ti_s is None else ti_s / settings.controller_gain
+    return load_iae_pct_s(bench.loop(settings), bench.scans, lasting)
+
+
+def _with_times(bench: LoopBench, limits: LoopLimits, ti_s: float, td_s: float | None) -> tuple[float, float]:
+    """(IAE, gain) of the best admissible gain for these times; an infinite IAE where there is none."""
+    controller = bench.terms.response(ti_s, td_s)
+    loop = bench.plant.gain * controller
+    best = (inf, 0.0)
+    for top in admissible_tops(loop, controller, limits):
+        gain = float(top)
+        if not isfinite(gain) or gain * abs(loop[0]) < _WITHIN_GRID_RATIO:
+            continue
+        if not turns_say_stable(gain * loop, bench.plant.integrators + 1):
+            continue
+        found = iae_pct_s(bench, PidSettings(bench.block.form, gain, ti_s, td_s))
+        best = min(best, (found, gain))
+    return best
+
+
+def _golden(function: Callable[[float], float], low: float, high: float) -> float:
+    """The least of a function with one valley, by golden section."""
+    share = (sqrt(5.0) - 1.0) / 2.0
+    left, right = high - share * (high - low), low + share * (high - low)
+    at_left, at_right = function(left), function(right)
+    for _ in range(_GOLDEN_TURNS):
+        if at_left <= at_right:
+            high, right, at_right = right, left, at_left
+            left = high - share * (high - low)
+            at_left = function(left)
+        else:
+            low, left, at_left = left, right, at_right
+            right = low + share * (high - low)
+            at_right = function(right)
+    return left if at_left <= at_right else right
+
+
+def _simplex(function: Callable[[Array], float], start: Array, size: float = 0.4) -> tuple[float, Array]:
+    """Nelder and Mead from a simplex of the given size (in logarithms)."""
+    corners = np.vstack([start, start + size * np.eye(len(start))])
+    search: Any = minimize  # its stubs don't know "initial_simplex"
+    result = search(
+        lambda x: min(function(x), 1e300),
+        start,
+        method="Nelder-Mead",
+        options={"initial_simplex": corners, "maxfev": _PID_TURNS_AT_MOST, "xatol": 3e-3, "fatol": 1e-12},
+    )
+    return float(result.fun), np.asarray(result.x)
