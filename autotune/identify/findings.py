@@ -2,6 +2,7 @@
 
 from dataclasses import dataclass
 
+from autotune.identify.model import ModelWithDraws
 from autotune.loop.outcome import Interval, Refusal
 from autotune.loop.record import TimeBase
 
@@ -57,6 +58,7 @@ class Findings:
     ``fourier`` has known latency and hold removed.  ``static_gain`` (signed %PV/%OP) where the test was
     asymmetric and the interval is usable.  ``ultimate`` is the conclusion that design builds on.
     ``cautions`` are sentences that a technician reads beside the numbers.
+    ``model`` is the fitted plant that ``ultimate`` was concluded from, where one could be trusted.
     """
 
     time_base: TimeBase
@@ -66,6 +68,7 @@ class Findings:
     static_gain: Interval | None
     ultimate: UltimatePoint
     cautions: tuple[str, ...] = ()
+    model: ModelWithDraws | None = None
 
 
 FindingsOrRefusal = Findings | Refusal

@@ -4,8 +4,10 @@ D is a product of lags (s + e^a) and pairs (s^2 + e^b s + e^a), so that it is st
 integrator is the limit a -> -inf.  Time is counted in observed periods, so that all of them are of order one.
 """
 
+from cmath import sqrt
 from dataclasses import dataclass
 from functools import reduce
+from math import exp
 
 import numpy as np
 
@@ -42,15 +44,25 @@ BANK = (
 )
 
 
-def _factors(shape: Array) -> list[Array]:
-    """The shape parameters, factor by factor: (a) of a lag, (a, b) of a pair; an odd order begins with its lag."""
-    odd = len(shape) % 2
-    return ([shape[:1]] if odd else []) + [shape[i : i + 2] for i in range(odd, len(shape), 2)]
+def _factors(shape: Array) -> list[list[float]]:
+    """The factors of D in descending powers: s + e^a of a lag, s^2 + e^b s + e^a; an odd order begins with its lag."""
+    grown = [exp(parameter) for parameter in shape]
+    odd = len(grown) % 2
+    return [[1.0, grown[0]]] * odd + [[1.0, grown[i + 1], grown[i]] for i in range(odd, len(grown), 2)]
+
+
+def _product(one: list[float], other: list[float]) -> list[float]:
+    """Of two polynomials."""
+    made = [0.0] * (len(one) + len(other) - 1)
+    for i, left in enumerate(one):
+        for j, right in enumerate(other):
+            made[i + j] += left * right
+    return made
 
 
 def denominator(shape: Array) -> Array:
     """Coefficients of D in descending powers, monic."""
-    return np.asarray(reduce(np.convolve, [np.append(1.0, np.exp(factor[::-1])) for factor in _factors(shape)]))
+    return np.array(reduce(_product, _factors(shape)))
 
 
 def denominator_slopes(shape: Array) -> Array:
@@ -58,26 +70,23 @@ def denominator_slopes(shape: Array) -> Array:
     factors = _factors(shape)
     rows = []
     for i, factor in enumerate(factors):
-        others = [np.append(1.0, np.exp(other[::-1])) for j, other in enumerate(factors) if j != i]
-        for k in range(len(factor)):
-            moved = np.zeros(len(factor) + 1)
-            moved[len(factor) - k] = np.exp(factor[k])
-            rows.append(reduce(np.convolve, others, moved)[:0:-1])
-    return np.array(rows)
+        others = factors[:i] + factors[i + 1 :]
+        for power, coefficient in enumerate(factor[:0:-1]):
+            rows.append(reduce(_product, others, [coefficient] + [0.0] * power)[::-1])
+    return np.array([row + [0.0] * (len(shape) - len(row)) for row in rows])
 
 
 def poles(shape: Array) -> ComplexArray:
     """The roots of D, each to full relative precision."""
     found: list[complex] = []
     for factor in _factors(shape):
-        if len(factor) == 1:
-            found.append(-complex(np.exp(factor[0])))
+        if len(factor) == 2:
+            found.append(complex(-factor[1]))
             continue
-        product, total = np.exp(factor[0]), np.exp(factor[1])
-        root = np.sqrt(complex(total**2 - 4 * product))
-        larger = -(total + root) / 2  # no cancellation: both of one sign, or conjugates
+        _, total, product = factor
+        larger = -(total + sqrt(total**2 - 4 * product)) / 2  # no cancellation: both of one sign, or conjugates
         found += [larger, product / larger]
-    return np.array(found)
+    return np.array(found, dtype=complex)
 
 
 def shape_of(poles_per_period: ComplexArray) -> Array:

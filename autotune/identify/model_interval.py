@@ -12,6 +12,7 @@ import numpy as np
 from scipy.stats import norm, qmc
 
 from autotune.identify.model import ModelWithDraws, ProcessModel
+from autotune.identify.model_bank import SHAPE_HIGH, SHAPE_LOW
 from autotune.identify.model_point import Crossing, crossing
 from autotune.identify.output_error import Fit
 from autotune.identify.plant_fit import PlantFits, model_in_seconds, process_model
@@ -25,7 +26,6 @@ FLAT_RATIO = 1e-9
 COVERED = 1.959964
 DRAWS = 64
 DRAW_SD_AT_MOST = 2.5
-HALF_WIDTH_AT_MOST = log(2.0)  # of ln Ku: wider, the linear error tells nothing
 
 
 @dataclass(frozen=True, slots=True)
@@ -40,6 +40,9 @@ class Sureness:
     gain_sd_ratio: float
     period_sd_ratio: float
     covariance: Array
+
+
+Weighed = tuple[tuple[Sureness, float], ...]
 
 
 @dataclass(frozen=True, slots=True)
@@ -69,9 +72,9 @@ class ModelPoint:
         return hypot(self.period_noise_ratio, self.period_spread_ratio, COVERED * PERIOD_FLOOR_RATIO)
 
 
-def sureness(fit: Fit, samples_per_period: float) -> Sureness | None:
-    """Point and covariance of one structure; ``None`` where it has no ultimate point."""
-    point = crossing(fit)
+def sureness(fit: Fit, samples_per_period: float, later: float = 0.0) -> Sureness | None:
+    """Point and covariance of one structure with ``later`` periods more dead time; ``None`` without such a point."""
+    point = crossing(fit, later)
     if point is None:
         return None
     covariance = _covariance(fit, max(4, round(LAGS_PER_PERIOD * samples_per_period)))
@@ -113,14 +116,18 @@ def _larger(white: Array, together: Array) -> Array:
     return np.asarray((turned * np.maximum(value, 1.0)) @ turned.T * np.outer(scale, scale))
 
 
-def model_point(found: PlantFits) -> tuple[ModelPoint, tuple[tuple[Sureness, float], ...]] | None:
-    """The best structure's ultimate point with its widths, and all weighed structures; ``None`` where it has none."""
+def model_point(found: PlantFits, later_s: float = 0.0) -> tuple[ModelPoint, Weighed] | None:
+    """The best structure's ultimate point with its widths, and all weighed structures; ``None`` where it has none.
+
+    ``later_s`` is more (or less) dead time than fitted: what the stamps leave unknown.
+    """
     best_bic = found.best.bic
     per_period = samples_per_period(found)
     weighed = [
         (sure, exp(-(fit.bic - best_bic) / 2))
         for fit in found.fits
-        if fit.bic < best_bic + WEIGHED_BIC and (sure := sureness(fit, per_period)) is not None
+        if fit.bic < best_bic + WEIGHED_BIC
+        and (sure := sureness(fit, per_period, later_s / found.period_s)) is not None
     ]
     if not weighed or weighed[0][0].fit is not found.best:
         return None
@@ -156,20 +163,19 @@ def _disagree(one: Sureness, other: Sureness) -> bool:
     return gain > COVERED * hypot(max(one.gain_sd_ratio, other.gain_sd_ratio), GAIN_FLOOR_RATIO)
 
 
-def model_with_draws(
-    found: PlantFits, weighed: tuple[tuple[Sureness, float], ...], because: tuple[str, ...]
-) -> ModelWithDraws:
+def model_with_draws(found: PlantFits, weighed: Weighed, hull_s: float, because: tuple[str, ...]) -> ModelWithDraws:
     """The best model, and draws from each weighed structure's covariance; their weights are the structures'.
 
-    The draws are a fixed low-discrepancy set within DRAW_SD_AT_MOST deviations of each direction; those without
-    an ultimate point or with a negative dead time are left out.
+    The draws are a fixed low-discrepancy set (J. H. Halton, Numer. Math. 2 (1960) 84) within DRAW_SD_AT_MOST
+    deviations of each direction, their dead times spread evenly over what the stamps leave unknown
+    (``hull_s`` either way); those of negative dead time or gain are left out.
     """
     draws: list[ProcessModel] = []
     weights: list[float] = []
     for sure, weight in weighed:
-        models = list(_draws(sure, found.period_s, max(8, round(DRAWS * weight))))
+        models = _draws(sure, found.period_s, hull_s, max(8, round(DRAWS * weight)))
         draws += models
-        weights += [weight / len(models)] * len(models) if models else []
+        weights += [weight / len(models) for _ in models]
     total = sum(weights)
     return ModelWithDraws(
         best=process_model(found.best, found.period_s),
@@ -179,17 +185,17 @@ def model_with_draws(
     )
 
 
-def _draws(sure: Sureness, period_s: float, count: int) -> list[ProcessModel]:
+def _draws(sure: Sureness, period_s: float, hull_s: float, count: int) -> list[ProcessModel]:
     order = len(sure.fit.shape)
-    size = len(sure.covariance)
-    cube = qmc.Halton(size, scramble=False).random(count + 1)[1:]
-    normal = np.clip(norm.ppf(cube), -DRAW_SD_AT_MOST, DRAW_SD_AT_MOST)
+    cube = qmc.Halton(len(sure.covariance) + 1, scramble=False).random(count + 1)[1:]
+    normal = np.clip(norm.ppf(cube[:, :-1]), -DRAW_SD_AT_MOST, DRAW_SD_AT_MOST)
     scale = np.sqrt(np.maximum(np.diag(sure.covariance), 1e-300))
-    value, direction = np.linalg.eigh(sure.covariance / np.outer(scale, scale))
-    moved = normal @ (direction * np.sqrt(np.maximum(value, 0.0))).T * scale
-    best = np.concatenate((sure.fit.parameters, sure.fit.numerator))
+    spread, direction = np.linalg.eigh(sure.covariance / np.outer(scale, scale))
+    drawn = normal @ (direction * np.sqrt(np.maximum(spread, 0.0))).T * scale
+    drawn += np.concatenate((sure.fit.parameters, sure.fit.numerator))
+    drawn[:, order] += (2 * cube[:, -1] - 1) * hull_s / period_s
     return [
-        model_in_seconds(drawn[:order], float(drawn[order]), drawn[order + 1 :], period_s)
-        for drawn in best + moved
-        if drawn[order] >= 0 and drawn[order + 1] > 0
+        model_in_seconds(np.clip(one[:order], SHAPE_LOW, SHAPE_HIGH), float(one[order]), one[order + 1 :], period_s)
+        for one in drawn
+        if one[order] >= 0 and one[order + 1] > 0
     ]

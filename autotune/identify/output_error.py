@@ -15,7 +15,6 @@ from autotune.identify.model_bank import SHAPE_HIGH, SHAPE_LOW, Structure, denom
 from autotune.identify.step_responses import Staircase, responses
 from autotune.identify.waveforms import Array
 
-RESOLUTION_RATIO = 1e-4  # of PV's standard deviation in the test
 DEAD_TIME_HIGH = 3.0  # periods: a relay swings with less than one
 STEP_AT_MOST = 1.5  # of a shape parameter at once
 DAMPING_LOWEST, DAMPING_HIGHEST = 1e-10, 1e10
@@ -26,18 +25,15 @@ TINY = 1e-300
 class Trace:
     """A test in periods: PV at its samples, the staircase of OP, and what beside it moves PV.
 
+    Below ``misfit_floor`` (a sum of squares) a fit is as good as perfect.
     ``has_ramp`` lets PV drift; ``load_from`` is when a step of load begins (periods), where one is suspected.
     """
 
     stairs: Staircase
     pv_pct: Array
+    misfit_floor: float
     has_ramp: bool = False
     load_from: float | None = None
-
-    @property
-    def misfit_floor(self) -> float:
-        """Below this sum of squares a fit is as good as perfect: what no transmitter resolves."""
-        return float(len(self.pv_pct) * (RESOLUTION_RATIO * np.std(self.pv_pct)) ** 2)
 
     @property
     def nuisances(self) -> int:

@@ -8,12 +8,13 @@ from autotune.identify.model import ProcessModel
 from autotune.identify.model_bank import denominator, poles
 from autotune.identify.output_error import Fit, Trace, best_of, fitted
 from autotune.identify.step_responses import Staircase, step_responses
-from autotune.identify.structure_search import bank_fits, polished
+from autotune.identify.structure_search import bank_fits, polished, updated_fits
 from autotune.identify.waveforms import Array, Waveforms
 
-NUISANCE_BIC_GAIN = 4.0  # by which a ramp must improve
-LOAD_BIC_GAIN = 12.0  # by which a step of load must: it is sought at many instants
-RAMP_CHI_SQUARED, LOAD_CHI_SQUARED = 6.0, 14.0  # of one column in the residuals: below, there is nothing to look for
+RESOLUTION_RATIO = 1e-4  # of PV's standard deviation in the test: what no transmitter resolves
+RAMP_BIC = 2.0  # by which a ramp must improve
+LOAD_BIC = 10.0  # by which a step of load must: it is sought at many instants
+SUSPICIOUS_CHI_SQUARED = 12.0  # of a step of load in the residuals: below, there is nothing to look for
 ONSETS = 40
 ONSET_ROUNDS = 3
 
@@ -39,31 +40,32 @@ def trace_of(signals: Waveforms, period_s: float, later_s: float = 0.0) -> Trace
             signals.sample_s / period_s, (signals.effect_s[1:] + later_s) / period_s, np.diff(signals.op_pct)
         ),
         pv_pct=signals.pv_pct,
+        misfit_floor=len(signals.pv_pct) * (RESOLUTION_RATIO * float(np.std(signals.pv_pct))) ** 2,
     )
 
 
 def fit_plant(signals: Waveforms, period_s: float) -> PlantFits:
     """The bank fitted to a test that swings with about ``period_s``; with a ramp or a load step where they show."""
     trace = trace_of(signals, period_s)
-    fits = _ranked(bank_fits(trace))
-    disturbed = _with_nuisances(trace, fits[0])
-    if disturbed is not trace:
-        trace, fits = disturbed, _ranked(bank_fits(disturbed))
-    return PlantFits(trace, period_s, (polished(trace, fits[0]), *fits[1:]))
+    fits = bank_fits(trace)
+    candidates = [(min(fit.bic for fit in fits), trace, fits)]
+    suspect, onsets = _suspect(trace, fits)
+    if suspect is not None:
+        for disturbed, price in (
+            (replace(trace, has_ramp=True), RAMP_BIC),
+            (_loaded(trace, suspect, onsets), LOAD_BIC),
+        ):
+            found = bank_fits(disturbed, fits)
+            candidates.append((min(fit.bic for fit in found) + price, disturbed, found))
+    _, trace, fits = min(candidates, key=lambda candidate: candidate[0])
+    return _ranked(trace, period_s, fits)
 
 
-def update_plant(signals: Waveforms, earlier: PlantFits) -> PlantFits:
-    """The fits of a test that has grown since ``earlier``: each structure from where it stood."""
-    grown = trace_of(signals, earlier.period_s)
+def update_plant(signals: Waveforms, earlier: PlantFits, later_s: float = 0.0) -> PlantFits:
+    """The fits of a test that has changed little since: it has grown, or its effects count as ``later_s`` later."""
+    grown = trace_of(signals, earlier.period_s, later_s)
     trace = replace(grown, has_ramp=earlier.trace.has_ramp, load_from=earlier.trace.load_from)
-    return PlantFits(trace, earlier.period_s, _ranked(_again(trace, earlier.fits)))
-
-
-def refit_later(signals: Waveforms, earlier: PlantFits, later_s: float) -> PlantFits:
-    """The fits if each effect came ``later_s`` later than stamped (earlier where negative)."""
-    moved = trace_of(signals, earlier.period_s, later_s)
-    trace = replace(moved, has_ramp=earlier.trace.has_ramp, load_from=earlier.trace.load_from)
-    return PlantFits(trace, earlier.period_s, _ranked(_again(trace, earlier.fits)))
+    return _ranked(trace, earlier.period_s, updated_fits(trace, earlier.fits))
 
 
 def process_model(fit: Fit, period_s: float) -> ProcessModel:
@@ -79,30 +81,25 @@ def model_in_seconds(shape: Array, dead_time: float, numerator: Array, period_s:
     return ProcessModel(tuple(map(float, top)), tuple(map(float, bottom)), dead_time * period_s)
 
 
-def _ranked(fits: tuple[Fit, ...]) -> tuple[Fit, ...]:
-    return tuple(sorted(fits, key=lambda fit: fit.bic))
+def _ranked(trace: Trace, period_s: float, fits: tuple[Fit, ...]) -> PlantFits:
+    best, *others = sorted(fits, key=lambda fit: fit.bic)
+    return PlantFits(trace, period_s, (polished(trace, best), *others))
 
 
-def _again(trace: Trace, fits: tuple[Fit, ...]) -> tuple[Fit, ...]:
-    return tuple(best_of(trace, fit.structure, [fit.parameters]) for fit in fits)
+def _suspect(trace: Trace, fits: tuple[Fit, ...]) -> tuple[Fit | None, Array]:
+    """The structure whose residuals a step of load at one of the onsets would explain best; none if none much.
 
-
-def _with_nuisances(trace: Trace, fit: Fit) -> Trace:
-    """The trace with a ramp or a step of load, where the residuals of the best structure ask for it."""
-    variance = max(fit.misfit, trace.misfit_floor) / len(fit.residual_pct)
+    A zero can play a slow disturbance's part, so only structures without one are asked.  A drift shows as well.
+    """
     at = trace.stairs.sample_s
-    candidates = []
-    if _explained(fit, (at - np.mean(at))[:, None])[0] > RAMP_CHI_SQUARED * variance:
-        candidates.append((replace(trace, has_ramp=True), NUISANCE_BIC_GAIN))
     onsets = np.linspace(float(at[0]), float(at[-1]), ONSETS)
-    if np.max(_explained(fit, _loads(fit, at, onsets))) > LOAD_CHI_SQUARED * variance:
-        candidates.append((_loaded(trace, fit, onsets), LOAD_BIC_GAIN))
-    best, best_bic = trace, fit.bic
-    for disturbed, gain in candidates:
-        bic = best_of(disturbed, fit.structure, [fit.parameters]).bic + gain
-        if bic < best_bic:
-            best, best_bic = disturbed, bic
-    return best
+    suspect, lowest_bic = None, np.inf
+    for fit in fits:
+        left, n = max(fit.misfit, trace.misfit_floor), len(at)
+        explained = float(np.max(_explained(fit, _loads(fit, at, onsets)))) if fit.structure.zeros == 0 else 0.0
+        if n * explained > SUSPICIOUS_CHI_SQUARED * left and fit.bic + n * np.log1p(-explained / left) < lowest_bic:
+            suspect, lowest_bic = fit, fit.bic + n * np.log1p(-explained / left)
+    return suspect, onsets
 
 
 def _loaded(trace: Trace, fit: Fit, onsets: Array) -> Trace:

@@ -48,16 +48,6 @@ class Responses:
     squares: Array
 
 
-@dataclass(frozen=True, slots=True)
-class _Modes:
-    """e^(pt), its integral phi, t e^(pt) and its integral psi; last axis time, the one before poles."""
-
-    power: NDArray[np.inexact]
-    phi: NDArray[np.inexact]
-    t_power: NDArray[np.inexact]
-    psi: NDArray[np.inexact]
-
-
 def responses(poles_per_s: ComplexArray, stairs: Staircase, dead_time_s: float) -> Responses:
     """S and Q at every sample, ``dead_time_s`` after the steps; complex poles in conjugate pairs; any number of steps.
 
@@ -65,8 +55,7 @@ def responses(poles_per_s: ComplexArray, stairs: Staircase, dead_time_s: float) 
     """
     longest_s = max(float(stairs.sample_s[-1] - stairs.effect_s[0]), 1e-300)
     poles = _apart(_real_if_real(poles_per_s), longest_s)
-    modes = _staircase_modes(poles, stairs, dead_time_s, longest_s)
-    return _combined(poles, modes)
+    return _combined(poles, _staircase_modes(poles, stairs, dead_time_s, longest_s))
 
 
 def step_responses(poles_per_s: ComplexArray, age_s: Array) -> Array:
@@ -90,10 +79,11 @@ def _apart(poles: NDArray[np.inexact], longest_s: float) -> NDArray[np.inexact]:
     A group of c poles is the roots of its own polynomial; moving the last coefficient by radius^c drives them apart.
     """
     size = np.maximum(np.abs(poles), 1 / longest_s)
-    distance = np.abs(poles[:, None] - poles[None, :])
-    others = np.prod(distance + np.eye(len(poles)), axis=1)
-    if np.all(size ** (len(poles) - 1) <= AMPLIFIED_AT_MOST * others):
+    distance = np.abs(poles[:, None] - poles)
+    distance[np.diag_indices(len(poles))] = 1.0
+    if np.all(size ** (len(poles) - 1) <= AMPLIFIED_AT_MOST * np.prod(distance, axis=1)):
         return poles[None, :]
+    np.fill_diagonal(distance, 0.0)
     circle = np.exp(2j * np.pi * (np.arange(CIRCLE_POINTS) + 0.25) / CIRCLE_POINTS)
     first_near = np.argmax(distance < NEAR_RATIO * size[None, :], axis=1)
     groups = [poles[first_near == first] for first in np.unique(first_near)]
@@ -126,14 +116,15 @@ def _power_and_phi(
     return power, phi, divisor
 
 
-def _modes(poles: NDArray[np.inexact], age_s: Array, longest_s: float) -> _Modes:
+def _modes(poles: NDArray[np.inexact], age_s: Array, longest_s: float) -> NDArray[np.inexact]:
+    """e^(pt), its integral phi, t e^(pt) and its integral psi: first axis; then circle, poles, time."""
     power, phi, divisor = _power_and_phi(poles, age_s, longest_s)
     t_power = age_s * power
     psi = (t_power - phi) / divisor
     is_slow = np.abs(poles) * longest_s < SLOW_AGE
     if np.any(is_slow):
         psi[is_slow] = age_s**2 * _series(np.multiply.outer(poles[is_slow], age_s), 2)
-    return _Modes(power, phi, t_power, psi)
+    return np.array((power, phi, t_power, psi))
 
 
 def _series(x: NDArray[np.inexact], first: int) -> NDArray[np.inexact]:
@@ -145,42 +136,42 @@ def _series(x: NDArray[np.inexact], first: int) -> NDArray[np.inexact]:
     return total
 
 
-def _staircase_modes(poles: NDArray[np.inexact], stairs: Staircase, dead_time_s: float, longest_s: float) -> _Modes:
+def _staircase_modes(
+    poles: NDArray[np.inexact], stairs: Staircase, dead_time_s: float, longest_s: float
+) -> NDArray[np.inexact]:
     """Each mode summed over the steps: the state that they left at the last step, carried on by the age since."""
-    last = np.searchsorted(stairs.effect_s, stairs.sample_s - dead_time_s, side="right") - 1
+    arrived_s = stairs.sample_s - dead_time_s
+    last = np.searchsorted(stairs.effect_s, arrived_s, side="right") - 1
     seen = last >= 0
     last = np.maximum(last, 0)
-    between_s = np.maximum(stairs.effect_s[:, None] - stairs.effect_s[None, :], 0.0)
-    weights = np.tri(len(stairs.effect_s)) * stairs.step_pct
-    left = _modes(poles, between_s, longest_s)
-    power, phi, t_power, psi = (
-        np.sum(weights * mode, axis=-1)[..., last] for mode in (left.power, left.phi, left.t_power, left.psi)
-    )
-    since = _modes(poles, np.where(seen, stairs.sample_s - dead_time_s - stairs.effect_s[last], 0.0), longest_s)
-    return _Modes(
-        power=seen * power * since.power,
-        phi=seen * (phi + power * since.phi),
-        t_power=seen * (t_power * since.power + power * since.t_power),
-        psi=seen * (psi + t_power * since.phi + power * since.psi),
-    )
+    between_s = np.maximum(stairs.effect_s[:, None] - stairs.effect_s, 0.0)
+    weights = np.tri(len(between_s)) * stairs.step_pct
+    power, phi, t_power, psi = (_modes(poles, between_s, longest_s) * weights).sum(axis=-1)[..., last]
+    since = _modes(poles, np.where(seen, arrived_s - stairs.effect_s[last], 0.0), longest_s)
+    modes = power * since
+    modes[1] += phi
+    modes[2] += t_power * since[0]
+    modes[3] += t_power * since[1] + psi
+    return np.asarray(modes * seen)
 
 
-def _combined(poles: NDArray[np.inexact], modes: _Modes) -> Responses:
+def _combined(poles: NDArray[np.inexact], modes: NDArray[np.inexact]) -> Responses:
     """The fractions' sum over the poles, and the mean over the circle; the imaginary parts of conjugates cancel."""
-    order = poles.shape[-1]
+    count, order = poles.shape
     residue = _residue(poles)
     double = residue**2
     simple = -2 * double * (np.sum(1 / _gaps(poles), axis=-1) - 1)  # -D''/D'^3; the diagonal of ones is taken off
-    power, phi, t_power, psi = (np.zeros((len(poles), 3 * order, order), dtype=poles.dtype) for _ in range(4))
-    phi[:, 0], phi[:, order + 1], psi[:, order + 1] = residue, simple, double
-    for i in range(order):
-        power[:, i + 1] = residue * poles**i
+    fractions = np.zeros((3 * order, 4, count, order), dtype=poles.dtype)
+    fractions[0, 1], fractions[order + 1, 1], fractions[order + 1, 3] = residue, simple, double
+    raised, below = np.ones_like(poles), np.zeros_like(poles)  # p^i, i p^(i-1)
     for i in range(2 * order - 2):
-        t_power[:, order + 2 + i] = double * poles**i
-        power[:, order + 2 + i] = simple * poles**i + (i * double * poles ** (i - 1) if i else 0.0)
-    fractions = np.concatenate((power, phi, t_power, psi), axis=-1)
-    states = np.concatenate((modes.power, modes.phi, modes.t_power, modes.psi), axis=-2)
-    rows = np.mean((fractions @ states).real, axis=0)
+        fractions[order + 2 + i, 0] = simple * raised + double * below
+        fractions[order + 2 + i, 2] = double * raised
+        below = raised * (i + 1)
+        raised = raised * poles
+    for i in range(order):
+        fractions[1 + i, 0] = residue * poles**i
+    rows = (fractions.reshape(3 * order, -1) @ modes.reshape(4 * count * order, -1)).real / count
     return Responses(rows[: order + 1], rows[order + 1 :])
 
 

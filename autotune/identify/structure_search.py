@@ -19,17 +19,29 @@ PAIR_SHARES, PAIR_DAMPINGS = (0.5, 0.9), (0.4, 0.75)
 DEAD_TIME_KICKS = ((0.4, 0.75), (1.3, 1.8))  # down, up
 
 
-def bank_fits(trace: Trace) -> tuple[Fit, ...]:
-    """One fit a structure of the bank, in its order."""
+def bank_fits(trace: Trace, earlier: tuple[Fit, ...] = ()) -> tuple[Fit, ...]:
+    """One fit a structure of the bank, in its order; a higher order only where the one before it was of use.
+
+    ``earlier`` fits, of the same test seen otherwise, are starts too.
+    """
     fits: dict[Structure, Fit] = {}
     for structure in BANK:
-        found = [best_of(trace, structure, list(family)) for family in _start_families(structure, fits)]
-        fits[structure] = min(found, key=lambda fit: fit.misfit)
+        if structure.order > 2 and not _was_of_use(structure.order - 1, fits):
+            continue
+        families = [list(family) for family in _start_families(structure, fits)]
+        families += [[fit.parameters] for fit in earlier if fit.structure == structure]
+        fits[structure] = min((best_of(trace, structure, family) for family in families), key=lambda fit: fit.misfit)
     return tuple(fits.values())
 
 
+def _was_of_use(order: int, fits: dict[Structure, Fit]) -> bool:
+    here = [fit.bic for structure, fit in fits.items() if structure.order == order]
+    below = [fit.bic for structure, fit in fits.items() if structure.order < order]
+    return bool(here) and min(here) < min(below)
+
+
 def updated_fits(trace: Trace, earlier: tuple[Fit, ...]) -> tuple[Fit, ...]:
-    """The fits of a test that has grown since: each structure from where it stood."""
+    """The fits of a test that has changed little since: each structure from where it stood."""
     return tuple(best_of(trace, fit.structure, [fit.parameters]) for fit in earlier)
 
 

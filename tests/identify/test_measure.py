@@ -76,9 +76,16 @@ def test_findings_travel_between_processes() -> None:
 
 
 def test_too_few_cycles_are_refused() -> None:
-    refusal = refused(sampled_relay(PLANT, replace(BENCH, switches=4)))
+    refusal = refused(sampled_relay(PLANT, replace(BENCH, switches=2)))
     assert refusal.code == "TOO_FEW_CYCLES"
-    assert refusal.reason.startswith("1 whole cycles")
+    assert refusal.reason.startswith("0 whole cycles")
+
+
+def test_of_a_short_test_the_first_cycle_is_read_too_and_said_to_hold_the_way_from_rest() -> None:
+    findings = found(sampled_relay(PLANT, replace(BENCH, switches=4), 1))
+    assert len(findings.cycles) == 2
+    assert says(findings, "The test was short")
+    assert findings.ultimate.ultimate_gain.low <= PLANT.ultimate_gain <= findings.ultimate.ultimate_gain.high
 
 
 def test_nothing_recorded_is_refused() -> None:
