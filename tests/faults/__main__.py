@@ -9,8 +9,10 @@ import argparse
 import asyncio
 import json
 import os
+import signal
 import sys
-from collections.abc import Sequence
+from collections.abc import Coroutine, Sequence
+from typing import Any
 
 from tests.faults.campaign import Tally, campaign, planned
 
@@ -29,9 +31,20 @@ def main(arguments: Sequence[str] | None = None) -> int:
     chosen = parser.parse_args(arguments)
     os.nice(chosen.nice)
     runs = planned(chosen.runs, chosen.seed, lambda run: chosen.fault is None or chosen.fault in run.fault.name)
-    tally = asyncio.run(campaign(runs, chosen.pairs, tell=lambda line: print(line, file=sys.stderr, flush=True)))
+    tally = asyncio.run(_until_terminated(campaign(runs, chosen.pairs, tell=_tell)))
     print(json.dumps(tally.as_json(), indent=None if chosen.json else 1))
     return 1 if is_bad(tally) else 0
+
+
+def _tell(line: str) -> None:
+    print(line, file=sys.stderr, flush=True)
+
+
+async def _until_terminated(running: Coroutine[Any, Any, Tally]) -> Tally:
+    """A campaign that is asked to end leaves no process, network or disk behind."""
+    task = asyncio.ensure_future(running)
+    asyncio.get_running_loop().add_signal_handler(signal.SIGTERM, task.cancel)
+    return await task
 
 
 def is_bad(tally: Tally) -> bool:

@@ -8,7 +8,7 @@ import re
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from enum import Enum
-from math import isclose, isfinite
+from math import isclose, isfinite, nan
 from typing import Any
 
 from tests.faults.wire import Shown, Write
@@ -44,7 +44,7 @@ class Evidence:
     ``found`` and ``left`` are the panel before the tool came and after all had ended (``None``: the plant is gone);
     ``taken`` what somebody else set, by tag; ``wanted`` the settings to be written, ``None`` in a test.
     ``struck_s`` is when it happened.  ``word`` and ``exit_code`` are the tool's last ones, after a restart those of
-    the restarted one; ``said`` is all that it told.  ``token_changes`` is false where no guard is in use.
+    the restarted one; ``said`` is all that it told.
     """
 
     found: State
@@ -80,33 +80,52 @@ def judge(evidence: Evidence) -> Verdict:
     """The verdict on one run."""
     beyond = [write for write in evidence.writes if is_beyond(evidence, write)]
     late = late_writes(evidence)
-    complaints = [f"beyond limits: {write.numbers} {write.strange or ''}" for write in beyond]
-    complaints += [f"after it was no longer ours: {write.numbers}" for write in late]
+    complaints = [f"{len(beyond)} beyond limits, first {write.numbers} {write.strange}" for write in beyond[:1]]
+    complaints += [f"{len(late)} after it was no longer ours, first {write.numbers}" for write in late[:1]]
     if "RELEASED" in evidence.word and not evidence.taken:
         complaints.append("said RELEASED, though nobody had taken the loop")
     return Verdict(end_of(evidence), evidence.word, len(beyond), len(late), tuple(complaints))
 
 
 def end_of(evidence: Evidence) -> End:
-    """How the loop was left, by the panel; the tool's word decides only between loud and silent."""
-    left = evidence.left
-    if left is not None:
-        is_theirs = bool(evidence.taken) and _matches(left, evidence.taken) and _is_let_go(left)
-        # Somebody may also take it when the tool has already given it back and gone.
-        is_known = is_said_released(evidence) or (not is_as_found(evidence, left) and lost_at_s(evidence) is None)
-        if is_theirs and is_known:
-            return End.RELEASED
-        if is_as_found(evidence, left) and not is_untrue(evidence, left):
-            return End.RESTORED
+    """How the loop was left, by the panel; the tool's word decides only between loud and silent.
+
+    What somebody did before the tool wrote anything belongs to as found; what it was never shown, because it had
+    already gone or its last write was on its way, it can't be asked to respect.
+    """
+    left, taken = evidence.left, evidence.taken
+    if left is None:
+        return End.RESTORED if not evidence.writes else _told(evidence)
+    found = {name: evidence.found[name] for name in ("mode", "sp", "op", *SETTINGS)}
+    is_unseen = bool(taken) and lost_at_s(evidence) is None
+    kept = found | {name: tag for name, tag in taken.items() if not _is_loss(evidence, name)}
+    is_as_found = _is_left_as(left, kept, evidence)
+    is_theirs = bool(taken) and _matches(left, taken) and _is_let_go(left)
+    if is_theirs and (is_said_released(evidence) or (is_unseen and not is_as_found)):
+        return End.RELEASED
+    if is_as_found or (is_unseen and _is_left_as(left, found, evidence)):
+        return _told(evidence) if is_untrue(evidence, left) else End.RESTORED
+    return _told(evidence)
+
+
+def _is_loss(evidence: Evidence, name: str) -> bool:
+    """Whether somebody who sets this tag takes the loop: once the tool has begun to write.
+
+    In a test that is whatever they set; in a write of settings mode and output, which go back there.
+    """
+    is_ours = any(write.t_s < evidence.struck_s for write in evidence.writes)
+    return is_ours and (evidence.wanted is None or name in ("mode", "op"))
+
+
+def _told(evidence: Evidence) -> End:
     return End.STRANDED if is_loud(evidence) else End.SILENT
 
 
-def is_as_found(evidence: Evidence, left: State) -> bool:
-    """Mode, setpoint and settings as found, or as somebody else has set them since; in manual the output too.
+def _is_left_as(left: State, expected: State, evidence: Evidence) -> bool:
+    """Mode, setpoint and settings as expected, in manual the output too; in automatic that is the block's own.
 
-    Settings may be all new where they were to be written.  In automatic the output is the block's own.
+    Settings may be all new where they were to be written.
     """
-    expected = {**evidence.found, **evidence.taken}
     same = all(_is_same(left[name], expected[name]) for name in ("mode", "sp"))
     if expected["mode"] == "MAN":
         same = same and abs(left["op"] - expected["op"]) <= OP_SAME_PCT
@@ -169,21 +188,18 @@ def lost_at_s(evidence: Evidence) -> float | None:
 
 def _lost(evidence: Evidence, shown: Shown) -> bool:
     before = [write.numbers for write in evidence.writes if write.t_s < shown.t_s]
-    if not any("mode" in numbers or "op" in numbers or "holder_request" in numbers for numbers in before):
-        return False  # nothing was ever ours
-    if evidence.wanted is None and evidence.has_guard:
+    is_test = evidence.wanted is None
+    if is_test and before:
         boot_count = evidence.found["boot_count"]
-        if (
-            shown.numbers.get("guard_state") == GAVE_BACK_CODE
-            or shown.numbers.get("boot_count", boot_count) != boot_count
-        ):
+        is_given_back = evidence.has_guard and shown.numbers.get("guard_state") == GAVE_BACK_CODE
+        if is_given_back or shown.numbers.get("boot_count", boot_count) != boot_count:
             return True
-    taken = {name: MODE_CODES[one] if name == "mode" else one for name, one in evidence.taken.items()}
-    if not taken or not taken.keys() <= shown.numbers.keys():
-        return False
-    if "mode" in taken and any(numbers.get("mode") == taken["mode"] for numbers in before):
-        return False  # it may be our own hand-back
-    return all(_is_same(shown.numbers[name], number) for name, number in taken.items())
+    taken = {name: tag for name, tag in evidence.taken.items() if _is_loss(evidence, name)}
+    if "mode" in taken:
+        taken["mode"] = MODE_CODES[taken["mode"]]
+        if any(numbers.get("mode") == taken["mode"] for numbers in before):
+            del taken["mode"]  # it may be our own doing
+    return bool(taken) and all(_is_same(shown.numbers.get(name, nan), number) for name, number in taken.items())
 
 
 def seconds_to_safe(seen: Sequence[tuple[float, State]], evidence: Evidence) -> float | None:

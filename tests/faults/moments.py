@@ -87,7 +87,8 @@ SETTINGS_RETURNING = Moment("settings", "write RETURNING", lambda pair: MODE_COD
 OF_A_TEST = (CHECKING, BASELINE, TESTING_HIGH, TESTING_LOW, RESTORING)
 WHEN_TOUCHED = OF_A_TEST[1:]
 OF_SETTINGS = (SETTINGS_CHECKING, SETTINGS_TAKING, SETTINGS_WRITING, SETTINGS_PUTTING_BACK, SETTINGS_RETURNING)
-WHEN_TAKEN = OF_SETTINGS[1:]
+WHEN_WRITTEN = OF_SETTINGS[2:]
+"""From where the tool has seen the output that it holds in manual, so that it can tell that somebody moved it."""
 
 
 async def reach(pair: Pair, moment: Moment, rng: random.Random) -> bool:

@@ -2,6 +2,7 @@
 
 import asyncio
 import json
+import os
 import signal
 import subprocess
 from collections.abc import AsyncIterator, Sequence
@@ -65,10 +66,14 @@ class Pair:
         if self.tool is not None:
             self.tool.signal(number)
 
-    async def press(self, line: str, **taken: Any) -> None:
-        """Somebody at the panel; ``taken`` names what is theirs afterwards."""
+    async def press(self, line: str, **taken: Any) -> bool:
+        """Somebody at the panel; ``taken`` names what is theirs afterwards.  Whether the panel took it."""
+        try:
+            await self.plant.press(line)
+        except AssertionError:  # an output moves in manual only
+            return False
         self.taken |= taken
-        await self.plant.press(line)
+        return True
 
     async def look(self) -> State:
         """The loop and the PLC's restart count, as the panel shows them now."""
@@ -117,7 +122,7 @@ async def pair(
     """A fresh plant, wire and configuration in ``folder``; all ends with the block."""
     async with soft_plant() as plant:
         wire = Wire(plant.port)
-        host = "127.0.0.1" if network is None else _own_end(network)
+        host = "127.0.0.1" if network is None else _address(network, 1)
         port = await wire.open(host)
         changes = [*QUICK, *(() if has_guard else WITHOUT_GUARD), ('host = "127.0.0.1"', f'host = "{host}"')]
         config = write_bench(folder, port, changes)
@@ -154,13 +159,13 @@ def plant_is_frozen_no_more(bench: Pair) -> None:
 @asynccontextmanager
 async def network(number: int) -> AsyncIterator[str]:
     """A network of its own for one tool at a time, joined to ours by a cable that can be pulled; yields its name."""
-    name = f"faults-{number}"
+    name = f"ft{os.getpid()}-{number}"
     _ip(f"netns add {name}")
     try:
         _ip(f"link add {name} type veth peer name inside netns {name}")
-        _ip(f"addr add {_own_end(name)}/30 dev {name}")
+        _ip(f"addr add {_address(name, 1)}/30 dev {name}")
         _ip(f"link set {name} up")
-        for line in (f"addr add 10.231.{number}.2/30 dev inside", "link set inside up", "link set lo up"):
+        for line in (f"addr add {_address(name, 2)}/30 dev inside", "link set inside up", "link set lo up"):
             _ip(f"-n {name} {line}")
         yield name
     finally:
@@ -169,7 +174,8 @@ async def network(number: int) -> AsyncIterator[str]:
 
 def why_no_networks() -> str | None:
     """Why this machine lets us make no network of our own, or ``None``."""
-    return _why_not(f"ip netns add faults-{PROBE}") or _why_not(f"ip netns del faults-{PROBE}")
+    name = f"ft{os.getpid()}-probe"
+    return _why_not(f"ip netns add {name}") or _why_not(f"ip netns del {name}")
 
 
 def why_no_small_disk(folder: Path) -> str | None:
@@ -177,11 +183,10 @@ def why_no_small_disk(folder: Path) -> str | None:
     return _why_not(f"mount -t tmpfs -o size=64k tmpfs {folder}") or _why_not(f"umount {folder}")
 
 
-PROBE = 99
-
-
-def _own_end(name: str) -> str:
-    return f"10.231.{name.rpartition('-')[2]}.1"
+def _address(name: str, end: int) -> str:
+    """An address of the small network ``name``: 1 is our end of its cable, 2 the tool's."""
+    pid, number = map(int, name.removeprefix("ft").split("-"))
+    return f"10.{200 + pid // 256 % 50}.{pid % 256}.{4 * number + end}"
 
 
 def _ip(line: str) -> None:

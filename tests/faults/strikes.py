@@ -14,7 +14,7 @@ from collections.abc import Awaitable, Callable
 from dataclasses import dataclass
 
 from tests.faults.evidence import SETTINGS, End
-from tests.faults.moments import OF_A_TEST, OF_SETTINGS, WHEN_TAKEN, WHEN_TOUCHED, Moment
+from tests.faults.moments import OF_A_TEST, OF_SETTINGS, WHEN_TOUCHED, WHEN_WRITTEN, Moment
 from tests.faults.pair import Pair
 from tests.faults.tool import CLOCK_STEP
 from tests.faults.wire import Spoiling, Write, write_as_master
@@ -163,7 +163,7 @@ async def second_master_moves(pair: Pair, rng: random.Random) -> None:
     op_pct = rng.choice((20.0, 33.0, 70.0))
     await write_as_master(pair.plant.port, OP_ADDRESS, struct.unpack(">HH", struct.pack(">f", op_pct)))
     state = await pair.look()
-    if state["mode"] == "MAN":
+    if state["mode"] == "MAN" and state["op"] == op_pct:
         pair.taken |= {"op": op_pct, "mode": "MAN"}
 
 
@@ -184,10 +184,8 @@ async def change_setpoint(pair: Pair, _: random.Random) -> None:
 
 
 async def move_output(pair: Pair, rng: random.Random) -> None:
-    if (await pair.look())["mode"] == "MAN":
-        op_pct = rng.choice((20.0, 33.0, 70.0))
-        await pair.press(f"op {LOOP} {op_pct}", op=op_pct, mode="MAN")
-    else:
+    op_pct = rng.choice((20.0, 33.0, 70.0))
+    if not await pair.press(f"op {LOOP} {op_pct}", op=op_pct, mode="MAN"):
         await change_setpoint(pair, rng)
 
 
@@ -227,7 +225,7 @@ FAULTS: tuple[Fault, ...] = (
     Fault("tool killed, restarted, no guard", kill_tool, OF_A_TEST, GIVEN_BACK, restarts=True, has_guard=False),
     Fault("tool stopped for a while", stop_tool, EVERYWHERE, GIVEN_BACK),
     Fault("tool stopped for a while, no guard", stop_tool, OF_A_TEST, GIVEN_BACK, has_guard=False),
-    Fault("PLC killed", kill_plc, EVERYWHERE, frozenset({End.STRANDED})),
+    Fault("PLC killed", kill_plc, EVERYWHERE, OR_STRANDED),  # as found where nothing had been written yet
     Fault("PLC frozen", freeze_plc, OF_A_TEST, GIVEN_BACK),
     Fault("PLC frozen", freeze_plc, OF_SETTINGS, OR_STRANDED),
     Fault("PLC frozen, no guard", freeze_plc, OF_A_TEST, OR_STRANDED, has_guard=False),
@@ -246,11 +244,11 @@ FAULTS: tuple[Fault, ...] = (
     Fault("writes refused", answer_exceptions, OF_A_TEST, OR_STRANDED),
     Fault("writes refused", answer_exceptions, OF_SETTINGS, OR_STRANDED),
     Fault("write arrives late", write_late, WHEN_TOUCHED[1:3], GIVEN_BACK),
-    Fault("second master moves the output", second_master_moves, (*WHEN_TOUCHED, *WHEN_TAKEN), ANY_TOLD),
+    Fault("second master moves the output", second_master_moves, (*WHEN_TOUCHED, *WHEN_WRITTEN), ANY_TOLD),
     Fault("second master asks for the loop", second_master_asks, WHEN_TOUCHED, OR_TAKEN),
     Fault("operator changes the mode", change_mode, EVERYWHERE, ANY_TOLD),
     Fault("operator changes the setpoint", change_setpoint, EVERYWHERE, ANY_TOLD),
-    Fault("operator moves the output", move_output, (*WHEN_TOUCHED, *WHEN_TAKEN), ANY_TOLD),
+    Fault("operator moves the output", move_output, (*WHEN_TOUCHED, *WHEN_WRITTEN), ANY_TOLD),
     Fault("operator moves the output, no guard", move_output, WHEN_TOUCHED, ANY_TOLD, has_guard=False),
     Fault("operator presses stop", press_stop, EVERYWHERE, GIVEN_BACK),
     Fault("operator changes a setting", change_a_setting, OF_SETTINGS, ANY_TOLD),

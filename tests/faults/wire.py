@@ -140,7 +140,7 @@ class Wire:
         self.spoiling = Spoiling(held_writes=self.spoiling.held_writes)
 
     async def until(self, holds: Callable[[], bool]) -> None:
-        """Wait until ``holds``, asked after each frame that was recorded and before it is passed on."""
+        """Wait until ``holds``, asked at each request of the tool, before it is passed on."""
         if not holds():
             waiting = asyncio.get_running_loop().create_future()
             entry = (holds, waiting)
@@ -184,16 +184,20 @@ class Wire:
     ) -> None:
         """Both directions at once, until either end closes."""
         asked: asyncio.Queue[bytes] = asyncio.Queue()
+        passed: list[Shown] = []  # taken in by the tool only if it goes on asking on this connection
 
         async def requests() -> None:
             while True:
                 frame = await _frame(reader)
+                self.shown.extend(passed)
+                passed.clear()
                 await self._pass_request(frame, asked, writer, plant_writer)
 
         async def answers() -> None:
             while True:
                 answer = await _frame(plant_reader)
-                await self._pass_answer(await asked.get(), answer, writer)
+                if (shown := await self._pass_answer(await asked.get(), answer, writer)) is not None:
+                    passed.append(shown)
 
         both = [asyncio.ensure_future(direction()) for direction in (requests, answers)]
         try:
@@ -209,7 +213,8 @@ class Wire:
         write, spoiling = write_of(frame, self._now_s()), self.spoiling
         if write is not None:
             self.writes.append(write)
-            self._told()
+        self._told()
+        if write is not None:
             await asyncio.sleep(0)  # whoever waited for this write acts before it is passed on
             if spoiling.hold_write is not None and spoiling.hold_write(write):
                 spoiling.hold_write = None
@@ -224,22 +229,20 @@ class Wire:
         asked.put_nowait(frame)
         await _send(plant, frame)
 
-    async def _pass_answer(self, request: bytes, answer: bytes, writer: asyncio.StreamWriter) -> None:
+    async def _pass_answer(self, request: bytes, answer: bytes, writer: asyncio.StreamWriter) -> Shown | None:
+        """What a good answer shows; a spoiled one shows nothing."""
         spoiling = self.spoiling
         if spoiling.refuse is None and spoiling.takes_one():
             if spoiling.is_reordered:
                 spoiling.late_answers.append(answer)
-                return
+                return None
             if spoiling.answer_delay_s:
                 await asyncio.sleep(spoiling.answer_delay_s)
             if spoiling.garble is not None:
                 await _send(writer, spoiling.garble(answer))
-                return
-        shown = shown_by(request, answer, self._now_s())
-        if shown is not None:
-            self.shown.append(shown)
-            self._told()
+                return None
         await _send(writer, answer)
+        return shown_by(request, answer, self._now_s())
 
     def _told(self) -> None:
         for holds, waiting in self._waiting:
