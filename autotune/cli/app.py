@@ -30,12 +30,13 @@ app = typer.Typer(
     help="Supervised relay-feedback tuning of PID loops that live in PLCs. "
     "Try it first with 'autotune rehearse', which runs the whole job on a bundled soft plant.",
 )
-sheet_app = typer.Typer(no_args_is_help=True, help="The records: list, show, export, verify.")
+sheet_app = typer.Typer(no_args_is_help=True, help="The records: list, show, export, workbook, verify.")
 app.add_typer(sheet_app, name="sheet")
 
 Config = Annotated[Path, typer.Argument(metavar="CONFIG", help="the configuration file (TOML)")]
 Loop = Annotated[str, typer.Argument(metavar="LOOP", help="the loop's tag name, such as TIC-204")]
 SheetId = Annotated[str, typer.Argument(metavar="SHEET", help="the sheet's id; 'last' is the newest one")]
+ToFolder = Annotated[Path, typer.Option("--to", metavar="FOLDER", help="where the files go")]
 Json = Annotated[bool, typer.Option("--json", help="answer with one JSON object on standard output")]
 PersonName = Annotated[
     str | None, typer.Option("--person", metavar="NAME", help="who acts; otherwise the operating system's user")
@@ -154,11 +155,25 @@ def sheet_show(config: Config, sheet: SheetId) -> None:
 @sheet_app.command("export")
 def sheet_export(
     config: Config,
-    sheet: SheetId,
-    to: Annotated[Path, typer.Option("--to", metavar="FOLDER", help="where the files go")] = Path(),
+    chosen: Annotated[
+        list[str] | None, typer.Argument(metavar="SHEET", help="sheets by id; 'last' is the newest one")
+    ] = None,
+    is_all: Annotated[bool, typer.Option("--all", help="all sheets")] = False,
+    is_pdf: Annotated[bool, typer.Option("--pdf", help="one PDF file to be signed, instead of CSV and JSON")] = False,
+    to: ToFolder = Path(),
 ) -> None:
-    """Export one sheet: samples and writes as CSV, everything as JSON."""
-    raise typer.Exit(sheets.export(Voice(), _workplace(config), sheet, to))
+    """Export sheets: samples and writes as CSV, everything as JSON; or on paper, as one PDF file to be signed."""
+    workplace = _workplace(config)
+    stored = sheets.chosen_sheets(workplace, chosen or (), is_all=is_all)
+    if is_pdf:
+        raise typer.Exit(sheets.export_pdf(Voice(), workplace, stored, to))
+    raise typer.Exit(sheets.export(Voice(), stored, to))
+
+
+@sheet_app.command("workbook")
+def sheet_workbook(config: Config, to: ToFolder = Path()) -> None:
+    """Export the settings of all loops as found and as left, as a workbook for a spreadsheet."""
+    raise typer.Exit(sheets.workbook(Voice(), _workplace(config), to))
 
 
 @sheet_app.command("verify")
