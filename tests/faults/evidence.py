@@ -111,10 +111,15 @@ def end_of(evidence: Evidence) -> End:
 def _is_loss(evidence: Evidence, name: str) -> bool:
     """Whether somebody who sets this tag takes the loop: once the tool has begun to write.
 
-    In a test that is whatever they set; in a write of settings mode and output, which go back there.
+    In a test that is whatever they set, in a write of settings mode and output, which go back there.  An output moved
+    before the test drove it for the first time can't be told from what automatic did last.
     """
-    is_ours = any(write.t_s < evidence.struck_s for write in evidence.writes)
-    return is_ours and (evidence.wanted is None or name in ("mode", "op"))
+    earlier = [write for write in evidence.writes if write.t_s < evidence.struck_s]
+    if evidence.wanted is not None:
+        return bool(earlier) and name in ("mode", "op")
+    if "op" in evidence.taken:
+        return any("op" in write.numbers or "op_request" in write.numbers for write in earlier)
+    return bool(earlier)
 
 
 def _told(evidence: Evidence) -> End:

@@ -139,6 +139,13 @@ def test_what_happens_before_the_first_write_is_as_found() -> None:
     assert (verdict.end, verdict.writes_after_release) == (End.RESTORED, 0)
 
 
+def test_an_output_moved_before_the_test_drove_it_is_no_loss() -> None:
+    moved = {"op": 33.0, "mode": "MAN"}
+    early = replace(TEST, taken=moved, writes=(*TEST.writes[:2], Write(12.0, {"op_request": 45.0})))
+    verdict = judge(replace(early, shown=(Shown(11.0, {"op": 33.0, "mode": 0}),)))
+    assert (verdict.end, verdict.writes_after_release) == (End.RESTORED, 0)
+
+
 def test_times_and_excursions_are_counted_from_the_strike() -> None:
     driven = left(mode="MAN", guard_state="armed", true_pv_pct=59.5)
     seen = [(1.0, driven), (9.0, left(true_pv_pct=80.0)), (10.5, driven), (11.0, left(mode="MAN")), (11.25, left())]
