@@ -26,7 +26,10 @@ Array = NDArray[np.float64]
 _SIMULATED_PER_PERIOD = 200.0
 """Scans per ultimate period beyond which a response doesn't get truer, only dearer."""
 
-_TIMES = np.geomspace(0.02, 60.0, 36)
+LONGEST_INTEGRAL_RATIO = 60.0
+"""Longest integral time over the ultimate period that is sought."""
+
+_TIMES = np.geomspace(0.02, LONGEST_INTEGRAL_RATIO, 36)
 """Integral times over the ultimate period that a PI is first sought among."""
 
 _GOLDEN_TURNS = 12
@@ -34,6 +37,9 @@ _PID_STARTS = ((0.5, 0.12), (0.9, 0.3))
 """Ti over that of the PI's optimum, and Td over the ultimate period."""
 
 _PID_TURNS_AT_MOST = 90
+
+_SLACK_RATIO = 1.0 + 1e-6
+"""Rounding of the gain that meets a limit exactly."""
 
 _WITHIN_GRID_RATIO = 3.0
 """Least |L| at the lowest frequency of the grid: a loop that crosses below it is not judged by it."""
@@ -113,9 +119,9 @@ def best_pid(bench: LoopBench, limits: LoopLimits, pi: Found) -> Found | None:
     best: tuple[float, Array] = (inf, np.zeros(2))
     for ti_ratio, td_ratio in _PID_STARTS:
         start = np.log([ti_ratio * ti_s, td_ratio * bench.period_s])
-        cost, x = _simplex(lambda x: _with_times(bench, limits, exp(x[0]), exp(x[1]))[0], start)
+        cost, x = least_by_simplex(lambda x: _with_times(bench, limits, exp(x[0]), exp(x[1]))[0], start)
         best = min(best, (cost, x), key=lambda pair: pair[0])
-    cost, x = _simplex(lambda x: _with_times(bench, limits, exp(x[0]), exp(x[1]))[0], best[1], size=0.1)
+    cost, x = least_by_simplex(lambda x: _with_times(bench, limits, exp(x[0]), exp(x[1]))[0], best[1], size_ratio=0.1)
     iae_pct_s, gain = _with_times(bench, limits, exp(x[0]), exp(x[1]))
     if not iae_pct_s < pi.iae_pct_s:
         return None
@@ -127,6 +133,27 @@ def iae_pct_s(bench: LoopBench, settings: PidSettings) -> float:
     ti_s = settings.integral_time_s
     lasting = None if ti_s is None else ti_s / settings.controller_gain
     return load_iae_pct_s(bench.loop(settings), bench.scans, lasting)
+
+
+def admissible_gain(bench: LoopBench, limits: LoopLimits, ti_s: float, td_s: float | None) -> float | None:
+    """The top of the admissible gap with the least load-step IAE for these times; ``None`` without one."""
+    found, gain = _with_times(bench, limits, ti_s, td_s)
+    return None if found == inf else gain
+
+
+def keeps(bench: LoopBench, limits: LoopLimits, settings: PidSettings) -> bool:
+    """Whether the loop is stable and within the limits, on the grid."""
+    gain, ti_s = settings.controller_gain, settings.integral_time_s
+    controller = gain * bench.terms.response(ti_s, settings.derivative_time_s)
+    loop = bench.plant.gain * controller
+    distance = np.abs(1.0 + loop)
+    noise_gain = inf if limits.control_noise_gain is None else limits.control_noise_gain
+    return (
+        turns_say_stable(loop, bench.plant.integrators + (ti_s is not None))
+        and bool(np.max(1.0 / distance) <= limits.peak_sensitivity * _SLACK_RATIO)
+        and bool(np.max(np.abs(loop) / distance) <= limits.peak_complementary_sensitivity * _SLACK_RATIO)
+        and bool(np.max(np.abs(controller) / distance) <= noise_gain * _SLACK_RATIO)
+    )
 
 
 def _with_times(bench: LoopBench, limits: LoopLimits, ti_s: float, td_s: float | None) -> tuple[float, float]:
@@ -162,14 +189,16 @@ def _golden(function: Callable[[float], float], low: float, high: float) -> floa
     return left if at_left <= at_right else right
 
 
-def _simplex(function: Callable[[Array], float], start: Array, size: float = 0.4) -> tuple[float, Array]:
+def least_by_simplex(
+    function: Callable[[Array], float], start: Array, size_ratio: float = 0.4, turns: int = _PID_TURNS_AT_MOST
+) -> tuple[float, Array]:
     """Nelder and Mead from a simplex of the given size (in logarithms)."""
-    corners = np.vstack([start, start + size * np.eye(len(start))])
+    corners = np.vstack([start, start + size_ratio * np.eye(len(start))])
     search: Any = minimize  # its stubs don't know "initial_simplex"
     result = search(
         lambda x: min(function(x), 1e300),
         start,
         method="Nelder-Mead",
-        options={"initial_simplex": corners, "maxfev": _PID_TURNS_AT_MOST, "xatol": 3e-3, "fatol": 1e-12},
+        options={"initial_simplex": corners, "maxfev": turns, "xatol": 3e-3, "fatol": 1e-12},
     )
     return float(result.fun), np.asarray(result.x)

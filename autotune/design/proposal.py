@@ -2,6 +2,7 @@
 
 from dataclasses import dataclass
 
+from autotune.design.forecast import Forecast
 from autotune.loop.outcome import Refusal
 from autotune.loop.settings import BlockFields, PidSettings
 
@@ -15,7 +16,8 @@ class Proposal:
     the block's form, ``fields`` the rounded numbers in the controller's registers, ``rounding_pct``
     the largest relative change that rounding made (percent).  ``gain_factor`` is proposed over
     present gain in the block's form (``None`` without present settings).  ``cautions`` are sentences;
-    ``suits`` says in plain words what the rule was made for.
+    ``suits`` says in plain words what the rule was made for.  ``forecast`` is what a model says that the
+    settings as rounded would do (``None`` without a model, a refusal where the block isn't declared enough).
     """
 
     name: str
@@ -28,6 +30,7 @@ class Proposal:
     gain_factor: float | None
     cautions: tuple[str, ...] = ()
     suits: str = ""
+    forecast: Forecast | Refusal | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -42,9 +45,13 @@ class NotProposed:
 
 @dataclass(frozen=True, slots=True)
 class ProposalSheet:
-    """All proposals side by side; ``recommended`` names one, or is ``None`` with ``reason`` saying why."""
+    """All proposals side by side; ``recommended`` names one, or is ``None`` with ``reason`` saying why.
+
+    ``present_forecast`` is what a model says of the settings now in the controller.
+    """
 
     proposals: tuple[Proposal, ...]
     not_proposed: tuple[NotProposed, ...]
     recommended: str | None
     reason: str
+    present_forecast: Forecast | Refusal | None = None

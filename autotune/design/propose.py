@@ -1,7 +1,7 @@
 """From the ultimate point to settings side by side, in the controller's own form and units.
 
 The rules are computed from the best estimate, as published; the interval is judged beside them, and
-what is recommended must stand on its low end.
+what is recommended must stand on its low end.  Where the test gave a model, ``propose_from_model`` says more.
 """
 
 from dataclasses import dataclass
@@ -17,6 +17,7 @@ from autotune.design.cautions import (
     caution_sensitivity,
 )
 from autotune.design.margins import sensitivity_at_least
+from autotune.design.model_proposals import propose_from_model
 from autotune.design.proposal import NotProposed, Proposal, ProposalSheet
 from autotune.design.rules import ULTIMATE_RULES, UltimateRule
 from autotune.identify.findings import UltimatePoint
@@ -26,6 +27,8 @@ from autotune.loop.mode import ControlAction
 from autotune.loop.outcome import Interval, Refusal
 from autotune.loop.settings import BlockDescription, BlockFields, PidSettings
 from autotune.loop.span import Span
+
+__all__ = ["propose", "propose_from_model"]
 
 RECOMMENDED_RULE = "tyreus-luyben-pi"
 
