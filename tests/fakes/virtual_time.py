@@ -14,6 +14,7 @@ from typing import Any, NoReturn, TypeVar
 T = TypeVar("T")
 
 DAY_S = 86_400.0
+PASSES_AT_ONE_INSTANT = 10_000
 
 
 class Deadlock(AssertionError):
@@ -67,7 +68,7 @@ class VirtualLoop(asyncio.BaseEventLoop):
         self._now_s = 0.0
         self._within_s = within_s
         self._on_pass = on_pass
-        self._passes = 0
+        self._passes = self._passes_now = 0
         self._selector = _JumpingSelector(self._jump)  # the base class waits by calling its select()
 
     def time(self) -> float:
@@ -84,12 +85,16 @@ class VirtualLoop(asyncio.BaseEventLoop):
 
     def _jump(self, timeout_s: float | None) -> None:
         self._passes += 1
+        self._passes_now += 1
+        if self._passes_now > PASSES_AT_ONE_INSTANT:
+            raise EndlessRun(f"the clock stands at {self._now_s:g} s; busy: {_places(self)}")
         if self._on_pass is not None:
             self._on_pass(self._passes)
         if timeout_s == 0.0 or self._ready:
             return
         if timeout_s is None:
             raise Deadlock(f"at {self._now_s:g} s nothing is ready and no timer runs; waiting: {_places(self)}")
+        self._passes_now = 0
         self._now_s += timeout_s
         if not self._now_s <= self._within_s:
             raise EndlessRun(f"not ended within {self._within_s:g} s of virtual time; waiting: {_places(self)}")
@@ -106,6 +111,7 @@ class VirtualLoop(asyncio.BaseEventLoop):
 
         self._within_s = self._now_s + 3600.0
         self._on_pass = None
+        self._passes_now = 0
         for task in (left := asyncio.all_tasks(self)):
             task.add_done_callback(stop_after_the_last)
             task.cancel()

@@ -3,23 +3,35 @@
 import asyncio
 from collections.abc import Callable
 from dataclasses import dataclass, field
-from typing import Any
+from datetime import UTC, datetime, timedelta
+from pathlib import Path
+from typing import Any, TypeVar
 
 from autotune.config.test_plan import plan_for
-from autotune.config.types import LoopConfig
+from autotune.config.types import Configuration, LoopConfig
 from autotune.experiment.commands import HandBack
 from autotune.experiment.plan import TestPlan
 from autotune.experiment.state import Experiment
+from autotune.identify.findings import FindingsOrRefusal
 from autotune.loop.mode import LoopMode
+from autotune.loop.outcome import Refusal
+from autotune.loop.record import Record
+from autotune.service.estimator import Estimator
 from autotune.service.journal import MemoryJournal
 from autotune.service.journal_reading import JournalLine, read_journal_text
 from autotune.service.journal_replay import replay
 from autotune.service.runner import TestRunner
+from autotune.service.workplace import Workplace
+from autotune.sheet.store import MemoryStore
 from tests.fakes.link import FakeLink, LoggedRequest
 from tests.fakes.plant import PlantInMemory
 from tests.fakes.virtual_time import run_virtual
 
+T = TypeVar("T")
+
 TOKEN = 4711
+BEGUN = datetime(2026, 3, 2, 8, 0, tzinfo=UTC)
+"""The instant at which virtual time begins."""
 BEGIN_S = 1.0
 """When the test begins, the plant being at rest."""
 AFTERWARDS_S = 3.0
@@ -141,3 +153,44 @@ def assert_as_found(ran: Ran) -> None:
     assert abs(block.sp_pct - 50.0) < 1e-3, ran.said
     if ran.loop.has_guard:
         assert (guard.holder, mailbox.holder_request) == (0, 0), ran.said
+
+
+async def at_once(work: Callable[..., T], /, *args: Any) -> T:
+    """Blocking work, here and now: in virtual time nothing else is waiting."""
+    return work(*args)
+
+
+def virtual_now() -> datetime:
+    """The wall clock of virtual time."""
+    return BEGUN + timedelta(seconds=asyncio.get_running_loop().time())
+
+
+class UnaskedEstimator:
+    """Concludes nothing, at once: for tests of what surrounds the conclusion."""
+
+    async def measure(self, record: Record) -> FindingsOrRefusal:
+        """A refusal that tells how much there was."""
+        return Refusal("NOT_ASKED", f"{len(record.samples)} samples were not looked at", "ask an estimator")
+
+
+def workplace_at(
+    plant: PlantInMemory, folder: Path, *loops: LoopConfig, estimator: Estimator | None = None
+) -> Workplace:
+    """A workplace whose every part but journals and locks is in memory."""
+    configuration = Configuration(
+        file=Path("plant.toml"),
+        data_dir=folder,
+        loops=loops,
+        controllers=(loops[0].controller,),
+        concurrent_tests_at_most=1,
+        digest="c" * 64,
+    )
+    return Workplace(
+        configuration,
+        MemoryStore(),
+        open_link=plant.open_link,
+        estimator=estimator or UnaskedEstimator(),
+        wall_clock=virtual_now,
+        new_token=lambda: TOKEN,
+        in_thread=at_once,
+    )

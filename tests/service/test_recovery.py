@@ -3,28 +3,24 @@
 import asyncio
 from collections.abc import Callable, Iterable
 from dataclasses import dataclass, field, replace
-from datetime import UTC, datetime, timedelta
 from functools import cache
 from pathlib import Path
 
 import pytest
 
-from autotune.config.types import Configuration, LoopConfig
+from autotune.config.types import LoopConfig
 from autotune.errors import JournalError
 from autotune.loop.mode import LoopMode
-from autotune.service.estimator import InlineEstimator
 from autotune.service.journal import LineKind, MemoryJournal, journal_file
 from autotune.service.journal_intents import open_intents
 from autotune.service.recovery import recover
 from autotune.service.workplace import Workplace
-from autotune.sheet.store import MemoryStore
 from simulator.block import Mode
 from tests.fakes.link import FakeLink, LoggedRequest
 from tests.fakes.plant import WITH_GUARD, WITHOUT_GUARD, PlantInMemory
 from tests.fakes.virtual_time import run_virtual
-from tests.service.bench import begin, run
+from tests.service.bench import begin, run, virtual_now, workplace_at
 
-BEGUN = datetime(2026, 3, 2, 8, 0, tzinfo=UTC)
 GUARD_WAITS_S, YOUNG_S, OLD_S = 0.3, 3.0, 60.0
 
 
@@ -37,15 +33,11 @@ GUARDED, BARE = short(WITH_GUARD), short(WITHOUT_GUARD)
 LOOPS = pytest.mark.parametrize("loop", [GUARDED, BARE], ids=["with a guard", "without a guard"])
 
 
-def now() -> datetime:
-    return BEGUN + timedelta(seconds=asyncio.get_running_loop().time())
-
-
 class LastLine(MemoryJournal):
     """A journal whose line ``last`` is the last thing that our process does: from there on nothing leaves it."""
 
     def __init__(self, last: int) -> None:
-        super().__init__(now)
+        super().__init__(virtual_now)
         self.link: FakeLink | None = None
         self.died = asyncio.Event()
         self._last = last
@@ -71,10 +63,7 @@ class Life:
 
     @property
     def workplace(self) -> Workplace:
-        configuration = Configuration(Path("plant.toml"), self.folder, (self.loop,), (self.loop.controller,), 1, "d")
-        return Workplace(
-            configuration, MemoryStore(), open_link=self.plant.open_link, estimator=InlineEstimator(), wall_clock=now
-        )
+        return workplace_at(self.plant, self.folder, self.loop)
 
     @property
     def writes(self) -> list[LoggedRequest]:
