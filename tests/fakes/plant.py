@@ -63,6 +63,8 @@ def _bench_sized(loop: LoopConfig) -> LoopConfig:
         baseline_drift_at_most_pct_per_s=1.0,
         hand_back_within_s=2.0,
         recover_within_s=20.0,
+        digest="a" * 64,
+        block_digest="b" * 64,
     )
 
 
