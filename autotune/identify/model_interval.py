@@ -18,7 +18,7 @@ from autotune.identify.output_error import Fit
 from autotune.identify.plant_fit import PlantFits, model_in_seconds, process_model
 from autotune.identify.waveforms import Array
 
-GAIN_FLOOR_RATIO, PERIOD_FLOOR_RATIO = 0.004, 0.0012  # standard deviations: no plant is one of the structures
+GAIN_FLOOR_RATIO, PERIOD_FLOOR_RATIO = 0.003, 0.0012  # standard deviations: no plant is one of the structures
 LAGS_PER_PERIOD = 0.25  # over which residuals may hang together
 NEAR_TIE_BIC = 6.0
 WEIGHED_BIC = 12.0  # beyond, a weight of 0.2 %

@@ -18,7 +18,7 @@ from autotune.identify.waveforms import Array
 DEAD_TIME_HIGH = 3.0  # periods: a relay swings with less than one
 STEP_AT_MOST = 1.5  # of a shape parameter at once
 DAMPING_LOWEST, DAMPING_HIGHEST = 1e-10, 1e10
-TINY = 1e-300
+TINY = 1e-150
 
 
 @dataclass(frozen=True, slots=True)
@@ -129,7 +129,7 @@ def _least(columns: Array, pv_pct: Array) -> Array:
     return np.asarray(np.linalg.lstsq(columns.T, pv_pct, rcond=1e-10)[0])
 
 
-def refined(trace: Trace, start: Fit, tolerance: float = 1e-6, steps_at_most: int = 40) -> Fit:
+def refined(trace: Trace, start: Fit, tolerance: float = 1e-4, steps_at_most: int = 40) -> Fit:
     """Levenberg and Marquardt from a start until the misfit falls by less than ``tolerance`` of itself in a step.
 
     The dead time stays in 0 .. DEAD_TIME_HIGH and the shape in its bounds: a parameter that pushes against its

@@ -51,12 +51,14 @@ def fit_plant(signals: Waveforms, period_s: float) -> PlantFits:
     candidates = [(min(fit.bic for fit in fits), trace, fits)]
     suspect, onsets = _suspect(trace, fits)
     if suspect is not None:
-        for disturbed, price in (
-            (replace(trace, has_ramp=True), RAMP_BIC),
-            (_loaded(trace, suspect, onsets), LOAD_BIC),
-        ):
-            found = bank_fits(disturbed, fits)
-            candidates.append((min(fit.bic for fit in found) + price, disturbed, found))
+        drifting = replace(trace, has_ramp=True)
+        found = bank_fits(drifting, fits)
+        candidates.append((min(fit.bic for fit in found) + RAMP_BIC, drifting, found))
+        loaded = _loaded(trace, suspect, onsets)
+        found = bank_fits(loaded, fits)
+        loaded = _loaded(trace, min(found, key=lambda fit: fit.bic), onsets)
+        found = updated_fits(loaded, found)
+        candidates.append((min(fit.bic for fit in found) + LOAD_BIC, loaded, found))
     _, trace, fits = min(candidates, key=lambda candidate: candidate[0])
     return _ranked(trace, period_s, fits)
 
