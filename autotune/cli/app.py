@@ -10,8 +10,8 @@ import typer
 from autotune.cli import check as checking
 from autotune.cli import convert as converting
 from autotune.cli import rehearse as rehearsing
+from autotune.cli import service_app, sheets
 from autotune.cli import settings as setting
-from autotune.cli import sheets
 from autotune.cli import tags as listing
 from autotune.cli import test as testing
 from autotune.cli.exit_codes import ExitCode
@@ -32,6 +32,8 @@ app = typer.Typer(
 )
 sheet_app = typer.Typer(no_args_is_help=True, help="The records: list, show, export, workbook, verify.")
 app.add_typer(sheet_app, name="sheet")
+app.command()(service_app.serve)
+app.add_typer(service_app.person_app, name="person")
 
 Config = Annotated[Path, typer.Argument(metavar="CONFIG", help="the configuration file (TOML)")]
 Loop = Annotated[str, typer.Argument(metavar="LOOP", help="the loop's tag name, such as TIC-204")]

@@ -110,10 +110,13 @@ def quantities_answer(quantities: tuple[schema.Quantity, ...]) -> SettingsAnswer
     return settings_answer(fields_of(quantities))
 
 
-def change_answer(ended: ChangeEnd) -> WriteAnswer:
-    """A change's end as data."""
+def change_answer(ended: ChangeEnd, read_back: tuple[schema.Quantity, ...] = ()) -> WriteAnswer:
+    """A change's end as data; ``read_back`` in the controller's own words, where somebody shows them."""
     return WriteAnswer(
-        outcome=ended.state.phase.name, read_back_equal=ended.is_read_back_equal, text=change_in_words(ended)
+        outcome=ended.state.phase.name,
+        read_back_equal=ended.is_read_back_equal,
+        text=change_in_words(ended),
+        read_back=read_back,
     )
 
 

@@ -5,6 +5,7 @@ from pydantic import BaseModel, ConfigDict, FiniteFloat
 from autotune.identify.findings import Findings, FindingsOrRefusal
 from autotune.loop.outcome import Refusal
 from autotune.loop.settings import BlockFields
+from autotune.sheet import schema
 
 
 class Answer(BaseModel):
@@ -122,6 +123,7 @@ class WriteAnswer(Answer):
     outcome: str
     read_back_equal: bool
     text: str
+    read_back: tuple[schema.Quantity, ...] = ()
 
 
 class LoopNowAnswer(Answer):

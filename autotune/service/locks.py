@@ -96,7 +96,7 @@ class HouseLocks:
     def __init__(self) -> None:
         self._held: dict[Named, Tenant] = {}
 
-    def hold(self, data_dir: Path, things: Iterable[Named], tenant: Tenant) -> HeldLock:  # noqa: ARG002 - as ``hold``
+    def hold(self, data_dir: Path, things: Iterable[Named], tenant: Tenant) -> HeldLock:
         """Take all of them or none, at once; raises ``LoopBusy``, which says who holds which of them."""
         with ExitStack() as taken:
             for thing in sorted(set(things)):

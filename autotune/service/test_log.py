@@ -63,6 +63,10 @@ class TestLog:
         """Append something that happened."""
         self._story.append(StoryLine(t_s, kind, text, code, by))
 
+    def since(self, sample: int, write: int) -> tuple[tuple[Sample, ...], tuple[LoggedWrite, ...]]:
+        """The readings and write requests from these numbers on, for who has told the earlier ones."""
+        return tuple(self._samples[sample:]), tuple(self._writes[write:])
+
     @property
     def samples(self) -> tuple[Sample, ...]:
         """All readings."""

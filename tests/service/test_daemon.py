@@ -1,0 +1,155 @@
+"""The daemon over its own sockets, on the soft plant's fast loop."""
+
+import stat
+from pathlib import Path
+
+import pytest
+
+from autotune.errors import LoopBusy
+from autotune.service.testing import SupervisedTest
+from tests.service.daemon_bench import NAME, PERMISSION, SECRET, served
+from tests.system.bench import bench_workplace
+from tests.system.plant import LOOP, as_real, moved
+
+pytestmark = pytest.mark.socket
+
+
+async def test_a_whole_test_is_started_watched_and_found_in_the_archive(tmp_path: Path) -> None:
+    async with served(tmp_path) as at:
+        assert (await at.start_test()) == {"answer": {"text": "the test has begun"}}
+        cycling = await at.until_live(lambda live: live["test"] and live["test"]["cycles"])
+        assert cycling["loop"]["doing"] == "test"
+        assert cycling["test"]["hysteresis_eu"] > 0.0
+        assert len(cycling["trend"]["t_s"]) == len(cycling["trend"]["pv_eu"])
+        ended = await at.until_live(lambda live: live["sheet"])
+        assert ended["test"]["phase"] == "COMPLETE"
+        whole = await at.until_live(lambda live: live["trend"])
+        assert whole["trend"]["first"] == 0
+        assert len(whole["trend"]["t_s"]) > len(cycling["trend"]["t_s"])
+        assert len(whole["trend"]["switches"]) > 2 * len(cycling["test"]["cycles"])
+        kept = (await at.ask("open_sheet", sheet=ended["sheet"]))["answer"]["sheet"]
+        assert kept["outcome"]["ended"] == "COMPLETE"
+        assert "P. Owner" in kept["permission"]["text"]
+        lines = (await at.ask("list_sheets", loop=LOOP))["answer"]["sheets"]
+        assert [line["sheet"] for line in lines] == [ended["sheet"]]
+        page = (await at.ask("export_sheet", sheet="last", what="page"))["answer"]
+        assert "TEST SHEET" in page["text"]
+
+
+async def test_settings_are_written_by_who_signed_in_and_types_the_digest(tmp_path: Path) -> None:
+    async with served(tmp_path) as at:
+        await at.start_test()
+        sheet = (await at.until_live(lambda live: live["sheet"]))["sheet"]
+        kept = (await at.ask("open_sheet", sheet=sheet))["answer"]["sheet"]
+        proposal = next(one["name"] for one in kept["proposals"] if one["settings"])
+        assert (await at.ask("plan_change", sheet=sheet, proposal=proposal))["refusal"]["code"] == "SIGN_IN"
+        session = await at.sign_in()
+        before = await at.plant.state()
+        plan = (await at.ask_console("plan_change", session=session, sheet=sheet, proposal=proposal))["answer"]
+        confirmation = {"session": session, "loop": LOOP, "secret": SECRET}
+        mistyped = await at.ask_console("confirm_change", **confirmation, typed="0000-0000")
+        assert mistyped["refusal"]["code"] == "DIGEST_WRONG"
+        assert not moved(before, await at.plant.state())
+        guessed = await at.ask_console("confirm_change", **{**confirmation, "secret": "guessed"}, typed=plan["digest"])
+        assert guessed["refusal"]["code"] == "WRONG_SECRET"
+        written = (await at.ask_console("confirm_change", **confirmation, typed=plan["digest"]))["answer"]
+        assert written["outcome"] == "WRITTEN"
+        assert written["read_back_equal"]
+        wanted = {line["label"]: line["will_hold"] for line in plan["lines"] if line["is_changed"]}
+        assert {one["label"]: one["amount"] for one in written["read_back"]}.items() >= wanted.items()
+        back = (await at.ask_console("plan_restore", session=session, sheet=sheet))["answer"]
+        again = (await at.ask_console("confirm_change", **confirmation, typed=back["digest"]))["answer"]
+        assert again["outcome"] == "WRITTEN"
+        after = await at.plant.state()
+        assert [as_real(after[name]) for name in ("gain", "integral")] == [
+            as_real(before[name]) for name in ("gain", "integral")
+        ]
+        assert [entry["person"] for entry in (await at.ask("open_sheet", sheet=sheet))["answer"]["addenda"]] == [
+            {"name": NAME, "is_authenticated": True}
+        ] * 2
+
+
+async def test_an_abort_at_a_locked_screen_hands_the_loop_back(tmp_path: Path) -> None:
+    async with served(tmp_path) as at:
+        session = await at.sign_in()
+        before = await at.plant.state()
+        await at.start_test()
+        await at.until_live(lambda live: live["test"] and live["test"]["phase"] == "TESTING")
+        found = at.sessions.find(session)
+        assert found is not None
+        found.is_locked = True
+        assert (await at.ask_console("finish_test", session=session, loop=LOOP))["refusal"]["code"] == "LOCKED"
+        assert (await at.ask_console("abort_test", loop=LOOP))["refusal"]["code"] == "SIGN_IN"
+        assert "answer" in await at.ask_console("abort_test", session=session, loop=LOOP)
+        ended = await at.until_live(lambda live: live["sheet"])
+        assert ended["test"]["phase"] == "ABORTED"
+        after = await at.plant.state()
+        assert (after["mode"], round(after["op"])) == (before["mode"], round(before["op"]))
+
+
+async def test_a_stop_hands_the_loop_back_and_keeps_the_sheet(tmp_path: Path) -> None:
+    async with served(tmp_path) as at:
+        before = await at.plant.state()
+        await at.start_test()
+        await at.until_live(lambda live: live["test"] and live["test"]["phase"] == "TESTING")
+        await at.daemon.stop()
+        after = await at.plant.state()
+        assert (after["mode"], after["holder"]) == (before["mode"], 0)
+        assert (await at.ask("open_sheet", sheet="last"))["answer"]["sheet"]["outcome"]["ended"] == "ABORTED"
+
+
+async def test_while_it_serves_nobody_else_on_this_machine_is_master(tmp_path: Path) -> None:
+    async with served(tmp_path) as at:
+        workplace, loop = bench_workplace(tmp_path, at.plant.port)
+        with pytest.raises(LoopBusy, match=r"serves bench\.toml; use its page http"):
+            await SupervisedTest(workplace, loop).__aenter__()
+
+
+async def test_a_start_without_what_permission_needs_moves_nothing(tmp_path: Path) -> None:
+    async with served(tmp_path) as at:
+        await at.plant.press(f"enable {LOOP}")
+        looked = (await at.ask("look", loop=LOOP))["answer"]
+        asked = {"loop": LOOP, "typed_loop": LOOP, "accepted": looked["cautions"], **PERMISSION}
+        before = await at.plant.state()
+        lacking: list[dict[str, object]] = [{"typed_loop": "TIC-2"}, {"accepted": []}, {"permit": ""}]
+        refusals = [(await at.ask("start_test", **{**asked, **other}))["refusal"]["code"] for other in lacking]
+        assert refusals == ["NAME_WRONG", "CAUTION_NEW", "NOT_UNDERSTOOD"]
+        session = await at.sign_in()
+        told = await at.ask_console("start_test", **asked, session=session, secret="guessed")
+        assert told["refusal"]["code"] == "WRONG_SECRET"
+        assert not moved(before, await at.plant.state())
+
+
+async def test_a_daemon_that_only_watches_knows_no_word_that_writes(tmp_path: Path) -> None:
+    async with served(tmp_path, is_watch_only=True) as at:
+        await at.plant.press(f"enable {LOOP}")
+        before = await at.plant.state()
+        looked = (await at.ask("look", loop=LOOP))["answer"]
+        assert looked["check"]["fit"]
+        session = await at.sign_in()
+        acts = {
+            "start_test": {"typed_loop": LOOP, "accepted": looked["cautions"], "secret": SECRET, **PERMISSION},
+            "abort_test": {},
+            "confirm_change": {"typed": "0000-0000", "secret": SECRET},
+            "drop_plan": {},
+        }
+        for act, fields in acts.items():
+            told = await at.ask_console(act, session=session, loop=LOOP, **fields)
+            assert told["refusal"]["code"] == "NOT_UNDERSTOOD", act
+        assert at.daemon.tables == {}
+        assert not moved(before, await at.plant.state())
+
+
+async def test_the_sockets_are_for_their_owner_only(tmp_path: Path) -> None:
+    async with served(tmp_path) as at:
+        assert {stat.S_IMODE(file.stat().st_mode) for file in (at.local, at.console)} == {0o600}
+
+
+async def test_the_rounds_tell_loops_and_controllers(tmp_path: Path) -> None:
+    async with served(tmp_path) as at:
+        line = (await at.until_live(lambda live: live["loop"]["read_utc"]))["loop"]
+        assert line["mode"] == "AUTO"
+        assert [one["label"] for one in line["settings"]][:2] == ["GAIN", "TI"]
+        controller = (await at.ask("list_controllers"))["answer"]["controllers"][0]
+        assert controller["readings"] >= 1
+        assert controller["missed"] == 0
