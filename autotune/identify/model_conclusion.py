@@ -40,47 +40,52 @@ class ModelConclusion:
 
 
 def conclude(signals: Waveforms, period_s: float) -> ModelConclusion | None:
-    """Fit the bank to a test that swings with about ``period_s``; ``None`` where no ultimate point comes of it.
+    """Fit the bank to a test that swings with about ``period_s``; ``None`` where no ultimate point comes of it."""
+    return conclude_from(signals, fit_plant(signals, period_s))
+
+
+def conclude_from(signals: Waveforms, found: PlantFits) -> ModelConclusion | None:
+    """What the fits of a test say; ``None`` where the best of them has no ultimate point.
 
     Where the stamps are hulls, the conclusion is drawn at both ends too: with all that they leave unknown counted
     as plant (the low end of Ku), and with none of it (the high end).
     """
-    found = fit_plant(signals, period_s)
     central = model_point(found)
     if central is None:
         return None
     point, weighed = central
     hull_s = signals.delay_hull_s
-    ends = [point, *_ends(signals, found, hull_s)] if hull_s else [point]
+    at_ends = _ends(signals, found, hull_s) if hull_s else ()
+    ends = [point, *(end for end in at_ends if end is not None)]
     gain = _interval(point.log_gain, [(end.log_gain, end.gain_half_ratio) for end in ends])
     period = _interval(point.log_period_s, [(end.log_period_s, end.period_half_ratio) for end in ends])
     for sure in point.disagreeing:
         gain = _holding(gain, exp(sure.point.log_gain))
         period = _holding(period, exp(sure.point.log_period) * found.period_s)
+    is_open = None in at_ends
     because = tuple(_because(signals, found, point, weighed, ends))
-    misfit_ratio = _misfit_ratio(signals, found)
     return ModelConclusion(
         ultimate=UltimatePoint(METHOD, gain, period, because),
         model=model_with_draws(found, weighed, hull_s, because),
-        cautions=tuple(_cautions(signals, found, point)),
-        is_trusted=misfit_ratio <= MISFIT_AT_MOST and point.gain_half_ratio <= HALF_WIDTH_AT_MOST,
+        cautions=tuple(_cautions(signals, found, point, is_open=is_open)),
+        is_trusted=_misfit_ratio(signals, found) <= MISFIT_AT_MOST
+        and point.gain_half_ratio <= HALF_WIDTH_AT_MOST
+        and not is_open,
     )
 
 
-def _ends(signals: Waveforms, found: PlantFits, hull_s: float) -> Iterator[ModelPoint]:
+def _ends(signals: Waveforms, found: PlantFits, hull_s: float) -> tuple[ModelPoint | None, ModelPoint | None]:
     """The conclusions with ``hull_s`` more dead time than stamped, and with as much less.
 
     More dead time only adds to the fitted one, and so does less where there is enough of it; else the rest of the
     plant must make up for it, and is fitted again.
     """
-    if later := model_point(found, hull_s):
-        yield later[0]
+    later = model_point(found, hull_s)
     if found.best.dead_time * found.period_s >= hull_s:
         sooner = model_point(found, -hull_s)
     else:
         sooner = model_point(update_plant(signals, found, hull_s))
-    if sooner:
-        yield sooner[0]
+    return later[0] if later else None, sooner[0] if sooner else None
 
 
 def _interval(best: float, ends: list[tuple[float, float]]) -> Interval:
@@ -131,8 +136,13 @@ def _because(
         yield "PV drifted by itself: a ramp was fitted beside the plant"
 
 
-def _cautions(signals: Waveforms, found: PlantFits, point: ModelPoint) -> Iterator[str]:
+def _cautions(signals: Waveforms, found: PlantFits, point: ModelPoint, *, is_open: bool) -> Iterator[str]:
     best = found.best
+    if is_open:
+        yield (
+            "What the stamps leave unknown exceeds the plant's dead time: without it the fitted plant has no ultimate "
+            "gain at all. Offer the PLC's clock tags, or read and write over a faster link."
+        )
     if found.trace.load_from is not None:
         size_pct = float(best.linear[-1] / best.numerator[0])
         yield (

@@ -14,7 +14,7 @@ from scipy.stats import norm, qmc
 from autotune.identify.model import ModelWithDraws, ProcessModel
 from autotune.identify.model_bank import SHAPE_HIGH, SHAPE_LOW
 from autotune.identify.model_point import Crossing, crossing
-from autotune.identify.output_error import Fit
+from autotune.identify.output_error import Fit, fitted
 from autotune.identify.plant_fit import PlantFits, model_in_seconds, process_model
 from autotune.identify.waveforms import Array
 
@@ -26,6 +26,7 @@ FLAT_RATIO = 1e-9
 COVERED = 1.959964
 DRAWS = 64
 DRAW_SD_AT_MOST = 2.5
+DRAW_CHI_SQUARED_AT_MOST = 20.0  # by which a draw may explain the test worse: 2.5 deviations in three directions
 
 
 @dataclass(frozen=True, slots=True)
@@ -167,13 +168,14 @@ def model_with_draws(found: PlantFits, weighed: Weighed, hull_s: float, because:
     """The best model, and draws from each weighed structure's covariance; their weights are the structures'.
 
     The draws are a fixed low-discrepancy set (J. H. Halton, Numer. Math. 2 (1960) 84) within DRAW_SD_AT_MOST
-    deviations of each direction, their dead times spread evenly over what the stamps leave unknown
-    (``hull_s`` either way); those of negative dead time or gain are left out.
+    deviations of each direction; those of negative dead time and those whose own best numerator explains the test
+    much worse are left out.  Their dead times are spread evenly over what the stamps leave unknown
+    (``hull_s`` either way).
     """
     draws: list[ProcessModel] = []
     weights: list[float] = []
     for sure, weight in weighed:
-        models = _draws(sure, found.period_s, hull_s, max(8, round(DRAWS * weight)))
+        models = _draws(found, sure, hull_s, max(8, round(DRAWS * weight)))
         draws += models
         weights += [weight / len(models) for _ in models]
     total = sum(weights)
@@ -185,17 +187,29 @@ def model_with_draws(found: PlantFits, weighed: Weighed, hull_s: float, because:
     )
 
 
-def _draws(sure: Sureness, period_s: float, hull_s: float, count: int) -> list[ProcessModel]:
-    order = len(sure.fit.shape)
-    cube = qmc.Halton(len(sure.covariance) + 1, scramble=False).random(count + 1)[1:]
+def _draws(found: PlantFits, sure: Sureness, hull_s: float, count: int) -> list[ProcessModel]:
+    """In shape, dead time, ln b_0 and b_i/b_0: a fast lag moves b_0 as much as its own pole, whatever its size."""
+    fit, order = sure.fit, sure.fit.structure.order
+    gain, zeros = float(fit.numerator[0]), fit.numerator[1:] / fit.numerator[0]
+    to_ratios = np.eye(len(sure.covariance))
+    to_ratios[order + 1 :] /= gain
+    to_ratios[order + 2 :, order + 1] = -zeros / gain
+    covariance = to_ratios @ sure.covariance @ to_ratios.T
+    cube = qmc.Halton(len(covariance) + 1, scramble=False).random(count + 1)[1:]
     normal = np.clip(norm.ppf(cube[:, :-1]), -DRAW_SD_AT_MOST, DRAW_SD_AT_MOST)
-    scale = np.sqrt(np.maximum(np.diag(sure.covariance), 1e-300))
-    spread, direction = np.linalg.eigh(sure.covariance / np.outer(scale, scale))
+    scale = np.sqrt(np.maximum(np.diag(covariance), 1e-300))
+    spread, direction = np.linalg.eigh(covariance / np.outer(scale, scale))
     drawn = normal @ (direction * np.sqrt(np.maximum(spread, 0.0))).T * scale
-    drawn += np.concatenate((sure.fit.parameters, sure.fit.numerator))
-    drawn[:, order] += (2 * cube[:, -1] - 1) * hull_s / period_s
-    return [
-        model_in_seconds(np.clip(one[:order], SHAPE_LOW, SHAPE_HIGH), float(one[order]), one[order + 1 :], period_s)
-        for one in drawn
-        if one[order] >= 0 and one[order + 1] > 0
-    ]
+    drawn += np.concatenate((fit.parameters, [log(gain)], zeros))
+    drawn[:, :order] = np.clip(drawn[:, :order], SHAPE_LOW, SHAPE_HIGH)
+    freedom = len(fit.residual_pct) - len(fit.slopes) - len(fit.columns)
+    misfit_at_most = max(fit.misfit, fit.misfit_floor) * (1 + DRAW_CHI_SQUARED_AT_MOST / freedom)
+    models = []
+    for one, unknown in zip(drawn, 2 * cube[:, -1] - 1, strict=True):
+        dead_time = float(one[order]) + unknown * hull_s / found.period_s
+        if min(one[order], dead_time) < 0:
+            continue
+        if fitted(found.trace, fit.structure, one[: order + 1]).misfit <= misfit_at_most:
+            numerator = exp(one[order + 1]) * np.append(1.0, one[order + 2 :])
+            models.append(model_in_seconds(one[:order], dead_time, numerator, found.period_s))
+    return models

@@ -200,3 +200,20 @@ def test_half_cycles_that_the_steps_do_not_explain_are_said() -> None:
 
 def test_steps_as_small_as_a_dead_band_are_said() -> None:
     assert says(found(sampled_relay(PLANT, replace(BENCH, amplitude_pct=0.4), 1)), "would not have moved")
+
+
+def test_where_no_fitted_plant_has_an_ultimate_point_the_points_of_the_oscillation_speak_alone() -> None:
+    plant = Plant("two lags alone", lags_s=(5.0, 1.0), ultimate_period_s=2.0)
+    record = sampled_relay(plant, replace(BENCH, noise_ratio=0.0))
+    effects = tuple(replace(e, effect=Stamp.at(e.effect.middle_s + record.scan_s / 4)) for e in record.effects)
+    findings = found(replace(record, effects=effects, noise_pct=0.01))
+    assert findings.model is None
+    assert findings.ultimate.method == "plant shapes through the Fourier points"
+    assert says(findings, "No fitted plant has an ultimate point")
+
+
+def test_the_fitted_plant_stands_beside_its_ultimate_point() -> None:
+    findings = found(sampled_relay(PLANT, BENCH, 1))
+    assert findings.model is not None
+    assert findings.ultimate.method == "plant fitted to the whole test"
+    assert findings.model.best.dead_time_s == pytest.approx(1.0, rel=0.02)
