@@ -155,6 +155,19 @@ def plan_section(plan: TestPlan) -> schema.Plan:
     )
 
 
+def rested_section(experiment: Experiment) -> schema.Rested | None:
+    """PV at rest; ``None`` where the test never came so far."""
+    rested = experiment.rested
+    if rested is None:
+        return None
+    return schema.Rested(
+        reference_pct=rested.reference_pct,
+        hysteresis_pct=rested.hysteresis_pct,
+        noise_pct=rested.noise_pct,
+        drift_pct_per_s=rested.drift_pct_per_s,
+    )
+
+
 def limits_section(plan: TestPlan) -> schema.Limits:
     """The limits that were in force."""
     limits = plan.limits

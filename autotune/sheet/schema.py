@@ -121,6 +121,15 @@ class Plan(_Stored):
     has_clock_tags: bool
 
 
+class Rested(_Stored):
+    """PV at rest before the first move: its mean, about which the relay switches, and what came of it."""
+
+    reference_pct: float
+    hysteresis_pct: float
+    noise_pct: float
+    drift_pct_per_s: float
+
+
 class WatchLimit(_Stored):
     """A condition outside the loop that had to hold, in its own unit."""
 
@@ -290,6 +299,7 @@ class Sheet(_Stored):
     as_found: AsFound | None
     plan: Plan
     limits: Limits
+    rested: Rested | None = None
     samples: Samples = Samples()
     writes: tuple[WriteLine, ...] = ()
     events: tuple[EventLine, ...] = ()

@@ -19,6 +19,7 @@ from autotune.sheet.schema import (
     Proposal,
     Quantity,
     Recovery,
+    Rested,
     Said,
     Samples,
     SeenPoint,
@@ -164,6 +165,7 @@ def sheet(loop: str = "TIC-204", minutes: int = 0, gain: float = 1.5, ended: str
             "as_found": as_found(gain),
             "plan": plan(),
             "limits": limits(),
+            "rested": Rested(reference_pct=59.95, hysteresis_pct=0.25, noise_pct=0.1, drift_pct_per_s=0.002),
             "samples": samples(),
             "writes": (
                 WriteLine(
