@@ -30,5 +30,10 @@ async def test_the_plant_of_a_rehearsal_over_opc_ua_is_secured_and_fit_to_test_o
         await link.close()
     assert after.is_fit, after.findings
     assert [one.code for one in after.findings if one.level is Level.CAUTION] == []
-    secrets = [tmp_path / "pki" / "autotune-key.pem", *tmp_path.glob("soft-plant-*.txt")]
-    assert [stat.S_IMODE(path.stat().st_mode) for path in secrets] == [0o600] * 3
+    assert rights_of_secrets(tmp_path) == [0o600] * 3
+
+
+def rights_of_secrets(folder: Path) -> list[int]:
+    """Of our key, of the password, and of the plant's list of users."""
+    secrets = [folder / "pki" / "autotune-key.pem", *folder.glob("soft-plant-*.txt")]
+    return [stat.S_IMODE(path.stat().st_mode) for path in secrets]
