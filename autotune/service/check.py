@@ -58,7 +58,8 @@ async def check_loop(loop: LoopConfig, link: LoopLink, open_link: OpenLink, look
     except LinkError as fault:
         unreached = ReadinessFinding(Level.STOP, "LINK", str(fault), "see LINK in the list of codes")
         return LoopCheck(loop, (unreached,), None, None, None, None)
-    trips = [sample.t_s - sample.taken.earliest_s - (loop.controller.plc_scan_s or 0.0) for sample in samples]
+    before_s = (loop.controller.plc_scan_s or 0.0) + loop.controller.io_time_s  # PV may be so much older
+    trips = [sample.t_s - sample.taken.earliest_s - before_s for sample in samples]
     findings = (*told, *judge_samples(loop, samples))
     return LoopCheck(loop, findings, samples[-1], settings, median(trips), _refresh_s(samples))
 

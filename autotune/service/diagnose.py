@@ -1,7 +1,8 @@
 """Naming a wrong address, word order or register, by reading the neighbours and writing nothing.
 
-When a signal as configured holds no plausible number but exactly one near variant does, that
-variant is most likely what the file should say.
+When a signal as configured holds no plausible number but a near variant does, that variant is most likely what the
+file should say.  Where several do, all are named: the first word alone makes a float plausible, so a neighbour's word
+beside it can look as good as its own.
 """
 
 from collections.abc import Callable
@@ -74,12 +75,13 @@ async def implausible_signals(loop: LoopConfig, link: LoopLink, open_link: OpenL
 
 
 def _misread_finding(name: str, span: Span, seen: str, fits: list[_Variant]) -> ReadinessFinding:
-    if len(fits) == 1:
+    if fits:
         return ReadinessFinding(
             Level.STOP,
             "TAG_MISREAD",
-            f"{name.upper()} reads {seen}, which can't be; read with {fits[0].change} it is plausible",
-            fits[0].remedy.format(name=name),
+            f"{name.upper()} reads {seen}, which can't be; read with {' or with '.join(one.change for one in fits)} "
+            "it is plausible",
+            "; or ".join(one.remedy.format(name=name) for one in fits),
         )
     return ReadinessFinding(
         Level.STOP,

@@ -127,7 +127,8 @@ def _judge_action(loop: LoopConfig, samples: Sequence[Sample]) -> tuple[Readines
     correlation, pairs = action_correlation(samples)
     if samples[-1].mode is not LoopMode.AUTO:
         return ()
-    # |r| of unrelated changes exceeds 4/sqrt(n) about once in 16 000 looks (normal approximation)
+    # By chance |r| exceeds 4/sqrt(n) once in 16 000 looks at most where changes are independent from scan to scan, and
+    # once in 900 where they are those of two white noises: correlated by -1/2, they widen r by sqrt(1.5) (Bartlett).
     if pairs < 10 or abs(correlation) < 4.0 / sqrt(pairs):
         return (
             ReadinessFinding(
