@@ -5,13 +5,18 @@ from pathlib import Path
 
 from autotune.config.load import load
 from autotune.config.types import LoopConfig
+from autotune.identify.findings import FindingsOrRefusal
+from autotune.loop.outcome import Refusal
+from autotune.loop.record import Record
 from autotune.service.clock import utc_now
-from autotune.service.estimator import Estimator, InlineEstimator
+from autotune.service.estimator import Estimator
 from autotune.service.persons import person_at_the_terminal
 from autotune.service.testing import Permission
 from autotune.service.workplace import Workplace, open_workplace
+from simulator.rig import find_rig
 from tests.system.plant import LOOP
 
+RIG = "fast-loop"
 BENCH = Path(__file__).with_name("bench.toml")
 
 Change = tuple[str, str]
@@ -46,6 +51,19 @@ WITHOUT_GUARD: Sequence[Change] = (
 )
 
 
+class NotMeasured:
+    """Identifies nothing: for tests that are about the loop and not about its findings.
+
+    Identification in this process would hold up the scans of every test beside this one.
+    """
+
+    async def measure(self, record: Record) -> FindingsOrRefusal:
+        """No findings, with the reason."""
+        return Refusal(
+            "NOT_MEASURED", f"{len(record.samples)} samples were not to be identified", "choose another estimator"
+        )
+
+
 def write_bench(folder: Path, port: int, changes: Sequence[Change] = ()) -> Path:
     """The bench's configuration in ``folder``, for the plant at ``port``."""
     text = BENCH.read_text("utf-8")
@@ -58,12 +76,26 @@ def write_bench(folder: Path, port: int, changes: Sequence[Change] = ()) -> Path
     return file
 
 
+def rig_with(folder: Path, changes: Sequence[Change]) -> str | Path:
+    """The fast loop's rig, or a file in ``folder`` with changes in it."""
+    if not changes:
+        return RIG
+    text = find_rig(RIG).read_text("utf-8")
+    for old, new in changes:
+        assert text.count(old) == 1, f"{old!r} stands {text.count(old)} times in {RIG}"
+        text = text.replace(old, new)
+    folder.mkdir(parents=True, exist_ok=True)
+    file = folder / "changed-loop.toml"
+    file.write_text(text, "utf-8")
+    return file
+
+
 def bench_workplace(
     folder: Path, port: int, changes: Sequence[Change] = (), estimator: Estimator | None = None
 ) -> tuple[Workplace, LoopConfig]:
-    """A workplace in this process; it identifies in place by default, since most of its tests are cut short."""
+    """A workplace in this process; without an ``estimator`` its tests end without findings."""
     kept = open_workplace(load(write_bench(folder, port, changes)), may_create=True)
-    workplace = Workplace(kept.configuration, kept.store, estimator=estimator or InlineEstimator())
+    workplace = Workplace(kept.configuration, kept.store, estimator=estimator or NotMeasured())
     return workplace, workplace.loop(LOOP)
 
 

@@ -4,8 +4,6 @@ import pytest
 
 from tests.system.together import Scenario, Together, run_together
 
-_LONGEST_FIRST = ("test_whole_job", "test_at_the_terminal", "test_own_death")
-
 
 @pytest.fixture(scope="session")
 def together(request: pytest.FixtureRequest, tmp_path_factory: pytest.TempPathFactory) -> Together:
@@ -17,5 +15,4 @@ def together(request: pytest.FixtureRequest, tmp_path_factory: pytest.TempPathFa
         name = str(item.callspec.params.get("name")) if hasattr(item, "callspec") else ""
         for chosen in [name] if name in scenarios else scenarios:
             wanted[item.path.stem, chosen] = scenarios[chosen]
-    ordered = sorted(wanted, key=lambda key: key[0] not in _LONGEST_FIRST)
-    return run_together({key: wanted[key] for key in ordered}, tmp_path_factory.mktemp("together"))
+    return run_together(wanted, tmp_path_factory.mktemp("together"))

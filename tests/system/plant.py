@@ -12,7 +12,7 @@ from typing import Any
 
 ROOT = Path(__file__).parents[2]
 LOOP = "TIC-1"
-PATIENCE_S = 30.0
+PATIENCE_S = 90.0
 _SCAN_S = 0.02
 
 State = dict[str, Any]

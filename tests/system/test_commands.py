@@ -1,15 +1,17 @@
 """Every command tells what it does, and says in one line what is wrong with what it was given."""
 
-import socket
 from collections.abc import Iterator, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 from pathlib import Path
 
 import pytest
 import typer
 from typer.testing import CliRunner
 
+from autotune.cli import exit_code_of
 from autotune.cli.app import app
+from autotune.cli.exit_codes import ExitCode
+from autotune.errors import AutotuneError
 from tests.system.bench import Change, write_bench
 from tests.system.command import Ran, run
 from tests.system.plant import LOOP
@@ -51,67 +53,77 @@ class Wrong:
     """What is typed, what is wrong in the file, and how the complaint reads."""
 
     arguments: Sequence[str]
-    code: int
+    code: ExitCode
     words: Sequence[str]
     changes: Sequence[Change] = ()
-    lines: int = 1
-    port: int | None = field(default=None)
 
 
 SWAPPED: Sequence[Change] = (("pv_low_eu = 0.0\npv_high_eu = 100.0", "pv_low_eu = 100.0\npv_high_eu = 0.0"),)
+NOWHERE = 1
+"""A port on which no controller answers."""
 
 WRONG = {
-    "a file that is not there": Wrong(("check", "no-such.toml"), 2, ("no-such.toml",)),
-    "a swapped span": Wrong(
-        ("check", "FILE", LOOP), 2, ("bench.toml", "span.pv_low_eu", "is not below", "swap"), SWAPPED
-    ),
+    "a file that is not there": Wrong(("check", "no-such.toml"), ExitCode.USAGE, ("no-such.toml",)),
     "an unknown key": Wrong(
         ("test", "FILE", LOOP),
-        2,
-        ("bench.toml", "loop[TIC-1].hand_back_withn_s", "did you mean hand_back_within_s"),
+        ExitCode.USAGE,
+        ("bench.toml", "loop[TIC-1].hand_back_withn_s", "unknown key", "hand_back_within_s"),
         (("hand_back_within_s", "hand_back_withn_s"),),
     ),
-    "an unknown loop": Wrong(("test", "FILE", "TIC-9"), 2, ("no loop is called 'TIC-9'", "use one of TIC-1")),
-    "no sheet yet": Wrong(("propose", "FILE", "last"), 2, ("sheets",)),
-    "a word that is no command": Wrong(("tset",), 2, ("No such command 'tset'",), lines=0),
-    "a controller that is not there": Wrong(
-        ("check", "FILE", LOOP, "--json"), 3, ('"code":"LINK"', "127.0.0.1"), lines=0
+    "an unknown loop": Wrong(
+        ("test", "FILE", "TIC-9"), ExitCode.USAGE, ("no loop is called 'TIC-9'", "use one of TIC-1")
     ),
-    "a test without its controller": Wrong(
-        ("test", "FILE", LOOP), 3, ("LINK", "The test was refused; nothing was written"), lines=0
-    ),
+    "no sheet yet": Wrong(("propose", "FILE", "last"), ExitCode.USAGE, ("sheets.sqlite",)),
+    "a word that is no command": Wrong(("tset",), ExitCode.USAGE, ("No such command 'tset'",)),
 }
 
 
-def unused_port() -> int:
-    with socket.create_server(("127.0.0.1", 0)) as taken:
-        port: int = taken.getsockname()[1]
-    return port
+@pytest.mark.parametrize("wrong", WRONG.values(), ids=WRONG)
+def test_what_is_wrong_with_the_given_is_said_with_its_exit_code(wrong: Wrong, tmp_path: Path) -> None:
+    file = write_bench(tmp_path, NOWHERE, wrong.changes)
+    ended = CliRunner().invoke(app, [str(file) if word == "FILE" else word for word in wrong.arguments])
+    fault = ended.exception
+    code = exit_code_of(fault) if isinstance(fault, AutotuneError) else ended.exit_code
+    said = str(fault) if isinstance(fault, AutotuneError) else ended.output
+    assert code == wrong.code
+    for words in wrong.words:
+        assert words in said
 
 
-def _scenario(wrong: Wrong) -> Scenario[Ran]:
-    async def ran(folder: Path) -> Ran:
-        file = write_bench(folder, unused_port(), wrong.changes)
-        return await run(*(file if word == "FILE" else word for word in wrong.arguments))
+@dataclass(frozen=True, slots=True)
+class Trial:
+    """A mistake in the file and a controller that is not there, as whole commands."""
 
-    return ran
+    swapped: Ran
+    checked: Ran
 
 
-SCENARIOS = {name: _scenario(wrong) for name, wrong in WRONG.items()}
+async def commands_tried(folder: Path) -> Trial:
+    swapped = await run("check", write_bench(folder / "swapped", NOWHERE, SWAPPED))
+    checked = await run("check", write_bench(folder / "nowhere", NOWHERE), "--json")
+    return Trial(swapped, checked)
+
+
+SCENARIOS: dict[str, Scenario[Trial]] = {"commands": commands_tried}
 
 
 @pytest.fixture(scope="module")
-def ended(together: Together) -> Outcomes[Ran]:
-    return together.of(Path(__file__).stem, SCENARIOS)
+def trial(together: Together) -> Trial:
+    outcomes: Outcomes[Trial] = together.of(Path(__file__).stem, SCENARIOS)
+    return outcomes.of("commands")
 
 
-@pytest.mark.parametrize("name", WRONG)
-def test_what_is_wrong_is_said_with_its_exit_code_and_without_a_traceback(ended: Outcomes[Ran], name: str) -> None:
-    ran, wrong = ended.of(name), WRONG[name]
-    assert ran.code == wrong.code
-    said = ran.out + ran.err
-    assert "Traceback" not in said
-    for words in wrong.words:
-        assert words in said
-    if wrong.lines:
-        assert len(ran.err.splitlines()) == wrong.lines
+def test_a_mistake_in_the_file_is_one_line_with_file_key_and_remedy(trial: Trial) -> None:
+    assert trial.swapped.code == 2
+    assert trial.swapped.out == ""
+    (line,) = trial.swapped.err.splitlines()
+    for words in ("bench.toml", "loop[TIC-1].span.pv_low_eu", "is not below", "swap"):
+        assert words in line
+
+
+def test_a_controller_that_is_not_there_is_exit_code_three_and_no_traceback(trial: Trial) -> None:
+    assert trial.checked.code == 3
+    (loop,) = trial.checked.answer["loops"]
+    assert [finding["code"] for finding in loop["findings"]] == ["LINK"]
+    assert "127.0.0.1" in loop["findings"][0]["text"]
+    assert "Traceback" not in trial.checked.err

@@ -14,19 +14,21 @@ from autotune.experiment.state import Stage
 from autotune.service.journal_intents import open_intents
 from autotune.service.runner import TestRunner
 from autotune.service.testing import SupervisedTest, TestEnd
-from tests.system.bench import bench_workplace, permission
+from tests.system.bench import Change, bench_workplace, permission, rig_with
 from tests.system.plant import LOOP, PATIENCE_S, SoftPlant, State, moved, soft_plant
 from tests.system.together import Outcomes, Scenario, Together
 
 pytestmark = pytest.mark.socket
 
-QUICK = (("look_around_s = 0.6", "look_around_s = 0.3"), ("hold_s = 1.2", "hold_s = 0.6"))
-UNHURRIED = (
-    QUICK[0],
+QUICK: tuple[Change, ...] = (
+    ("look_around_s = 0.6", "look_around_s = 0.3"),
     ("hold_s = 1.2", "hold_s = 0.8"),
-    ("scan_s = 0.05\nwrite", "scan_s = 0.2\nwrite"),
-)  # between two steps of a hand-back
-SCANS_AFTER = 75  # longer than the guard waits for a heartbeat
+    ("scan_s = 0.05\nwrite", "scan_s = 0.1\nwrite"),
+    ("timeout_s = 1.0", "timeout_s = 2.0"),
+)
+UNHURRIED = (*QUICK[:2], ("scan_s = 0.05\nwrite", "scan_s = 0.2\nwrite"), QUICK[3])  # between two steps of a hand-back
+PATIENT_GUARD: tuple[Change, ...] = (("timeout_s = 1.0", "timeout_s = 2.0"),)
+SCANS_AFTER = 20
 
 
 @dataclass(frozen=True, slots=True)
@@ -104,6 +106,10 @@ MOMENTS: dict[str, Moment] = {
 }
 
 
+def has_given_back(state: State) -> bool:
+    return bool(state["guard_state"] == "gave back")
+
+
 async def kill(plant: SoftPlant, _: TestRunner) -> None:
     await plant.kill()
 
@@ -118,17 +124,19 @@ async def freeze_for_good(plant: SoftPlant, runner: TestRunner) -> None:
     plant.freeze()
     await comes(lambda: runner.experiment.phase.is_terminal)
     plant.thaw()
+    await plant.until(has_given_back)
 
 
 async def lose_answers_until_the_guard_gave_back(plant: SoftPlant, _: TestRunner) -> None:
     await plant.press("fault drop-answers")
-    await plant.until(lambda state: state["guard_state"] == "gave back")
+    await plant.until(has_given_back)
     await plant.press("clear-faults")
 
 
 async def lose_all_requests(plant: SoftPlant, runner: TestRunner) -> None:
     await plant.press("fault drop-requests")
     await comes(lambda: runner.experiment.phase.is_terminal)
+    await plant.until(has_given_back)
     await plant.press("clear-faults")
 
 
@@ -166,7 +174,7 @@ STRIKES: dict[str, Strike] = {
 
 
 async def happens(folder: Path, moment: Moment, strike: Strike) -> Story:
-    async with soft_plant() as plant:
+    async with soft_plant(rig_with(folder, PATIENT_GUARD)) as plant:
         changes = UNHURRIED if moment is is_giving_back else QUICK
         workplace, loop = bench_workplace(folder, plant.port, changes)
         await plant.press(f"enable {LOOP}")

@@ -53,7 +53,7 @@ async def killed_with_a_guard(folder: Path) -> Story:
         running.send(signal.SIGKILL)
         ran = await running.ended()
         await plant.until(lambda state: state["guard_state"] == "gave back")
-        later = [await run("restore", file, LOOP, "--json"), await run("restore", file, LOOP)]
+        later = [await run("restore", file, LOOP, "--json")]
         return Story(found, struck, await plant.state(), ran, later)
 
 
@@ -75,7 +75,7 @@ async def killed_too_long_ago(folder: Path) -> Story:
         running.send(signal.SIGKILL)
         ran = await running.ended()
         struck = await plant.scan_on(5)
-        later = [await run("restore", file, LOOP), await run("test", file, LOOP, typed=YES)]
+        later = [await run("test", file, LOOP, typed=YES)]
         left = await plant.state()
         await plant.press(f"op {LOOP} {found['op']}")
         await plant.press(f"mode {LOOP} AUTO")
@@ -113,7 +113,6 @@ SCENARIOS: dict[str, Scenario[Story]] = {
     "paused": paused,
     "SIGTERM": lambda folder: signalled(folder, signal.SIGTERM),
     "SIGINT": lambda folder: signalled(folder, signal.SIGINT),
-    "SIGHUP": lambda folder: signalled(folder, signal.SIGHUP),
 }
 
 
@@ -127,7 +126,7 @@ def is_as_found(story: Story) -> bool:
     return same and abs(story.left["op"] - story.found["op"]) < 15.0
 
 
-@pytest.mark.parametrize("name", ["SIGTERM", "SIGINT", "SIGHUP"])
+@pytest.mark.parametrize("name", ["SIGTERM", "SIGINT"])
 def test_a_signal_to_end_hands_the_loop_back_first(stories: Outcomes[Story], name: str) -> None:
     story = stories.of(name)
     assert story.ran.code == 1
@@ -143,16 +142,13 @@ def test_after_a_kill_the_guard_gives_back_and_the_next_command_verifies_that(
 ) -> None:
     story = stories.of(name)
     assert story.ran.code == -signal.SIGKILL
-    first, second = story.later
+    (first,) = story.later
     assert first.code == 0
     assert "broke off. Reading TIC-1 before anything else" in first.err
     assert "TIC-1: guard gave back; as found" in first.err
     assert first.answer["outcome"] == "NOTHING_TO_WRITE"
     assert is_as_found(story)
     assert story.left["op_effect_count"] == story.struck["op_effect_count"]
-    assert "broke off" not in second.out
-    assert second.code == 2
-    assert "no sheet of TIC-1" in second.err
 
 
 @pytest.mark.parametrize("name", ["killed without a guard"])
@@ -171,13 +167,12 @@ def test_what_broke_off_too_long_ago_is_stranded_with_as_found_beside_present(
     stories: Outcomes[Story], name: str
 ) -> None:
     story = stories.of(name)
-    restored, tested, after = story.later
-    for ran in (restored, tested):
-        assert ran.code == 4
-        assert "longer ago than recover_within_s" in ran.out
-        assert f"present: output {story.struck['op']:.2f} %, setpoint 50.00 %, mode MAN" in ran.out
-        assert f"as found: output {story.found['op']:.1f}" in ran.out
-        assert "STRANDED. GO TO THE PANEL NOW" in ran.out
+    tested, after = story.later
+    assert tested.code == 4
+    assert "longer ago than recover_within_s" in tested.out
+    assert f"present: output {story.struck['op']:.2f} %, setpoint 50.00 %, mode MAN" in tested.out
+    assert f"as found: output {story.found['op']:.1f}" in tested.out
+    assert "STRANDED. GO TO THE PANEL NOW" in tested.out
     assert moved(story.struck, story.left) == {}
     assert story.left["op"] == story.struck["op"]
     assert after.code == 0

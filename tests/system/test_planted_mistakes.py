@@ -18,8 +18,7 @@ from autotune.cli.test import test as perform_test
 from autotune.errors import LoopBusy
 from autotune.service.testing import SupervisedTest
 from autotune.service.workplace import Workplace
-from simulator.rig import find_rig
-from tests.system.bench import Change, bench_workplace, permission
+from tests.system.bench import Change, bench_workplace, permission, rig_with
 from tests.system.plant import LOOP, State, as_real, moved, soft_plant
 from tests.system.together import Outcomes, Scenario, Together
 
@@ -155,19 +154,6 @@ async def told(workplace: Workplace, operator: SaysYes) -> tuple[ExitCode, str]:
     voice.console.width = 400
     code = await perform_test(voice, workplace, workplace.loop(LOOP), operator)
     return code, voice.console.file.getvalue()
-
-
-def rig_with(folder: Path, changes: Sequence[Change]) -> str | Path:
-    if not changes:
-        return "fast-loop"
-    text = find_rig("fast-loop").read_text("utf-8")
-    for old, new in changes:
-        assert text.count(old) == 1
-        text = text.replace(old, new)
-    folder.mkdir(parents=True)
-    file = folder / "changed-loop.toml"
-    file.write_text(text, "utf-8")
-    return file
 
 
 async def tried(folder: Path, mistake: Mistake) -> Named:
