@@ -12,7 +12,7 @@ from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 
-from tests.faults.evidence import SETTINGS, End, Evidence, Verdict, judge, pv_beyond_pct, seconds_to_safe
+from tests.faults.evidence import SETTINGS, End, Evidence, State, Verdict, judge, pv_beyond_pct, seconds_to_safe
 from tests.faults.moments import Moment, reach
 from tests.faults.nursery import Nursery, Tool
 from tests.faults.pair import Pair, network, pair, why_no_networks, why_no_small_disk
@@ -213,7 +213,7 @@ async def _strike_once(bench: Pair, run: Run, sheets: Path) -> Outcome | None:
         tool = await bench.start("test", typed="")
         code, word = await _ended(tool), f"after a restart {_settled_word(tool)}"
         said += tool.said
-    left = None if bench.is_plant_gone else await _settled(bench, found, wanted)
+    left = bench.seen_last or await _settled(bench, found)
     evidence = Evidence(
         found=found,
         left=left,
@@ -274,7 +274,7 @@ def _settled_word(tool: Tool) -> str:
     return next((word for word in _WORDS if f"{LOOP}: {word};" in tool.said), _word(tool))
 
 
-async def _settled(bench: Pair, found: Any, wanted: Any) -> Any:
+async def _settled(bench: Pair, found: State) -> State:
     """The panel once nothing of ours is under way any more: as found, or after a while as it is."""
     until_s = asyncio.get_running_loop().time() + SETTLED_WITHIN_S
     while asyncio.get_running_loop().time() < until_s:

@@ -41,14 +41,14 @@ class End(Enum):
 class Evidence:
     """One run after its end.
 
-    ``found`` and ``left`` are the panel before the tool came and after all had ended (``None``: the plant is gone);
+    ``found`` and ``left`` are the panel before the tool came and after all had ended, or before the plant was gone;
     ``taken`` what somebody else set, by tag; ``wanted`` the settings to be written, ``None`` in a test.
     ``struck_s`` is when it happened.  ``word`` and ``exit_code`` are the tool's last ones, after a restart those of
     the restarted one; ``said`` is all that it told.
     """
 
     found: State
-    left: State | None
+    left: State
     taken: Mapping[str, Any]
     wanted: Mapping[str, float] | None
     struck_s: float
@@ -94,8 +94,6 @@ def end_of(evidence: Evidence) -> End:
     already gone or its last write was on its way, it can't be asked to respect.
     """
     left, taken = evidence.left, evidence.taken
-    if left is None:
-        return End.RESTORED if not evidence.writes else _told(evidence)
     found = {name: evidence.found[name] for name in ("mode", "sp", "op", *SETTINGS)}
     is_unseen = bool(taken) and lost_at_s(evidence) is None
     kept = found | {name: tag for name, tag in taken.items() if not _is_loss(evidence, name)}

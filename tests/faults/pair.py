@@ -39,6 +39,7 @@ class Pair:
         self.taken: dict[str, Any] = {}
         self.tool: Tool | None = None
         self.is_plant_gone = False
+        self.seen_last: State | None = None
         self.network = network
         self._nursery = nursery
         self._config = config
@@ -90,7 +91,8 @@ class Pair:
                 await asyncio.sleep(LOOK_EVERY_S)
 
     async def kill_plant(self) -> None:
-        """The PLC is gone for good."""
+        """The PLC is gone for good, and its loop stays as the panel showed it last."""
+        self.seen_last = await self.look()
         self.is_plant_gone = True
         await self.plant.kill()
 

@@ -48,13 +48,6 @@ def test_an_output_left_in_manual_counts_where_manual_was_found() -> None:
     assert judge(replace(manual, left=left(mode="MAN", op=46.0))).end is End.SILENT
 
 
-def test_a_plant_that_is_gone_is_as_found_only_where_nothing_was_written() -> None:
-    gone = replace(TEST, left=None)
-    assert judge(gone).end is End.SILENT
-    assert judge(replace(gone, exit_code=4, said=LOUD)).end is End.STRANDED
-    assert judge(replace(gone, writes=())).end is End.RESTORED
-
-
 def test_a_loop_with_somebody_else_is_released_only_where_that_was_said_or_could_not_be_seen() -> None:
     taken = {"op": 33.0, "mode": "MAN"}
     theirs = replace(TEST, taken=taken, left=left(**taken), word="RELEASED")
