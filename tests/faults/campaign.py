@@ -150,7 +150,9 @@ async def campaign(runs: Sequence[Run], pairs: int, tell: Tell = lambda _: None)
                         for line in described(outcome):
                             tell(f"   DEFECT {line}")
 
-                await asyncio.gather(*(work(number) for number in range(pairs)))
+                async with asyncio.TaskGroup() as together:
+                    for number in range(pairs):
+                        together.create_task(work(number), name=f"pair {number}")
         finally:
             await nursery.close()
     return tally

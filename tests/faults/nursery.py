@@ -70,6 +70,9 @@ class Nursery:
                 self._started.put_nowait(told["started"])
             else:
                 self._ends[told["ended"]].set_result(told["code"])
+        for end in self._ends.values():
+            if not end.done():
+                end.set_result(-signal.SIGKILL)  # with the nursery gone nobody tells how it ended
 
 
 class Tool:

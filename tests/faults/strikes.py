@@ -204,8 +204,10 @@ async def fill_disk(pair: Pair, _: random.Random) -> None:
 async def lock_journal(pair: Pair, _: random.Random) -> None:
     """From now on no file of the tool can grow any more, as on a disk that has gone read-only."""
     assert pair.tool is not None
-    sizes = [file.stat().st_size for file in (pair.data_dir / "journals").glob("*.jsonl")]
-    resource.prlimit(pair.tool.pid, resource.RLIMIT_FSIZE, (max(sizes, default=0), resource.RLIM_INFINITY))
+    journals = [file.stat() for file in (pair.data_dir / "journals").glob("*.jsonl")]
+    newest = max(journals, key=lambda file: file.st_mtime_ns, default=None)
+    size_bytes = 0 if newest is None else newest.st_size
+    resource.prlimit(pair.tool.pid, resource.RLIMIT_FSIZE, (size_bytes, resource.RLIM_INFINITY))
 
 
 async def step_clock(pair: Pair, rng: random.Random) -> None:
