@@ -5,22 +5,28 @@ import re
 from collections.abc import AsyncIterator, Iterator
 from dataclasses import replace
 from datetime import UTC, datetime, timedelta
+from pathlib import Path
 from typing import Any
 
 import pytest
 from asyncua import ua
 from asyncua.ua.status_codes import StatusCodes
+from cryptography import x509
+from cryptography.hazmat.primitives.serialization import Encoding
 
-from autotune.config.types import DataType, LoopConfig, OpcUaEndpoint, OpcUaTag, Tag
+from autotune.config.types import DataType, LoopConfig, MessageSecurity, OpcUaEndpoint, OpcUaTag, Tag
 from autotune.errors import LinkClosed, LinkError, LinkTimeout, WriteForbidden
 from autotune.experiment.commands import DriveOutput
 from autotune.field import open_link
 from autotune.field.facts import TellsFacts
 from autotune.field.link import RawValue
-from autotune.field.opc_ua.link import split_writes
+from autotune.field.opc_ua.certificates import own_certificate
+from autotune.field.opc_ua.opening import is_readable_by_others
+from autotune.field.opc_ua.writing import judge_write, split_writes
 from autotune.field.translate import sample_tags, to_raw, to_sample
 from autotune.loop.quality import Quality
 from autotune.loop.write import WriteOutcome
+from tests.field.certificates import certificate
 from tests.field.link_conformance import PROMPT_S, Trouble, TroubledLinkConformance, is_connected
 from tests.field.loops import GUARDED, with_tags
 from tests.field.ua_plant import NAMESPACE, UaPlant, Wire, in_the_plant, node_text
@@ -271,6 +277,33 @@ class TestOpcUaLink(TroubledLinkConformance):
         assert bench.held("sp") == 50.0
         await link.close()
 
+    async def test_a_password_is_never_sent_without_security(
+        self, bench: UaBench, monkeypatch: pytest.MonkeyPatch
+    ) -> None:
+        monkeypatch.setenv("AUTOTUNE_TEST_PASSWORD", "juice 4!")
+        link = open_link(with_endpoint(bench.loop, user="technician", password_from="env:AUTOTUNE_TEST_PASSWORD"))
+        with pytest.raises(LinkClosed, match="sent so that others can read it"):
+            await link.connect()
+        assert b"technician" not in bench.wire.octets_up
+        assert b"juice 4!" not in bench.wire.octets_up
+
+    async def test_a_server_that_does_not_offer_what_the_file_wants_is_told_by_what_it_offers(
+        self, bench: UaBench, tmp_path: Path
+    ) -> None:
+        wanted = with_endpoint(bench.loop, security=MessageSecurity.SIGN_AND_ENCRYPT, pki_dir=tmp_path)
+        with pytest.raises(LinkClosed, match=r"does not offer Basic256Sha256 with sign and encrypt; it offers: none;"):
+            await open_link(wanted).connect()
+
+    async def test_an_expired_certificate_of_our_own_is_not_shown_to_anybody(
+        self, bench: UaBench, tmp_path: Path
+    ) -> None:
+        own = own_certificate(tmp_path)
+        own.path.write_bytes(expired_certificate().public_bytes(Encoding.DER))
+        secured = with_endpoint(bench.loop, security=MessageSecurity.SIGN_AND_ENCRYPT, pki_dir=tmp_path)
+        with pytest.raises(LinkClosed, match=r"our own certificate .* can't be used: it expired on .*move it"):
+            await open_link(secured).connect()
+        assert bench.wire.octets_up == b""
+
     async def test_a_closed_link_gives_its_session_back(self, bench: UaBench) -> None:
         await bench.link.connect()
         await bench.link.close()
@@ -312,6 +345,32 @@ async def test_writes_are_split_so_that_the_order_of_what_matters_is_ours() -> N
     assert split_writes([]) == []
 
 
+def test_an_answer_that_is_too_short_says_nothing_about_the_rest() -> None:
+    outcome, detail = judge_write("opc.tcp://x", {"sp": "ns=2;s=sp", "gain": "ns=2;s=gain"}, [0], [])
+    assert outcome is WriteOutcome.NOT_HEARD
+    assert detail == "opc.tcp://x answered 1 of 2 writes"
+
+
+@pytest.mark.parametrize(
+    ("security", "token_policy", "readable"),
+    [
+        (MessageSecurity.SIGN_AND_ENCRYPT, "None", False),
+        (MessageSecurity.SIGN_AND_ENCRYPT, "Basic256Sha256", False),
+        (MessageSecurity.SIGN, "Basic256Sha256", False),
+        (MessageSecurity.SIGN, "None", True),
+        (MessageSecurity.SIGN, "", True),
+        (MessageSecurity.NONE, "Basic256Sha256", True),  # to a server that nobody has seen the certificate of
+        (MessageSecurity.NONE, "None", True),
+    ],
+)
+def test_a_password_goes_out_only_where_nobody_else_can_read_it(
+    security: MessageSecurity, token_policy: str, readable: bool
+) -> None:
+    # OPC 10000-4, 7.41.4: with the policy None the password is sent as it is; OPC 10000-7: the policies' URIs
+    uri = f"http://opcfoundation.org/UA/SecurityPolicy#{token_policy}" if token_policy else None
+    assert is_readable_by_others(security, uri) is readable
+
+
 async def test_nobody_at_the_address_is_a_closed_link() -> None:
     link = open_link(in_the_plant(GUARDED, "opc.tcp://127.0.0.1:9/nobody"))
     with pytest.raises(LinkClosed, match=r"opc\.tcp://127\.0\.0\.1:9/nobody: .*check the address"):
@@ -345,6 +404,10 @@ async def test_what_speaks_another_protocol_is_a_closed_link() -> None:
 def in_status(number: float, code: int) -> ua.DataValue:
     """A single with a status."""
     return ua.DataValue(ua.Variant(number, ua.VariantType.Float), ua.StatusCode(ua.UInt32(code)))
+
+
+def expired_certificate() -> x509.Certificate:
+    return certificate(ends=datetime.now(UTC) - timedelta(days=1))
 
 
 def taken_at(instant: datetime) -> ua.DataValue:

@@ -8,7 +8,7 @@ import re
 import socket
 from collections.abc import Iterator
 from dataclasses import dataclass
-from datetime import datetime, timedelta
+from datetime import datetime
 from pathlib import Path
 
 from asyncua.crypto.cert_gen import (
@@ -22,9 +22,6 @@ from cryptography.hazmat.primitives.serialization import Encoding
 from cryptography.x509.oid import ExtendedKeyUsageOID
 
 from autotune.errors import LinkClosed
-
-EXPIRES_SOON = timedelta(days=60)
-"""So long before its end a certificate is worth a word."""
 
 _CERTIFICATE, _KEY = "autotune-certificate.der", "autotune-key.pem"
 _VALID_DAYS = 5 * 365

@@ -22,15 +22,13 @@ from autotune.field.opc_ua.describe import describe
 from autotune.field.opc_ua.nodes import FoundNode, find_nodes
 from autotune.field.opc_ua.opening import Opening
 from autotune.field.opc_ua.session import ServerRefused, Session
-from autotune.field.opc_ua.status import in_words, is_surely_undone, is_written
+from autotune.field.opc_ua.status import is_surely_undone
 from autotune.field.opc_ua.variants import held_type_of, to_answer, to_reading
+from autotune.field.opc_ua.writing import judge_write, split_writes
 from autotune.field.write_list import WriteList
 from autotune.loop.quality import Quality
 from autotune.loop.sample import Stamp
 from autotune.loop.write import WriteOutcome, WriteReport
-
-_TOGETHER = ("holder_request", "heartbeat", "op_request")
-"""Tags that may share a request: in which order a server carries out one request is its own affair."""
 
 
 class OpcUaLink:
@@ -257,37 +255,8 @@ class OpcUaLink:
             sent = Stamp(begun_s, loop.time())
             return WriteOutcome.NOT_HEARD, f"{fault} (writing {', '.join(part)}){before}", sent
         self._back_off.answered()
-        return *self._judge(list(part), [code.value for code in codes], applied), sent
-
-    def _judge(self, names: Sequence[str], codes: Sequence[int], applied: Sequence[str]) -> tuple[WriteOutcome, str]:
-        """The outcome of one request from the status of each node in it."""
-        if len(codes) != len(names):
-            return WriteOutcome.NOT_HEARD, f"{self._endpoint.url} answered {len(codes)} of {len(names)} writes"
-        unwritten = {name: code for name, code in zip(names, codes, strict=True) if not is_written(code)}
-        if not unwritten:
-            return WriteOutcome.APPLIED, ""
-        done = [*applied, *(name for name in names if name not in unwritten)]
-        detail = f"{self._endpoint.url} answered " + "; ".join(
-            f"{name} ({self._nodes[name].name}): {in_words(code)}" for name, code in unwritten.items()
-        )
-        if done:
-            detail += f"; {', '.join(done)} had been applied"
-        is_refused = not done and all(is_surely_undone(code) for code in unwritten.values())
-        return WriteOutcome.REFUSED if is_refused else WriteOutcome.NOT_HEARD, detail
-
-
-def split_writes(names: Sequence[str]) -> list[list[str]]:
-    """The requests of a write, in order: one tag each, but the parts of an output move go together.
-
-    The sequence number is never among those: it says that the rest is there, so it goes after the rest.
-    """
-    parts: list[list[str]] = []
-    for name in names:
-        if parts and name in _TOGETHER and parts[-1][-1] in _TOGETHER:
-            parts[-1].append(name)
-        else:
-            parts.append([name])
-    return parts
+        where = {name: self._nodes[name].name for name in part}
+        return *judge_write(self._endpoint.url, where, [code.value for code in codes], applied), sent
 
 
 def _told(fault: LinkError, doing: str) -> LinkError:

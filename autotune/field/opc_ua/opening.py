@@ -89,6 +89,12 @@ class Opening:
         session = Session(client, endpoint)
         try:
             await session.open_channel()
+            await session.create()
+            if person.user is not None and is_readable_by_others(endpoint.security, _token_policy(client)):
+                raise LinkClosed(
+                    f"{endpoint.url} would have the password of {person.user!r} sent so that others can read it; "
+                    'write security = "sign and encrypt", or have the server changed'
+                )
             await session.activate(person.user, person.password, person.certificate)
         except LinkError as fault:
             session.drop()
@@ -163,6 +169,17 @@ class Opening:
                 f"with the SHA-256 thumbprint {own.thumbprint}"
             )
         return ""
+
+
+def is_readable_by_others(security: MessageSecurity, token_policy_uri: str | None) -> bool:
+    """Whether a password would cross the wire unencrypted: neither as a message nor by itself."""
+    is_bare = not token_policy_uri or token_policy_uri == security_policies.SecurityPolicyNone.URI
+    return security is MessageSecurity.NONE or (is_bare and security is not MessageSecurity.SIGN_AND_ENCRYPT)
+
+
+def _token_policy(client: Client) -> str | None:
+    uri: str | None = client.server_policy(ua.UserTokenType.UserName).SecurityPolicyUri
+    return uri
 
 
 async def offered_endpoints(endpoint: OpcUaEndpoint) -> list[ua.EndpointDescription]:

@@ -76,9 +76,12 @@ class Session:
         await self.ask(self._client.send_hello())
         await self._open_secure_channel(is_renewal=False)
 
-    async def activate(self, user: str | None, password: str | None, certificate: Any = None) -> None:
-        """Create and activate a session in the open channel.  Raises ``LinkTimeout`` or ``LinkClosed``."""
+    async def create(self) -> None:
+        """Create a session in the open channel; nobody has said yet who he is.  Raises as ``open_channel``."""
         await self.ask(self._client.create_session())
+
+    async def activate(self, user: str | None, password: str | None, certificate: Any = None) -> None:
+        """Say who we are.  Raises as ``open_channel``."""
         await self.ask(self._client.activate_session(user, password, certificate))
 
     async def ask(self, request: Coroutine[Any, Any, _Answer]) -> _Answer:
