@@ -1,5 +1,6 @@
 """Ends and states in the words that a technician reads."""
 
+from autotune.experiment.hand_back import by_hand
 from autotune.experiment.phases import Phase
 from autotune.experiment.state import EndKind, Experiment
 
@@ -32,5 +33,8 @@ def _what_became(experiment: Experiment) -> str:
             return "Nothing was changed."
         case Phase.ABORTED | Phase.COMPLETE if ended is not None:
             return f"The loop is back: {ended.result.value}; {ended.detail}."
+        case phase if phase.is_touched and experiment.as_found is not None:
+            what = "The test broke off by our own fault. Go to the panel now and compare the loop"
+            return f"{what} with what was found: {by_hand(experiment.as_found)}."
         case _:
             return ""

@@ -52,7 +52,7 @@ def run_together(scenarios: Mapping[tuple[str, str], Scenario[Any]], folder: Pat
     """Run the scenarios, by module and name: first the quiet ones, then no more of a kind at a time than is good."""
     quiet = {key: scenario for key, scenario in scenarios.items() if key[0] in QUIET_MODULES}
     first = {module: place for place, module in enumerate(MODULES_OF_COMMANDS)}
-    others = sorted(scenarios.keys() - quiet.keys(), key=lambda key: first.get(key[0], len(first)))
+    others = sorted((key for key in scenarios if key not in quiet), key=lambda key: first.get(key[0], len(first)))
     ended = asyncio.run(_run(quiet, folder / "quiet"))
     ended |= asyncio.run(_run({key: scenarios[key] for key in others}, folder / "others"))
     return Together(ended)
