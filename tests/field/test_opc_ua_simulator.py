@@ -41,7 +41,7 @@ from autotune.loop.sample import GuardState
 from autotune.loop.settings import BlockFields
 from autotune.loop.write import WriteOutcome
 from tests.field.link_conformance import PROMPT_S, LinkConformance
-from tests.field.test_modbus_simulator import IN_RIG, TIMEOUT_S
+from tests.field.test_modbus_simulator import IN_RIG
 from tests.field.test_modbus_simulator import PlantBench as ModbusBench
 from tests.field.ua_plant import Wire
 
@@ -86,7 +86,7 @@ def secure_plant(tmp_path_factory: pytest.TempPathFactory) -> Iterator[SecurePla
         ready = json.loads(plant.stdout.readline())
         endpoint = OpcUaEndpoint(
             ready["opc_ua_url"],
-            request_timeout_s=TIMEOUT_S,
+            request_timeout_s=PROMPT_S,
             connect_gap_s=0.0,
             server_thumbprint=ready["opc_ua_thumbprint"],
             server_name=socket.gethostname(),
