@@ -6,7 +6,6 @@ The socket's file has mode 0600, and the kernel's word for the peer's user is ch
 
 import asyncio
 import os
-import pwd
 import socket
 import struct
 from collections.abc import AsyncIterator
@@ -130,6 +129,8 @@ def _peer_user_id(writer: asyncio.StreamWriter) -> int:
 
 
 def _user_name(user_id: int) -> str:
+    import pwd  # not on Windows, where the command line has to load all the same
+
     try:
         return pwd.getpwuid(user_id).pw_name
     except KeyError:
