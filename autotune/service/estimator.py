@@ -2,13 +2,19 @@
 
 import asyncio
 import multiprocessing
+import os
 import signal
+from collections.abc import Iterator
 from concurrent.futures import ProcessPoolExecutor
+from contextlib import contextmanager
 from typing import Protocol
 
 from autotune.identify.findings import FindingsOrRefusal
 from autotune.identify.measure import measure
 from autotune.loop.record import Record
+
+
+THREADS_OF_NUMPY = ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS")
 
 
 class Estimator(Protocol):
@@ -28,13 +34,33 @@ class InlineEstimator:
 
 
 class WorkerEstimator:
-    """Identifies in a process of its own that comes and goes with each record."""
+    """Identifies in a process of its own that comes and goes with each record, on one thread.
+
+    The systems solved are small: more threads only wait for each other, and take the processor from the scan.
+    """
 
     async def measure(self, record: Record) -> FindingsOrRefusal:
         """Identify one record; raises what the worker raised."""
         spawn = multiprocessing.get_context("spawn")
         with ProcessPoolExecutor(max_workers=1, mp_context=spawn, initializer=_leave_ctrl_c_to_the_parent) as pool:
-            return await asyncio.get_running_loop().run_in_executor(pool, measure, record)
+            with _one_thread_for_children():
+                outcome = asyncio.get_running_loop().run_in_executor(pool, measure, record)
+            return await outcome
+
+
+@contextmanager
+def _one_thread_for_children() -> Iterator[None]:
+    """A spawned process reads these once, when it loads numpy; ours has long done so."""
+    before = {name: os.environ.get(name) for name in THREADS_OF_NUMPY}
+    os.environ.update(dict.fromkeys(THREADS_OF_NUMPY, "1"))
+    try:
+        yield
+    finally:
+        for name, setting in before.items():
+            if setting is None:
+                del os.environ[name]
+            else:
+                os.environ[name] = setting
 
 
 def _leave_ctrl_c_to_the_parent() -> None:

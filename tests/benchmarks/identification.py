@@ -62,7 +62,11 @@ class Row:
 
 def run(condition: str, plants: Sequence[Plant], bench: Bench, seeds: int) -> Row:
     """Identify every plant once a seed; at least one test must not be refused."""
-    outcomes = [(plant, measure(sampled_relay(plant, bench, seed))) for plant in plants for seed in range(seeds)]
+    outcomes = [
+        (plant, measure(sampled_relay(plant, bench, 1000 * i + seed)))  # no two plants see the same noise
+        for i, plant in enumerate(plants)
+        for seed in range(seeds)
+    ]
     found = [(plant, outcome) for plant, outcome in outcomes if isinstance(outcome, Findings)]
     gains = [(plant.ultimate_gain, f.ultimate.ultimate_gain) for plant, f in found]
     periods = [(plant.ultimate_period_s, f.ultimate.ultimate_period_s) for plant, f in found]
