@@ -13,7 +13,6 @@ from autotune.identify.findings import FindingsOrRefusal
 from autotune.identify.measure import measure
 from autotune.loop.record import Record
 
-
 THREADS_OF_NUMPY = ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS")
 
 
