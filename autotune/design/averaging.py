@@ -7,7 +7,7 @@ The least possible rate of the outflow is k q^2/(2 y): ramp it just in time.
 """
 
 from dataclasses import dataclass
-from math import acos, acosh, exp, sqrt
+from math import acos, acosh, exp, pi, sqrt
 
 import numpy as np
 from scipy.optimize import brentq
@@ -47,12 +47,11 @@ def averaging_pi(
     """
     zeta = damping_ratio(overshoot_ratio)
     w = gain_per_s * inflow_pct / band_pct * _peak_factor(zeta)
-    shape_per_s = _outflow_rates(zeta)
     return AveragingDesign(
         settings=PidSettings(PidForm.IDEAL, 2.0 * zeta * w / gain_per_s, 2.0 * zeta / w),
         damping_ratio=zeta,
         outflow_overshoot_ratio=outflow_overshoot_ratio(zeta),
-        outflow_rate_pct_per_s=inflow_pct * w * shape_per_s,
+        outflow_rate_pct_per_s=inflow_pct * w * _outflow_rate_factor(zeta),
         least_outflow_rate_pct_per_s=least_rate_pct_per_s(gain_per_s, band_pct, inflow_pct),
     )
 
@@ -81,7 +80,7 @@ def outflow_overshoot_ratio(damping_ratio: float) -> float:
     zeta = damping_ratio
     if zeta < 1.0:
         return exp(-2.0 * zeta * acos(zeta) / sqrt(1.0 - zeta**2))
-    return exp(-2.0) if zeta == 1.0 else exp(-2.0 * zeta * acosh(zeta) / sqrt(zeta**2 - 1.0))
+    return exp(-2.0 * zeta * (acosh(zeta) / sqrt(zeta**2 - 1.0) if zeta > 1.0 else 1.0))
 
 
 def _peak_factor(zeta: float) -> float:
@@ -89,12 +88,11 @@ def _peak_factor(zeta: float) -> float:
     return sqrt(outflow_overshoot_ratio(zeta))
 
 
-def _outflow_rates(zeta: float) -> float:
-    """The largest rate of the outflow for q = w = 1: the largest of its impulse response."""
-    t = np.linspace(0.0, 6.0, 6001)
-    roots = np.roots([1.0, 2.0 * zeta, 1.0]).astype(complex)
-    if abs(roots[0] - roots[1]) < 1e-6:
+def _outflow_rate_factor(zeta: float) -> float:
+    """The largest rate of the outflow for q = w = 1: the largest of its impulse response, at once from zeta 0.5 on."""
+    if zeta >= 0.5:
         return 2.0 * zeta
-    residues = [(2.0 * zeta * root + 1.0) / (root - other) for root, other in zip(roots, roots[::-1], strict=True)]
-    rate = sum(residue * np.exp(root * t) for residue, root in zip(residues, roots, strict=True))
-    return float(np.max(np.real(rate)))
+    damped = sqrt(1.0 - zeta**2)
+    t = np.linspace(0.0, pi / damped, 2001)
+    rates = np.exp(-zeta * t) * (2.0 * zeta * np.cos(damped * t) + (1.0 - 2.0 * zeta**2) / damped * np.sin(damped * t))
+    return float(np.max(rates))

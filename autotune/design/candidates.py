@@ -92,13 +92,13 @@ def _keeping_margins(
     found: RobustOptimum,
     held: Callable[[PidSettings], PidSettings | Refusal],
 ) -> PidSettings:
-    settings = found.settings
-    for _ in range(_ROUNDING_TURNS):
+    def is_kept(settings: PidSettings) -> bool:
         in_fields = held(settings)
-        if isinstance(in_fields, Refusal) or keeps_guard(bench, draws, caution, found, in_fields):
-            break
-        settings = replace(settings, controller_gain=settings.controller_gain * _ROUNDING_RATIO)
-    return settings
+        return isinstance(in_fields, Refusal) or keeps_guard(bench, draws, caution, found, in_fields)
+
+    gain = found.settings.controller_gain
+    calmer = (replace(found.settings, controller_gain=gain * _ROUNDING_RATIO**turn) for turn in range(_ROUNDING_TURNS))
+    return next((settings for settings in calmer if is_kept(settings)), found.settings)
 
 
 def _guard_words(found: RobustOptimum) -> tuple[str, ...]:

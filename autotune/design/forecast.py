@@ -14,10 +14,10 @@ from autotune.design.margins import Margins, margins
 from autotune.design.optimum import LoopBench
 from autotune.design.responses import (
     StepFigures,
-    closed_loop,
     horizon_scans,
     load_figures,
     noise_gain_ratio,
+    pv_after_steps,
     setpoint_figures,
 )
 from autotune.identify.model import ModelWithDraws
@@ -35,7 +35,7 @@ NEAR_SENSITIVITY = 2.0
 """Ms from which a loop counts as near instability: the upper end of the usual range."""
 
 _DRAWN_SCANS_PER_PERIOD = 60.0
-_DRAWN_AT_MOST = 15
+_DRAWN_AT_MOST = 10
 
 
 @dataclass(frozen=True, slots=True)
@@ -90,7 +90,7 @@ def forecast_bench(
 ) -> ForecastBench:
     """Ready to forecast; ``noise_pct`` is PV's standard deviation at rest, ``dead_band_pct`` the valve's, of OP."""
     plant, scan_s = bench.plant, bench.simulated.scan_s
-    times = max(1, ceil(bench.period_s / _DRAWN_SCANS_PER_PERIOD / scan_s))
+    times = max(1, round(bench.period_s / _DRAWN_SCANS_PER_PERIOD / scan_s))
     excess_s = (times - 1) * scan_s / 2.0
     every = max(1, ceil(len(model.draws) / _DRAWN_AT_MOST))
     chosen = tuple(range(0, len(model.draws), every))
@@ -118,7 +118,9 @@ def forecast(ready: ForecastBench, settings: PidSettings) -> Forecast | Refusal:
     scans = horizon_scans(loop.scan_s, bench.period_s, settings.integral_time_s)
     lasting = _lasting_pct_s(settings)
     setpoint, load = setpoint_figures(loop, scans), load_figures(loop, scans, lasting)
-    setpoints, loads, shares = _drawn_figures(ready, settings, peaks)
+    overshoot, setpoint_iae, load_peak, load_iae = _drawn_bands(
+        ready, settings, peaks, (setpoint.overshoot_pct, setpoint.iae_pct_s, load.overshoot_pct, load.iae_pct_s)
+    )
     noise_pct = None
     if ready.noise_pct is not None:
         noise_pct = ready.noise_pct * noise_gain_ratio(loop, scans)
@@ -129,10 +131,10 @@ def forecast(ready: ForecastBench, settings: PidSettings) -> Forecast | Refusal:
         setpoint=setpoint,
         load=load,
         peak_sensitivity=_band(found.peak_sensitivity or inf, peaks[stable], ready.draws.shares[stable]),
-        overshoot_pct=_band(setpoint.overshoot_pct, np.array([f.overshoot_pct for f in setpoints]), shares),
-        setpoint_iae_pct_s=_band(setpoint.iae_pct_s, np.array([f.iae_pct_s for f in setpoints]), shares),
-        load_peak_pct=_band(load.overshoot_pct, np.array([f.overshoot_pct for f in loads]), shares),
-        load_iae_pct_s=_band(load.iae_pct_s, np.array([f.iae_pct_s for f in loads]), shares),
+        overshoot_pct=overshoot,
+        setpoint_iae_pct_s=setpoint_iae,
+        load_peak_pct=load_peak,
+        load_iae_pct_s=load_iae,
         unstable_share_ratio=unstable_share_ratio,
         op_noise_pct=noise_pct,
         limit_cycle=cycle,
@@ -145,20 +147,27 @@ def _lasting_pct_s(settings: PidSettings) -> float | None:
     return None if ti_s is None else ti_s / settings.controller_gain
 
 
-def _drawn_figures(
-    ready: ForecastBench, settings: PidSettings, peaks: Array
-) -> tuple[list[StepFigures], list[StepFigures], Array]:
-    """Setpoint and load figures of the stable ones among the chosen draws, and their weights."""
-    setpoints, loads, shares = [], [], []
+def _drawn_bands(ready: ForecastBench, settings: PidSettings, peaks: Array, best: tuple[float, ...]) -> list[Interval]:
+    """Overshoot, setpoint IAE, load peak and load IAE over the stable ones among the chosen draws."""
+    rows, shares = [], []
+    lasting = _lasting_pct_s(settings)
     for held, at in zip(ready.drawn, ready.drawn_at, strict=True):
         if not np.isfinite(peaks[at]):
             continue
-        loop = closed_loop(held, block_equation(ready.bench.block, settings, held.scan_s))
         scans = horizon_scans(held.scan_s, ready.bench.period_s, settings.integral_time_s)
-        setpoints.append(setpoint_figures(loop, scans))
-        loads.append(load_figures(loop, scans, _lasting_pct_s(settings)))
+        after_sp, after_load = pv_after_steps(held, block_equation(ready.bench.block, settings, held.scan_s), scans)
+        seen, signed = held.scan_s * float(np.sum(np.abs(after_load))), held.scan_s * float(np.sum(after_load))
+        rows.append(
+            (
+                100.0 * max(0.0, float(np.max(after_sp)) - 1.0),
+                held.scan_s * float(np.sum(np.abs(1.0 - after_sp))),
+                float(np.max(np.abs(after_load))),
+                seen + (0.0 if lasting is None else abs(lasting - signed)),
+            )
+        )
         shares.append(float(ready.draws.shares[at]))
-    return setpoints, loads, np.array(shares)
+    columns = np.array(rows).reshape(-1, len(best)).T
+    return [_band(one, column, np.array(shares)) for one, column in zip(best, columns, strict=True)]
 
 
 def _band(

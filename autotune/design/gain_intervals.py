@@ -16,7 +16,10 @@ Complex = NDArray[np.complex128]
 
 @dataclass(frozen=True, slots=True)
 class LoopLimits:
-    """Largest Ms and Mt, and largest |C S|, OP's answer to noise in PV (``None``: no limit)."""
+    """Largest Ms and Mt, and largest |C S|, OP's answer to noise in PV (``None``: no limit).
+
+    The last holds where C0 is given: a caller leaves out low frequencies, where it is 1/Kp for any settings.
+    """
 
     peak_sensitivity: float
     peak_complementary_sensitivity: float

@@ -68,7 +68,8 @@ def _ultimate_rad_per_s(model: ProcessModel, scan_s: float | None, op_delay_s: f
     reading = ultimate_reading(ProcessModel(model.numerator, model.denominator, late_s))
     if isinstance(reading, UltimateReading):
         return 2.0 * pi / reading.ultimate_period_s
-    return 10.0 * float(np.max(np.abs(np.roots(model.denominator))))
+    fastest = 10.0 * float(np.max(np.abs(np.roots(model.denominator))))
+    return max(fastest, 1.0 / late_s if late_s > 0.0 else 0.0) or 1.0
 
 
 def _grid(ultimate: float, top: float | None, dead_time_s: float) -> Array:
@@ -76,7 +77,7 @@ def _grid(ultimate: float, top: float | None, dead_time_s: float) -> Array:
     low = _LOW_RATIO * min(ultimate, high)
     even = np.geomspace(low, high, int(_POINTS_PER_DECADE * np.log10(high / low)))
     even[-1] = high
-    if dead_time_s <= 0.0:
+    if dead_time_s * high <= _TURN_RAD:
         return even
     step = max(_TURN_RAD / dead_time_s, high / _TURNING_POINTS_AT_MOST)
     turning = np.arange(step / (10.0 ** (1.0 / _POINTS_PER_DECADE) - 1.0), high, step)

@@ -105,9 +105,11 @@ def turns_say_stable(loop: Complex, integrators: int) -> bool:
     enough that nothing turns by 180 degrees between two points.  Plant and block are otherwise stable.
     """
     angle = np.unwrap(np.angle(1.0 + loop))
-    # Two integrators start along the negative axis, where a hair decides on which side of the cut the angle lies.
-    start = float(angle[0]) - (2.0 * pi if integrators > 1 and angle[0] > pi / 2.0 else 0.0)
-    return abs(start + float(angle[-1] - angle[0])) < 1.5
+    # Each integrator starts 90 degrees lower: two of them along the negative axis, where a hair decides on which side
+    # of the cut the angle lies.
+    start = -integrators * pi / 2.0
+    turns = round((start - float(angle[0])) / (2.0 * pi))
+    return abs(float(angle[-1]) + 2.0 * pi * turns) < 1.5
 
 
 def _controller(terms: BlockTerms, settings: PidSettings) -> Complex:

@@ -108,15 +108,19 @@ def _forecast_of_present(
     return ready if isinstance(ready, Refusal) else forecast(ready, present)
 
 
-def _held(settings: PidSettings, loop: _Loop) -> Rounded | Refusal:
+def _held(settings: PidSettings, loop: _Loop) -> tuple[Rounded, PidSettings] | Refusal:
+    """The rounded numbers, and what the block does with them."""
     fields = to_block(settings, loop.block, loop.action, loop.pv_span)
-    return fields if isinstance(fields, Refusal) else rounded(fields, loop.block)
+    held = fields if isinstance(fields, Refusal) else rounded(fields, loop.block)
+    if isinstance(held, Refusal):
+        return held
+    as_held = from_block(held.fields, loop.block, loop.action, loop.pv_span)
+    return as_held if isinstance(as_held, Refusal) else (held, as_held)
 
 
 def _as_held(settings: PidSettings, loop: _Loop) -> PidSettings | Refusal:
-    """What the block does with the rounded numbers."""
     held = _held(settings, loop)
-    return held if isinstance(held, Refusal) else from_block(held.fields, loop.block, loop.action, loop.pv_span)
+    return held if isinstance(held, Refusal) else held[1]
 
 
 def _column(candidate: Candidate, loop: _Loop) -> Proposal | Refusal:
@@ -126,12 +130,10 @@ def _column(candidate: Candidate, loop: _Loop) -> Proposal | Refusal:
     in_block_form = to_form(candidate.settings, loop.block.form)
     if isinstance(in_block_form, Refusal):
         return in_block_form
-    held = _held(in_block_form, loop)
-    if isinstance(held, Refusal):
-        return held
-    as_held = from_block(held.fields, loop.block, loop.action, loop.pv_span)
-    if isinstance(as_held, Refusal):
-        return as_held
+    fitted = _held(in_block_form, loop)
+    if isinstance(fitted, Refusal):
+        return fitted
+    held, as_held = fitted
     foreseen = loop.ready if isinstance(loop.ready, Refusal) else forecast(loop.ready, as_held)
     if isinstance(foreseen, Forecast) and (refusal := _check_forecast(foreseen)) is not None:
         return refusal

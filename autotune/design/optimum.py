@@ -6,7 +6,7 @@ line and a PID one over a plane.  Everything is judged on the sampled loop and i
 
 from collections.abc import Callable
 from dataclasses import dataclass
-from math import ceil, exp, inf, isfinite, sqrt
+from math import exp, inf, isfinite, sqrt
 from typing import Any
 
 import numpy as np
@@ -60,6 +60,11 @@ class LoopBench:
         """The ultimate period that times are counted in."""
         return 2.0 * np.pi / self.plant.ultimate_rad_per_s
 
+    @property
+    def is_noise(self) -> NDArray[np.bool_]:
+        """Where OP's answer to PV is noise: above the ultimate frequency.  At rest it is 1/Kp whatever the settings."""
+        return self.plant.w_rad_per_s > self.plant.ultimate_rad_per_s
+
     def loop(self, settings: PidSettings) -> ClosedLoop:
         """The closed loop with settings in the block's form."""
         return closed_loop(self.simulated, block_equation(self.block, settings, self.simulated.scan_s))
@@ -90,7 +95,7 @@ def loop_bench(plant: SeenPlant, block: BlockDescription) -> LoopBench:
 
 def simulated_plant(plant: SeenPlant, held: HeldPlant, period_s: float) -> HeldPlant:
     """The held plant, with a scan that is long enough to be worth computing; the hold's extra delay is taken off."""
-    times = max(1, ceil(period_s / _SIMULATED_PER_PERIOD / held.scan_s))
+    times = max(1, round(period_s / _SIMULATED_PER_PERIOD / held.scan_s))
     if times == 1:
         return held
     scan_s = times * held.scan_s
@@ -106,26 +111,32 @@ def best_pi(bench: LoopBench, limits: LoopLimits) -> Found | None:
     if not isfinite(tried[at][0]):
         return None
     low, high = float(logs[max(0, at - 1)]), float(logs[min(len(logs) - 1, at + 1)])
-    best = _golden(lambda x: _with_times(bench, limits, exp(x), None)[0], low, high)
-    iae_pct_s, gain = _with_times(bench, limits, exp(best), None)
-    if iae_pct_s > tried[at][0]:
-        best, (iae_pct_s, gain) = float(logs[at]), tried[at]
-    return Found(PidSettings(bench.block.form, gain, exp(best), None), iae_pct_s)
+    golden = _golden(lambda x: _with_times(bench, limits, exp(x), None)[0], low, high)
+    (iae_pct_s, gain), at_log = min(
+        (tried[at], float(logs[at])), (_with_times(bench, limits, exp(golden), None), golden)
+    )
+    return Found(PidSettings(bench.block.form, gain, exp(at_log), None), iae_pct_s)
 
 
-def best_pid(bench: LoopBench, limits: LoopLimits, pi: Found) -> Found | None:
-    """The PID with the least load-step IAE within the limits, sought from the best PI; ``None`` if none is better."""
+def best_pid(bench: LoopBench, limits: LoopLimits, pi: Found, near: PidSettings | None = None) -> Found:
+    """The PID with the least load-step IAE within the limits, or ``pi`` where none is better.
+
+    Sought from the best PI, or quickly from ``near``, the answer to limits that were little different.
+    """
+
+    def cost(x: Array) -> float:
+        return _with_times(bench, limits, exp(x[0]), exp(x[1]))[0]
+
     ti_s = pi.settings.integral_time_s or bench.period_s
-    best: tuple[float, Array] = (inf, np.zeros(2))
-    for ti_ratio, td_ratio in _PID_STARTS:
-        start = np.log([ti_ratio * ti_s, td_ratio * bench.period_s])
-        cost, x = least_by_simplex(lambda x: _with_times(bench, limits, exp(x[0]), exp(x[1]))[0], start)
-        best = min(best, (cost, x), key=lambda pair: pair[0])
-    cost, x = least_by_simplex(lambda x: _with_times(bench, limits, exp(x[0]), exp(x[1]))[0], best[1], size_ratio=0.1)
+    starts = [np.log([ti_ratio * ti_s, td_ratio * bench.period_s]) for ti_ratio, td_ratio in _PID_STARTS]
+    if near is not None and near.integral_time_s and near.derivative_time_s:
+        best = np.log([near.integral_time_s, near.derivative_time_s])
+    else:
+        _, best = min((least_by_simplex(cost, start) for start in starts), key=lambda pair: pair[0])
+    _, x = least_by_simplex(cost, best, size_ratio=0.1)
     iae_pct_s, gain = _with_times(bench, limits, exp(x[0]), exp(x[1]))
-    if not iae_pct_s < pi.iae_pct_s:
-        return None
-    return Found(PidSettings(bench.block.form, gain, exp(x[0]), exp(x[1])), iae_pct_s)
+    pid = Found(PidSettings(bench.block.form, gain, exp(x[0]), exp(x[1])), iae_pct_s)
+    return min(pid, pi, key=lambda found: found.iae_pct_s)
 
 
 def iae_pct_s(bench: LoopBench, settings: PidSettings) -> float:
@@ -152,7 +163,7 @@ def keeps(bench: LoopBench, limits: LoopLimits, settings: PidSettings) -> bool:
         turns_say_stable(loop, bench.plant.integrators + (ti_s is not None))
         and bool(np.max(1.0 / distance) <= limits.peak_sensitivity * _SLACK_RATIO)
         and bool(np.max(np.abs(loop) / distance) <= limits.peak_complementary_sensitivity * _SLACK_RATIO)
-        and bool(np.max(np.abs(controller) / distance) <= noise_gain * _SLACK_RATIO)
+        and bool(np.max(np.abs(controller * bench.is_noise) / distance) <= noise_gain * _SLACK_RATIO)
     )
 
 
@@ -161,7 +172,7 @@ def _with_times(bench: LoopBench, limits: LoopLimits, ti_s: float, td_s: float |
     controller = bench.terms.response(ti_s, td_s)
     loop = bench.plant.gain * controller
     best = (inf, 0.0)
-    for top in admissible_tops(loop, controller, limits):
+    for top in admissible_tops(loop, controller * bench.is_noise, limits):
         gain = float(top)
         if not isfinite(gain) or gain * abs(loop[0]) < _WITHIN_GRID_RATIO:
             continue

@@ -18,6 +18,9 @@ from autotune.loop.settings import PidSettings
 
 _POINTS_PER_DECADE = 200
 
+_NO_DEAD_TIME_RATIO = 1e-6
+"""Dead time over the shortest lag below which it is none."""
+
 _NO_ULTIMATE_POINT = Refusal(
     "NO_ULTIMATE_POINT",
     "the model's phase doesn't cross -180 degrees, so no gain makes it swing",
@@ -50,7 +53,10 @@ def ultimate_reading(model: ProcessModel) -> laws.UltimateReading | Refusal:
     Refuses ``NO_ULTIMATE_POINT``.
     """
     roots = np.concatenate((np.roots(model.denominator), np.roots(model.numerator)))
-    sizes = np.concatenate((np.abs(roots[roots != 0.0]), [1.0 / model.dead_time_s] if model.dead_time_s > 0.0 else []))
+    sizes = np.abs(roots[roots != 0.0])
+    fastest = float(np.max(sizes, initial=0.0))
+    if model.dead_time_s * fastest > _NO_DEAD_TIME_RATIO or model.dead_time_s > 0.0 == fastest:
+        sizes = np.append(sizes, 1.0 / model.dead_time_s)
     low, high = 1e-3 * float(np.min(sizes, initial=inf)), 1e3 * float(np.max(sizes, initial=0.0))
     if not high > low:
         return _NO_ULTIMATE_POINT  # an integrator alone

@@ -240,13 +240,11 @@ def _bare_dead_time_s(factors: _Factors) -> float:
     return factors.dead_time_s + sum(-zero for zero in factors.zeros_s if zero < 0.0)
 
 
-def _settled(factors: _Factors, order: int, dead_time_s: float) -> Fotd | Sotd | Ipdt | Refusal:
-    for _ in range(_TURNS):
-        reduced = _reduced(*_without_zeros(factors, dead_time_s), _bare_dead_time_s(factors), order)
-        if isinstance(reduced, Refusal) or reduced.dead_time_s == dead_time_s:
-            break
-        dead_time_s = reduced.dead_time_s
-    return reduced
+def _settled(factors: _Factors, order: int, dead_time_s: float, turns: int = _TURNS) -> Fotd | Sotd | Ipdt | Refusal:
+    reduced = _reduced(*_without_zeros(factors, dead_time_s), _bare_dead_time_s(factors), order)
+    if isinstance(reduced, Refusal) or reduced.dead_time_s == dead_time_s or turns == 0:
+        return reduced
+    return _settled(factors, order, reduced.dead_time_s, turns - 1)
 
 
 def _response(reduced: Fotd | Sotd | Ipdt, s: complex) -> complex:

@@ -62,11 +62,6 @@ def closed_loop(plant: HeldPlant, block: BlockEquation) -> ClosedLoop:
     """Plant and block with the same scan, joined; nothing is said about stability."""
     late = np.concatenate((np.zeros(plant.delay_scans), plant.numerator))
     around = np.convolve(late, block.from_pv)
-    denominator = np.zeros(max(len(around), len(plant.denominator) + len(block.denominator) - 1))
-    denominator[: len(around)] = around
-    denominator[: len(plant.denominator) + len(block.denominator) - 1] += np.convolve(
-        plant.denominator, block.denominator
-    )
     return ClosedLoop(
         scan_s=plant.scan_s,
         pv_from_load=np.convolve(late, block.denominator),
@@ -74,7 +69,18 @@ def closed_loop(plant: HeldPlant, block: BlockEquation) -> ClosedLoop:
         pv_from_sp=np.convolve(late, block.from_sp),
         op_from_sp=np.convolve(plant.denominator, block.from_sp),
         op_from_noise=-np.convolve(plant.denominator, block.from_pv),
-        denominator=denominator,
+        denominator=_sum(around, np.convolve(plant.denominator, block.denominator)),
+    )
+
+
+def pv_after_steps(plant: HeldPlant, block: BlockEquation, scans: int) -> tuple[Array, Array]:
+    """PV after a setpoint step and after a load step of 1 %: all that a band over many draws needs."""
+    late = np.concatenate((np.zeros(plant.delay_scans), plant.numerator))
+    denominator = _sum(np.convolve(late, block.from_pv), np.convolve(plant.denominator, block.denominator))
+    steps = np.ones(scans)
+    return (
+        np.asarray(lfilter(np.convolve(late, block.from_sp), denominator, steps), dtype=np.float64),
+        np.asarray(lfilter(np.convolve(late, block.denominator), denominator, steps), dtype=np.float64),
     )
 
 
@@ -129,6 +135,14 @@ def noise_gain_ratio(loop: ClosedLoop, scans: int) -> float:
 def horizon_scans(scan_s: float, period_s: float, integral_time_s: float | None) -> int:
     """Scans that show a loop settle: twelve periods, or the longer tail of a slow integral."""
     return ceil(max(12.0 * period_s, 4.0 * (integral_time_s or 0.0)) / scan_s)
+
+
+def _sum(one: Array, other: Array) -> Array:
+    """Of two polynomials in z^-1."""
+    longer, shorter = (one, other) if len(one) >= len(other) else (other, one)
+    total = longer.copy()
+    total[: len(shorter)] += shorter
+    return total
 
 
 def _settling_s(error: Array, scale: float, scan_s: float) -> float | None:

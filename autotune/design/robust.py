@@ -81,9 +81,9 @@ def robust_optimum(
     noise_gain = None if not noise_pct else OP_NOISE_AT_MOST_PCT / noise_pct
     limits = LoopLimits(PEAK_SENSITIVITY, PEAK_SENSITIVITY, noise_gain)
 
-    def pi_within(within: LoopLimits) -> Found | None:
-        found = best_pi(bench, within)
-        return None if found is None else _suited(bench, purpose, within, found)
+    def pi_within(within: LoopLimits, earlier: Found | None) -> Found | None:
+        start = earlier if purpose is Purpose.FOLLOW and earlier is not None else best_pi(bench, within)
+        return None if start is None else _suited(bench, purpose, within, start)
 
     pi = _guarded(bench, draws, caution, limits, pi_within)
     if pi is None:
@@ -96,14 +96,16 @@ def robust_optimum(
         return replace(pi, because="Derivative moves the valve more, so a loop that spares it is a PI.")
     if not bench.block.has_derivative:
         return replace(pi, because="The block has no derivative.")
+    best = Found(pi.settings, pi.iae_pct_s)
 
-    def pid_within(within: LoopLimits) -> Found | None:
-        start = best_pi(bench, within)
-        found = None if start is None else best_pid(bench, within, start)
-        return None if found is None else _suited(bench, purpose, within, found)
+    def pid_within(within: LoopLimits, earlier: Found | None) -> Found:
+        if purpose is Purpose.FOLLOW and earlier is not None:
+            return _following(bench, within, earlier)
+        found = best_pid(bench, within, best, None if earlier is None else earlier.settings)
+        return _suited(bench, purpose, within, found)
 
     pid = _guarded(bench, draws, caution, limits, pid_within)
-    return _chosen(bench, purpose, pi, pid)
+    return _chosen(bench, purpose, pi, pid or pi)
 
 
 def _suited(bench: LoopBench, purpose: Purpose, limits: LoopLimits, found: Found) -> Found:
@@ -113,11 +115,9 @@ def _suited(bench: LoopBench, purpose: Purpose, limits: LoopLimits, found: Found
     return _following(bench, limits, found) if purpose is Purpose.FOLLOW else _gentle(bench, limits, found)
 
 
-def _chosen(bench: LoopBench, purpose: Purpose, pi: RobustOptimum, pid: RobustOptimum | None) -> RobustOptimum:
+def _chosen(bench: LoopBench, purpose: Purpose, pi: RobustOptimum, pid: RobustOptimum) -> RobustOptimum:
     """PI or PID by what derivative really buys."""
     what = "the error after a setpoint step" if purpose is Purpose.FOLLOW else "the error after an upset"
-    if pid is None:
-        return replace(pi, because=f"Derivative would not lessen {what}, so this is a PI.")
     before, after = _error_pct_s(bench, purpose, pi.settings), _error_pct_s(bench, purpose, pid.settings)
     if after > DERIVATIVE_WORTH_RATIO * before:
         bought = max(0.0, 100.0 * (1.0 - after / before))
@@ -156,12 +156,12 @@ def _guarded(
     draws: DrawsOnGrid,
     caution: Caution,
     limits: LoopLimits,
-    search: Callable[[LoopLimits], Found | None],
+    search: Callable[[LoopLimits, Found | None], Found | None],
 ) -> RobustOptimum | None:
     """Search, look at the draws, and lower the limit on Ms until enough of them keep theirs."""
-    limit, outcome = limits.peak_sensitivity, None
+    limit, outcome, found = limits.peak_sensitivity, None, None
     for _ in range(_BACK_OFFS):
-        found = search(replace(limits, peak_sensitivity=limit))
+        found = search(replace(limits, peak_sensitivity=limit), found)
         if found is None:
             return outcome
         reached = guarded_sensitivity(bench, draws, caution, found.settings)

@@ -35,6 +35,7 @@ class Sampled:
     """x+ = phi x + late u[k-q-1] + soon u[k-q], y = c x; with its frequency response on a grid below pi/h."""
 
     scan_s: float
+    scans_per_period: int
     delay_scans: int
     phi: Array
     late: Array
@@ -44,8 +45,9 @@ class Sampled:
     response: Complex
 
 
-def sampled(plant: Plant, scan_s: float) -> Sampled:
+def sampled(plant: Plant, scans_per_period: int = SCANS_PER_PERIOD) -> Sampled:
     """The exact hold of one plant."""
+    scan_s = plant.ultimate_period_s / scans_per_period
     a, b, c = state_space(plant)
     q = floor(plant.dead_time_s / scan_s + 1e-9)
     f = max(0.0, plant.dead_time_s - q * scan_s)
@@ -57,7 +59,7 @@ def sampled(plant: Plant, scan_s: float) -> Sampled:
     into = soon + (phi_rest @ gamma_f) / z[:, :, 0]
     states = np.linalg.solve(z * np.eye(len(b)) - phi_rest @ phi_f, into[:, :, None])
     response = (states[:, :, 0] @ c) * z[:, 0, 0] ** -float(q)
-    return Sampled(scan_s, q, phi_rest @ phi_f, phi_rest @ gamma_f, soon, c, w, response)
+    return Sampled(scan_s, scans_per_period, q, phi_rest @ phi_f, phi_rest @ gamma_f, soon, c, w, response)
 
 
 def controller(plant: Sampled, ti_s: Array, td_s: Array) -> Complex:
@@ -84,7 +86,7 @@ def largest_gains(plant: Sampled, ti_s: Array, td_s: Array, run: int) -> Array:
     Above a run of stable gains there can be one that only looks good: far from -1 on the wrong side of it.
     """
     loop = plant.response[None, :] * controller(plant, ti_s, td_s)
-    scale = 1.0 / np.max(np.abs(loop[:, plant.w > 2.0 * np.pi / (SCANS_PER_PERIOD * plant.scan_s)]), axis=1)
+    scale = 1.0 / np.max(np.abs(loop[:, plant.w > 2.0 * np.pi / (plant.scans_per_period * plant.scan_s)]), axis=1)
     grid = scale[:, None] * np.geomspace(3e-3, 3.0, 36)[None, :]
     allowed = holds(loop, grid)
     ends = allowed & ~np.concatenate((allowed[:, 1:], np.zeros((len(ti_s), 1), dtype=bool)), axis=1)
@@ -102,7 +104,7 @@ def largest_gains(plant: Sampled, ti_s: Array, td_s: Array, run: int) -> Array:
 def load_iae(plant: Sampled, gain: Array, ti_s: Array, td_s: Array) -> Array:
     """IAE after a load step of 1 at the plant's input, all candidates at once; infinite where it doesn't settle."""
     h, lanes = plant.scan_s, len(gain)
-    scans = PERIODS * SCANS_PER_PERIOD
+    scans = PERIODS * plant.scans_per_period
     state = np.zeros((lanes, len(plant.output)))
     held = np.zeros((plant.delay_scans + 2, lanes))
     integral, derivative, before = np.zeros(lanes), np.zeros(lanes), np.zeros(lanes)
@@ -118,9 +120,9 @@ def load_iae(plant: Sampled, gain: Array, ti_s: Array, td_s: Array) -> Array:
             held[0] = gain * (derivative - pv) + integral + 1.0
             state = state @ plant.phi.T + np.outer(held[-1], plant.late) + np.outer(held[-2], plant.soon)
             iae, signed = iae + h * np.abs(pv), signed + h * pv
-            if k >= scans - SCANS_PER_PERIOD:
+            if k >= scans - plant.scans_per_period:
                 last = np.maximum(last, np.abs(pv))
-        settled = last * plant.scan_s * SCANS_PER_PERIOD < 0.05 * iae
+        settled = last * plant.scan_s * plant.scans_per_period < 0.05 * iae
         total = iae + np.abs(ti_s / gain - signed)
     return np.where(settled & (gain > 0.0) & np.isfinite(total), total, np.inf)
 
@@ -143,7 +145,7 @@ def best(plant: Sampled, ti_s: Array, td_s: Array) -> tuple[float, float, float,
 
 def optimum(plant: Sampled, *, with_derivative: bool) -> tuple[float, float, float, float]:
     """Grid over the times, then two zooms."""
-    period_s = SCANS_PER_PERIOD * plant.scan_s
+    period_s = plant.scans_per_period * plant.scan_s
     ti_axis = period_s * np.geomspace(0.01, 60.0, 48 if with_derivative else 160)
     td_axis = period_s * np.geomspace(0.01, 3.0, 32) if with_derivative else np.zeros(1)
     found = best(plant, *(axis.ravel() for axis in np.meshgrid(ti_axis, td_axis)))
@@ -161,7 +163,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
     for plant in reference_batch():
         if plant.kappa > KAPPA_AT_MOST or (names and plant.name not in names):
             continue
-        held = sampled(plant, plant.ultimate_period_s / SCANS_PER_PERIOD)
+        held = sampled(plant)
         row = {}
         for letters in ("PI", "PID"):
             iae, gain, ti_s, td_s = optimum(held, with_derivative=letters == "PID")
