@@ -170,6 +170,7 @@ async def network(number: int) -> AsyncIterator[str]:
         for line in (f"addr add {_address(name, 2)}/30 dev inside", "link set inside up", "link set lo up"):
             _ip(f"-n {name} {line}")
         yield name
+        _ip(f"link del {name}")  # at once: with its network alone it would go some time later
     finally:
         _ip(f"netns del {name}")
 
