@@ -1,5 +1,6 @@
 """Where tags lie in an OPC UA server: node ids and paths, what we write, and what must not be told twice."""
 
+import re
 from collections.abc import Iterable, Iterator
 from dataclasses import dataclass
 
@@ -12,6 +13,7 @@ from autotune.config.schema_settings import BlockTable
 from autotune.config.schema_tags import TagsTable, TagTable
 from autotune.config.types import OpcUaTag
 
+_LARGEST_PORT = 65535
 _PLACEHOLDER = "{loop}"
 _MODBUS_KEYS = ("address", "table", "bit", "word_order", "byte_order", "ne43")
 _NODE_REMEDY = (
@@ -77,7 +79,10 @@ def node_overlaps_between(
 
 
 def opc_ua_flaws(controller: OpcUaControllerTable) -> Iterator[Flaw]:
-    """What can be judged only from several keys of the controller together."""
+    """What the rules of single keys can't see: the port in the address, and keys that don't go together."""
+    port = re.search(r":(\d+)(?:/|$)", controller.url.removeprefix("opc.tcp://"))
+    if port is not None and not 1 <= int(port[1]) <= _LARGEST_PORT:
+        yield Flaw(("url",), f"there is no port {port[1]}", f"write a port from 1 to {_LARGEST_PORT}, usually 4840")
     if controller.security.value == "none":
         for key in ("security_policy", "server_thumbprint", "server_name"):
             if getattr(controller, key) is not None:

@@ -16,7 +16,8 @@ from autotune.config.types import Configuration
 from autotune.errors import ConfigError
 from tests.config.toml_text import to_toml
 
-NAMES = ("example-modbus.toml", "site-limits.toml")
+EXAMPLES = ("example-modbus.toml", "example-opc-ua.toml")
+NAMES = (*EXAMPLES, "site-limits.toml")
 DOCUMENTS: dict[str, dict[str, Any]] = {name: tomllib.loads(bundled_path(name).read_text("utf-8")) for name in NAMES}
 
 TEXTS = st.text(st.characters(exclude_categories=["Cs"]), max_size=12)
@@ -27,7 +28,12 @@ NUMBERS = st.one_of(
     st.sampled_from([0.0, -0.0, 1e-300, 1e300, 0.1]),
 )
 CONTENTS = st.recursive(
-    st.one_of(st.booleans(), NUMBERS, TEXTS, st.sampled_from(["from 0", "never", "REAL", "coil", "TIC-204", "plc1"])),
+    st.one_of(
+        st.booleans(),
+        NUMBERS,
+        TEXTS,
+        st.sampled_from(["from 0", "never", "REAL", "coil", "TIC-204", "plc1", "opc-ua", "ns=2;s=x", "/2:a"]),
+    ),
     lambda inner: st.one_of(
         st.lists(inner, max_size=3),
         st.dictionaries(st.one_of(TEXTS, st.sampled_from(["name", "low", "address"])), inner, max_size=3),
@@ -106,7 +112,8 @@ def test_a_changed_document_gives_a_configuration_or_complaints(
         change(documents[name], way, kind, content)
     for name, document in documents.items():
         (folder / name).write_text(to_toml(document), "utf-8")
-    judge(answer(folder / NAMES[0]))
+    for name in EXAMPLES:
+        judge(answer(folder / name))
 
 
 @given(st.binary(max_size=200))
@@ -118,12 +125,14 @@ def test_any_bytes_give_complaints(folder: Path, content: bytes) -> None:
     judge(result)
 
 
-@given(st.integers(0, 20_000), st.binary(max_size=3), st.integers(0, 3))
-def test_damaged_bytes_give_a_configuration_or_complaints(folder: Path, at: int, put: bytes, taken: int) -> None:
-    content = bundled_path(NAMES[0]).read_bytes()
-    (folder / NAMES[1]).write_bytes(bundled_path(NAMES[1]).read_bytes())
+@given(st.sampled_from(EXAMPLES), st.integers(0, 30_000), st.binary(max_size=3), st.integers(0, 3))
+def test_damaged_bytes_give_a_configuration_or_complaints(
+    folder: Path, name: str, at: int, put: bytes, taken: int
+) -> None:
+    content = bundled_path(name).read_bytes()
+    (folder / NAMES[-1]).write_bytes(bundled_path(NAMES[-1]).read_bytes())
     at %= len(content)
-    path = folder / NAMES[0]
+    path = folder / name
     path.write_bytes(content[:at] + put + content[at + taken :])
     judge(answer(path))
 
@@ -131,4 +140,4 @@ def test_damaged_bytes_give_a_configuration_or_complaints(folder: Path, at: int,
 def test_an_unchanged_document_is_still_right(folder: Path) -> None:
     for name, document in DOCUMENTS.items():
         (folder / name).write_text(to_toml(document), "utf-8")
-    assert isinstance(answer(folder / NAMES[0]), Configuration)
+    assert all(isinstance(answer(folder / name), Configuration) for name in EXAMPLES)
