@@ -1,4 +1,4 @@
-from autotune.field.modbus.back_off import BackOff
+from autotune.field.back_off import BackOff
 
 
 def test_the_first_attempt_waits_for_nothing() -> None:

@@ -11,9 +11,9 @@ import pytest
 from autotune.config.types import DataType, LoopConfig, ModbusEndpoint, ModbusTag, RegisterTable
 from autotune.errors import LinkClosed, LinkRefused, LinkTimeout, WriteForbidden
 from autotune.field import open_link
+from autotune.field.back_off import BackOff
 from autotune.field.codec import from_words, to_words, width
 from autotune.field.link import RawValue, Reading
-from autotune.field.modbus.back_off import BackOff
 from autotune.field.modbus.link import ModbusLink
 from autotune.field.write_list import Permit, WriteList, build_write_list
 from autotune.loop.quality import Quality

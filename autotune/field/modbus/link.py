@@ -11,9 +11,9 @@ from pymodbus.pdu import ModbusPDU
 
 from autotune.config.types import ModbusEndpoint, ModbusTag, RegisterTable
 from autotune.errors import LinkClosed, LinkError, LinkRefused, LinkTimeout, WriteForbidden
+from autotune.field.back_off import BackOff
 from autotune.field.codec import from_words, to_reading, width
 from autotune.field.link import RawValue, Reading, ReadReport
-from autotune.field.modbus.back_off import BackOff
 from autotune.field.modbus.connection import Answer, Connection
 from autotune.field.modbus.exceptions import in_words, is_surely_undone
 from autotune.field.modbus.messages import to_place, to_read_pdu, to_write_pdu

@@ -15,9 +15,9 @@ from asyncua.ua.attribute_ids import AttributeIds
 
 from autotune.config.types import OpcUaEndpoint, OpcUaTag
 from autotune.errors import LinkClosed, LinkError, LinkRefused, WriteForbidden
+from autotune.field.back_off import BackOff
 from autotune.field.facts import NodeFact, ServerFacts
 from autotune.field.link import RawValue, Reading, ReadReport
-from autotune.field.modbus.back_off import BackOff
 from autotune.field.opc_ua.describe import describe
 from autotune.field.opc_ua.nodes import FoundNode, find_nodes
 from autotune.field.opc_ua.opening import Opening
