@@ -85,7 +85,7 @@ def sureness(fit: Fit, samples_per_period: float, later: float = 0.0) -> Surenes
 
 def _covariance(fit: Fit, lags: int) -> Array:
     """Of shape, dead time and numerator; a parameter at its bound, and a flat direction, count as known."""
-    rows = np.concatenate((fit.slopes, fit.columns))
+    rows = np.concatenate((fit.slopes, fit.columns, fit.onset_slopes))
     known = np.zeros(len(rows), dtype=bool)
     known[len(fit.slopes) - 1] = fit.dead_time <= 0
     scale = np.where(known, np.inf, np.maximum(np.linalg.norm(rows, axis=1), 1e-300))

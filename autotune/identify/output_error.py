@@ -47,6 +47,7 @@ class Fit:
 
     ``linear`` holds B's coefficients (ascending powers) and then those of the nuisances; ``columns`` what they
     multiply, ``slopes`` the derivatives of PV with respect to shape and dead time: a row a parameter.
+    ``onset_slopes`` has a row for the onset of a load step, and none without; ``basis`` spans the columns.
     """
 
     structure: Structure
@@ -56,6 +57,7 @@ class Fit:
     residual_pct: Array
     columns: Array
     slopes: Array
+    onset_slopes: Array
     basis: Array
     nuisances: int
     misfit_floor: float
@@ -105,6 +107,7 @@ def fitted(trace: Trace, structure: Structure, parameters: Array) -> Fit:
     if load is not None:
         by_coefficient -= linear[-1] * load.squares[: structure.order]
     by_shape = denominator_slopes(shape) @ by_coefficient
+    onset_slopes = np.empty((0, len(at))) if load is None else -linear[-1] * load.steps[1:2]
     by_dead_time = -(linear[:count] @ seen.steps[1 : count + 1])
     return Fit(
         structure=structure,
@@ -114,6 +117,7 @@ def fitted(trace: Trace, structure: Structure, parameters: Array) -> Fit:
         residual_pct=trace.pv_pct - linear @ columns,
         columns=columns,
         slopes=np.concatenate((by_shape, by_dead_time[None])),
+        onset_slopes=onset_slopes,
         basis=basis,
         nuisances=trace.nuisances,
         misfit_floor=trace.misfit_floor,

@@ -15,7 +15,7 @@ RESOLUTION_RATIO = 1e-4  # of PV's standard deviation in the test: what no trans
 RAMP_BIC = 2.0  # by which a ramp must improve
 LOAD_BIC = 10.0  # by which a step of load must: it is sought at many instants
 SUSPICIOUS_CHI_SQUARED = 12.0  # of a step of load in the residuals: below, there is nothing to look for
-ONSETS = 40
+ONSETS, COARSE_ONSETS = 40, 14
 ONSET_ROUNDS = 3
 
 
@@ -49,14 +49,14 @@ def fit_plant(signals: Waveforms, period_s: float) -> PlantFits:
     trace = trace_of(signals, period_s)
     fits = bank_fits(trace)
     candidates = [(min(fit.bic for fit in fits), trace, fits)]
-    suspect, onsets = _suspect(trace, fits)
+    suspect = _suspect(trace, fits)
     if suspect is not None:
         drifting = replace(trace, has_ramp=True)
         found = bank_fits(drifting, fits)
         candidates.append((min(fit.bic for fit in found) + RAMP_BIC, drifting, found))
-        loaded = _loaded(trace, suspect, onsets)
+        loaded = _loaded(trace, suspect)
         found = bank_fits(loaded, fits)
-        loaded = _loaded(trace, min(found, key=lambda fit: fit.bic), onsets)
+        loaded = _nearer(loaded, min(found, key=lambda fit: fit.bic))
         found = updated_fits(loaded, found)
         candidates.append((min(fit.bic for fit in found) + LOAD_BIC, loaded, found))
     _, trace, fits = min(candidates, key=lambda candidate: candidate[0])
@@ -88,37 +88,53 @@ def _ranked(trace: Trace, period_s: float, fits: tuple[Fit, ...]) -> PlantFits:
     return PlantFits(trace, period_s, (polished(trace, best), *others))
 
 
-def _suspect(trace: Trace, fits: tuple[Fit, ...]) -> tuple[Fit | None, Array]:
-    """The structure whose residuals a step of load at one of the onsets would explain best; none if none much.
+def _suspect(trace: Trace, fits: tuple[Fit, ...]) -> Fit | None:
+    """The structure whose residuals a step of load would explain best; none where it would explain none much.
 
     A zero can play a slow disturbance's part, so only structures without one are asked.  A drift shows as well.
     """
-    at = trace.stairs.sample_s
-    onsets = np.linspace(float(at[0]), float(at[-1]), ONSETS)
+    onsets = _onsets(trace, ONSETS)
+    n = len(trace.pv_pct)
     suspect, lowest_bic = None, np.inf
     for fit in fits:
-        left, n = max(fit.misfit, trace.misfit_floor), len(at)
-        explained = float(np.max(_explained(fit, _loads(fit, at, onsets)))) if fit.structure.zeros == 0 else 0.0
-        if n * explained > SUSPICIOUS_CHI_SQUARED * left and fit.bic + n * np.log1p(-explained / left) < lowest_bic:
-            suspect, lowest_bic = fit, fit.bic + n * np.log1p(-explained / left)
-    return suspect, onsets
+        left = max(fit.misfit, trace.misfit_floor)
+        explained = float(np.max(_explained(fit, _loads(fit, trace, onsets)))) if fit.structure.zeros == 0 else 0.0
+        bic = fit.bic + n * np.log1p(-explained / left)
+        if n * explained > SUSPICIOUS_CHI_SQUARED * left and bic < lowest_bic:
+            suspect, lowest_bic = fit, bic
+    return suspect
 
 
-def _loaded(trace: Trace, fit: Fit, onsets: Array) -> Trace:
-    """The trace with its likeliest step of load, sought on ever finer grids, the plant refitted in between."""
-    loaded, at = trace, trace.stairs.sample_s
+def _loaded(trace: Trace, suspect: Fit) -> Trace:
+    """The trace with its likeliest step of load: the plant is fitted anew at each of a few onsets, then nearer."""
+    tried = [replace(trace, load_from=float(onset)) for onset in _onsets(trace, COARSE_ONSETS)]
+    fits = [best_of(loaded, suspect.structure, [suspect.parameters]) for loaded in tried]
+    best = int(np.argmin([fit.misfit for fit in fits]))
+    return _nearer(tried[best], fits[best])
+
+
+def _nearer(loaded: Trace, fit: Fit) -> Trace:
+    """The onset sought on ever finer grids, the plant refitted in between."""
+    trace = replace(loaded, load_from=None)
+    onsets = _onsets(trace, ONSETS)
     for _ in range(ONSET_ROUNDS):
-        explained = _explained(fitted(trace, fit.structure, fit.parameters), _loads(fit, at, onsets))
+        explained = _explained(fitted(trace, fit.structure, fit.parameters), _loads(fit, trace, onsets))
         onset, step = float(onsets[int(np.argmax(explained))]), float(onsets[1] - onsets[0])
         loaded = replace(trace, load_from=onset)
         fit = best_of(loaded, fit.structure, [fit.parameters])
-        onsets = np.linspace(max(onset - step, float(at[0])), min(onset + step, float(at[-1])), ONSETS)
+        onsets = np.linspace(onset - step, onset + step, ONSETS)
     return loaded
 
 
-def _loads(fit: Fit, at: Array, onsets: Array) -> Array:
+def _onsets(trace: Trace, count: int) -> Array:
+    """Instants at which a load may have changed; the very end would not show it."""
+    at = trace.stairs.sample_s
+    return np.linspace(float(at[0]), float(at[-1]), count, endpoint=False)
+
+
+def _loads(fit: Fit, trace: Trace, onsets: Array) -> Array:
     """PV's answer to a unit step of load: a row a sample, a column an onset."""
-    return np.asarray(step_responses(poles(fit.shape), at[:, None] - onsets)[0])
+    return np.asarray(step_responses(poles(fit.shape), trace.stairs.sample_s[:, None] - onsets)[0])
 
 
 def _explained(fit: Fit, columns: Array) -> Array:

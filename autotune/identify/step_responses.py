@@ -28,6 +28,7 @@ CIRCLE_POINTS = 8
 CIRCLE_RADIUS_RATIO = 0.2  # of the poles that nearly coincide: the mean is then exact to 1e-12
 NEAR_RATIO = 0.25  # poles that near count as one group
 SLOW_AGE = 0.5  # |p| t below which (e^(pt) - 1)/p is summed as a series
+SHORTEST_S = 1e-6  # where nothing was answered yet
 SERIES_TERMS = 12  # 0.5^12/12! = 5e-13 of the first
 
 
@@ -53,14 +54,14 @@ def responses(poles_per_s: ComplexArray, stairs: Staircase, dead_time_s: float) 
 
     The derivative of S_i with respect to the dead time is -S_(i+1).
     """
-    longest_s = max(float(stairs.sample_s[-1] - stairs.effect_s[0]), 1e-300)
+    longest_s = max(float(stairs.sample_s[-1] - stairs.effect_s[0]), SHORTEST_S)
     poles = _apart(_real_if_real(poles_per_s), longest_s)
     return _combined(poles, _staircase_modes(poles, stairs, dead_time_s, longest_s))
 
 
 def step_responses(poles_per_s: ComplexArray, age_s: Array) -> Array:
     """S_0 .. S_n, term by term as defined, at ages of any shape (the last axes of the answer); 0 before the step."""
-    longest_s = max(float(np.max(age_s)), 1e-300)
+    longest_s = max(float(np.max(age_s)), SHORTEST_S)
     poles = _apart(_real_if_real(poles_per_s), longest_s)
     power, phi, _ = _power_and_phi(poles, np.maximum(age_s, 0.0), longest_s)
     residue = _residue(poles)

@@ -114,3 +114,11 @@ def test_squares_and_the_next_step_are_the_derivatives(name: str) -> None:
     later, sooner = (responses(poles, STAIRS, 0.33 + sign * h).steps for sign in (1, -1))
     slope = (later[0] - sooner[0]) / (2 * h)
     assert -seen.steps[1] == pytest.approx(slope, abs=1e-4 * np.max(np.abs(slope)))
+
+
+def test_a_step_at_the_very_end_has_no_answer_yet() -> None:
+    at_s = np.linspace(0.0, 8.0, 20)
+    for poles in ([-1.0], [-1.0, -1.0], [-1.0 + 2.0j, -1.0 - 2.0j, -400.0, -400.0]):
+        seen = responses(np.array(poles, complex), Staircase(at_s, at_s[-1:], np.ones(1)), 0.0)
+        assert seen.steps[0] == pytest.approx(np.zeros(20), abs=1e-12)
+        assert step_responses(np.array(poles, complex), at_s - 8.0)[0] == pytest.approx(np.zeros(20), abs=1e-12)
