@@ -24,14 +24,16 @@ from statistics import median
 from pymodbus.client import AsyncModbusTcpClient
 from pymodbus.exceptions import ModbusException
 
+from autotune.config.load import load
 from autotune.errors import LinkError
 from autotune.experiment.phases import Phase
 from autotune.experiment.state import Stage
 from autotune.field import open_link
 from autotune.field.translate import sample_tags
 from autotune.service.testing import SupervisedTest
-from tests.faults.pair import network, why_no_networks
-from tests.system.bench import Change, bench_workplace, permission
+from autotune.service.workplace import Workplace, open_workplace
+from tests.faults.pair import Key, network, why_no_networks, write_config
+from tests.system.bench import NotMeasured, permission
 from tests.system.plant import LOOP, ROOT, SoftPlant, soft_plant
 
 TIMEOUT_S = 0.2
@@ -40,10 +42,10 @@ DEAD_AT_MOST_S = 1.2 * TIMEOUT_S
 CLOSED_AT_MOST_S = 0.05
 STOP_AT_MOST_SCANS = (TIMEOUT_S + 0.02 + SCAN_S) / SCAN_S + 2.0
 PATIENCE_S = 20.0
-QUICK_LINK: Sequence[Change] = (
-    ("request_timeout_s = 0.5", f"request_timeout_s = {TIMEOUT_S}"),
-    ("scan_s = 0.05\nwrite", f"scan_s = {SCAN_S}\nwrite"),
-    ("look_around_s = 0.6", "look_around_s = 0.4"),
+KEYS: Sequence[Key] = (
+    ("controller.bench", "request_timeout_s", TIMEOUT_S),
+    ("loop", "scan_s", SCAN_S),
+    ("loop.baseline", "look_around_s", 0.4),
 )
 
 Read = Callable[[], Awaitable[None]]
@@ -108,9 +110,15 @@ async def plant_at(cable: str | None) -> AsyncIterator[tuple[SoftPlant, str]]:
         await process.wait()
 
 
+def bench(folder: Path, host: str, port: int) -> Workplace:
+    """The bench's loop with this benchmark's timeout and scan."""
+    kept = open_workplace(load(write_config(folder, host, port, KEYS)), may_create=True)
+    return Workplace(kept.configuration, kept.store, estimator=NotMeasured())
+
+
 async def product(folder: Path, host: str, port: int) -> Read:
     """Our own link, as a test reads it."""
-    _, loop = bench_workplace(folder, port, (*QUICK_LINK, ('host = "127.0.0.1"', f'host = "{host}"')))
+    loop = bench(folder, host, port).loop(LOOP)
     link, tags = open_link(loop), sample_tags(loop)
     await link.connect()
 
@@ -182,10 +190,10 @@ async def scans_to_see_stop(folder: Path) -> float:
     """From ``fault plc-stop`` in TESTING to the end of the test's driving, in our scans."""
     loop_clock = asyncio.get_running_loop().time
     async with soft_plant() as plant:
-        workplace, loop = bench_workplace(folder, plant.port, QUICK_LINK)
+        workplace = bench(folder, "127.0.0.1", plant.port)
         await plant.press(f"enable {LOOP}")
         await plant.until(lambda state: state["enable"])
-        async with SupervisedTest(workplace, loop) as supervised:
+        async with SupervisedTest(workplace, workplace.loop(LOOP)) as supervised:
             await supervised.look(0.4)
             runner = supervised.prepare(is_no_guard_accepted=False)
             running = asyncio.ensure_future(supervised.run(permission()))

@@ -3,6 +3,7 @@
 import asyncio
 import json
 import os
+import re
 import signal
 import subprocess
 from collections.abc import AsyncIterator, Sequence
@@ -13,20 +14,47 @@ from typing import Any
 from tests.faults.evidence import PV_HIGH_EU, PV_LOW_EU, STEP_PCT, State
 from tests.faults.nursery import Nursery, Tool
 from tests.faults.wire import Wire
-from tests.system.bench import WITHOUT_GUARD, Change, write_bench
+from tests.system.bench import BENCH, WITHOUT_GUARD
 from tests.system.plant import LOOP, SoftPlant, soft_plant
 
 LOOK_EVERY_S = 0.03
 TYPED = f"{LOOP}\nbench permit 7\n"
 SMALL_DISK_KIB = 1536
 
-QUICK: Sequence[Change] = (
-    ("look_around_s = 0.6", "look_around_s = 0.3"),
-    ("hold_s = 1.2", "hold_s = 0.6"),
-    ("dead_time_s = 0.5", "dead_time_s = 0.25"),
-    ("pv_low_eu = 25.0\npv_high_eu = 75.0", f"pv_low_eu = {PV_LOW_EU}\npv_high_eu = {PV_HIGH_EU}"),
-    ("step_up_pct = 15.0\nstep_down_pct = 15.0", f"step_up_pct = {STEP_PCT}\nstep_down_pct = {STEP_PCT}"),
+Key = tuple[str, str, object]
+"""A key of the bench's file: its table, its name, and what it is to be."""
+
+QUICK: Sequence[Key] = (
+    ("controller.bench", "request_timeout_s", 0.4),
+    ("controller.bench", "connect_gap_s", 0.05),
+    ("loop", "scan_s", 0.05),
+    ("loop", "hand_back_within_s", 3.0),
+    ("loop", "recover_within_s", 60.0),
+    ("loop.baseline", "look_around_s", 0.3),
+    ("loop.baseline", "hold_s", 0.6),
+    ("loop.limits", "safe_without_view_s", 0.3),
+    ("loop.limits", "dead_time_s", 0.25),
+    ("loop.limits", "pv_low_eu", PV_LOW_EU),
+    ("loop.limits", "pv_high_eu", PV_HIGH_EU),
+    ("loop.limits", "step_up_pct", STEP_PCT),
+    ("loop.limits", "step_down_pct", STEP_PCT),
 )
+
+
+def write_config(folder: Path, host: str, port: int, keys: Sequence[Key], *, has_guard: bool = True) -> Path:
+    """The bench's configuration in ``folder``, with some of its keys set otherwise, for the plant at ``port``."""
+    text = BENCH.read_text("utf-8")
+    for old, new in () if has_guard else WITHOUT_GUARD:
+        assert text.count(old) == 1, f"{old!r} stands {text.count(old)} times in {BENCH.name}"
+        text = text.replace(old, new)
+    for table, name, setting in (*keys, ("controller.bench", "host", f'"{host}"'), ("controller.bench", "port", port)):
+        pattern = rf"(?ms)^(\[+{re.escape(table)}\]+\n(?:(?!^\[).)*?^{name} = )[^\n]*"
+        text, count = re.subn(pattern, rf"\g<1>{setting}", text, count=1)
+        assert count == 1, f"{BENCH.name} has no {name} in [{table}]"
+    folder.mkdir(parents=True, exist_ok=True)
+    file = folder / "bench.toml"
+    file.write_text(text, "utf-8")
+    return file
 
 
 class Pair:
@@ -126,8 +154,7 @@ async def pair(
         wire = Wire(plant.port)
         host = "127.0.0.1" if network is None else _address(network, 1)
         port = await wire.open(host)
-        changes = [*QUICK, *(() if has_guard else WITHOUT_GUARD), ('host = "127.0.0.1"', f'host = "{host}"')]
-        config = write_bench(folder, port, changes)
+        config = write_config(folder, host, port, QUICK, has_guard=has_guard)
         bench = Pair(nursery, plant, wire, config, network)
         if has_small_disk:
             bench.data_dir.mkdir()

@@ -366,6 +366,19 @@ async def test_a_fresh_connection_drops_the_former_one(peer: Peer) -> None:
         await link.read(["a"])
 
 
+async def test_an_answer_that_a_gateway_still_owes_to_the_former_connection_is_not_believed(peer: Peer) -> None:
+    async with link_to(peer, {"a": holding(0, DataType.UINT)}) as link:
+        peer.script.append(SILENT)
+        with pytest.raises(LinkTimeout):
+            await link.read(["a"])
+        owed = peer.frames[0][:4] + octets("00 05 11 03 02 00 07")
+        peer.script.append(sends_raw(owed))
+        await link.connect()
+        with pytest.raises(LinkClosed, match="no question of ours"):
+            await link.read(["a"])
+        assert [frame[:2] for frame in peer.frames] == [b"\0\1", b"\0\2"]
+
+
 async def test_a_cancelled_connect_leaves_the_link_closed(peer: Peer) -> None:
     link = open_link(at_endpoint(PLAIN, endpoint_of(peer, connect_gap_s=PATIENT_S)))
     await link.connect()

@@ -35,17 +35,18 @@ class Answer:
 class Connection(asyncio.Protocol):
     """Use as the protocol of ``loop.create_connection``, once; a lost connection is never revived.
 
-    ``device`` names the device in every error.
+    ``device`` names the device in every error.  ``transaction`` is the number of the last question, asked or not:
+    each question takes the next one.
     """
 
-    def __init__(self, device: str, device_id: int, timeout_s: float) -> None:
+    def __init__(self, device: str, device_id: int, timeout_s: float, transaction: int = 0) -> None:
         self._device = device
         self._device_id = device_id
         self._timeout_s = timeout_s
         self._framer = FramerSocket(DecodePDU(False))
         self._transport: asyncio.Transport | None = None
         self._received = b""
-        self._transaction = 0
+        self.transaction = transaction
         self._question: ModbusPDU | None = None
         self._reply: asyncio.Future[tuple[ModbusPDU, float]] | None = None
 
@@ -63,8 +64,8 @@ class Connection(asyncio.Protocol):
         if self._transport is None or not self.is_open:
             raise LinkClosed(f"{self._device} is not connected; nothing was sent")
         loop = asyncio.get_running_loop()
-        self._transaction = next_transaction(self._transaction)
-        question.transaction_id, question.dev_id = self._transaction, self._device_id
+        self.transaction = next_transaction(self.transaction)
+        question.transaction_id, question.dev_id = self.transaction, self._device_id
         frame = self._framer.buildFrame(question)
         self._question, self._reply = question, loop.create_future()
         sent_s = loop.time()

@@ -44,6 +44,7 @@ class ModbusLink:
         self._one_at_a_time = asyncio.Lock()
         self._plans: dict[tuple[str, ...], tuple[ReadRequest, ...]] = {}
         self._back_off = back_off or BackOff(endpoint.connect_gap_s)
+        self._transaction = 0
 
     @property
     def is_connected(self) -> bool:
@@ -118,11 +119,13 @@ class ModbusLink:
     def _drop(self) -> None:
         if self._connection is not None:
             self._connection.drop()
+            self._transaction = self._connection.transaction
             self._connection = None
 
     async def _open(self) -> Connection:
         endpoint = self._endpoint
-        connection = Connection(self._device, endpoint.device_id, endpoint.request_timeout_s)
+        # Numbered on from the last connection, so that an answer which a gateway still owes to that one fits nothing.
+        connection = Connection(self._device, endpoint.device_id, endpoint.request_timeout_s, self._transaction)
         try:
             async with asyncio.timeout(endpoint.request_timeout_s):
                 await asyncio.get_running_loop().create_connection(lambda: connection, endpoint.host, endpoint.port)
