@@ -6,7 +6,22 @@ from datetime import tzinfo
 from reportlab.lib.units import mm
 from reportlab.platypus import Flowable, Table
 
-from autotune.paper.layout import LABEL, ROOM, SMALL, STRONG, WARNING, bullets, gap, grid, looks, rows, text, together
+from autotune.paper.layout import (
+    LABEL,
+    NOTE,
+    ROOM,
+    SMALL,
+    STRONG,
+    WARNING,
+    TickBox,
+    bullets,
+    gap,
+    grid,
+    looks,
+    rows,
+    text,
+    together,
+)
 from autotune.paper.words import RESULTS, amount_of, both, exact, instant, person_line, shown
 from autotune.sheet.schema import Change, Recovery
 from autotune.sheet.store import StoredSheet
@@ -25,15 +40,15 @@ _CLOSING = (
 def addenda(stored: StoredSheet, zone: tzinfo) -> Iterator[Flowable]:
     """What was added after the sheet was closed, each with its own link of the chain; the sheet stays as it was."""
     for number, (entry, link) in enumerate(zip(stored.addenda, stored.entries[1:], strict=True), start=1):
-        yield gap(2)
-        yield text(f"Addendum {number}: {entry.kind}, {instant(entry.utc, zone)}, {person_line(entry.person)}", STRONG)
+        who_and_when = f"{entry.kind}, {instant(entry.utc, zone)}, {person_line(entry.person)}"
+        parts: list[Flowable] = [gap(2), text(f"Addendum {number}: {who_and_when}", STRONG)]
         if entry.text:
-            yield text(entry.text)
+            parts.append(text(entry.text))
         if isinstance(entry, Change):
-            yield from _change(entry, zone)
+            parts += _change(entry, zone)
         elif isinstance(entry, Recovery):
-            yield from _recovery(entry, stored)
-        yield text(f"entry {link.n} of the chain, hash {link.hash}", SMALL)
+            parts += _recovery(entry, stored)
+        yield together([*parts, text(f"entry {link.n} of the chain, hash {link.hash}", NOTE)])
 
 
 def _change(change: Change, zone: tzinfo) -> Iterator[Flowable]:
@@ -57,7 +72,7 @@ def _change(change: Change, zone: tzinfo) -> Iterator[Flowable]:
         ]
         yield grid(("time", "written", "number, in the setting's unit", "outcome", ""), written, figures=(2,))
     if change.op_bump_pct is not None:
-        yield text(f"The output moved by {shown(change.op_bump_pct, '% of OP span')} when the mode went back.", SMALL)
+        yield text(f"The output moved by {shown(change.op_bump_pct, '% of OP span')} when the mode went back.", NOTE)
 
 
 def _recovery(entry: Recovery, stored: StoredSheet) -> Iterator[Flowable]:
@@ -91,17 +106,17 @@ def record(stored: StoredSheet, head_hash: str) -> Iterator[Flowable]:
             ("Head of the archive", f"{head_hash} (when this was printed)"),
         ]
     )
-    yield text("Digests are SHA-256. 'autotune sheet verify' compares archive and head hash.", SMALL)
+    yield text("Digests are SHA-256. 'autotune sheet verify' compares archive and head hash.", NOTE)
 
 
-def closing_list() -> Iterator[Flowable]:
-    """To be ticked by hand; the program ticks nothing."""
-    table = Table([["", text(line)] for line in _CLOSING], colWidths=[6 * mm, ROOM - 6 * mm], rowHeights=5.4 * mm)
+def _closing_list() -> Iterator[Flowable]:
+    table = Table(
+        [[TickBox(), text(line)] for line in _CLOSING], colWidths=[6 * mm, ROOM - 6 * mm], rowHeights=5.4 * mm
+    )
     table.setStyle(
         looks(
             ("VALIGN", (0, 0), (-1, -1), "MIDDLE"),
-            *(("BOX", (0, n), (0, n), 0.8, "black") for n in range(len(_CLOSING))),
-            ("INNERGRID", (0, 0), (0, -1), 0.8, "black"),
+            ("LEFTPADDING", (0, 0), (0, -1), 1),
             ("BOTTOMPADDING", (1, 0), (1, -1), 2),
         )
     )
@@ -110,8 +125,8 @@ def closing_list() -> Iterator[Flowable]:
     yield table
 
 
-def signatures(stored: StoredSheet) -> Iterator[Flowable]:
-    """Three lines to sign, and what is signed."""
+def closing(stored: StoredSheet) -> Iterator[Flowable]:
+    """On one page: a list to be ticked by hand (the program ticks nothing), and three lines to sign."""
     count = len(stored.addenda)
     added = "no addenda" if count == 0 else f"{count} addend{'um' if count == 1 else 'a'}"
     lines = [[text(role, STRONG), "", "", ""] for role in ("Tested", "Witnessed", "Accepted")]
@@ -129,7 +144,9 @@ def signatures(stored: StoredSheet) -> Iterator[Flowable]:
     )
     yield together(
         [
-            text(f"Signed for this sheet of {stored.sheet.loop} with {added}, hash {stored.hash[:16]}…", SMALL),
+            *_closing_list(),
+            gap(8),
+            text(f"Signed for {stored.sheet.sheet_id}, {stored.sheet.outcome.ended}, with {added}:", STRONG),
             table,
             gap(2),
         ]

@@ -1,19 +1,21 @@
 """The first page of a printed sheet: which loop, how it ended, as found and as left."""
 
 import json
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterator, Mapping, Sequence
 from datetime import tzinfo
+from itertools import groupby
 from typing import Any
 
 from reportlab.platypus import Flowable, Table
 
 from autotune.paper.layout import (
-    ACCENT,
     LOOP,
+    NOTE,
+    OUTCOME,
     ROOM,
     SERVICE,
-    SMALL,
     STRONG,
+    STRONG_FIGURE,
     WARNING,
     band,
     beside,
@@ -22,6 +24,7 @@ from autotune.paper.layout import (
     grid,
     looks,
     rows,
+    side_by_side,
     text,
 )
 from autotune.paper.words import (
@@ -34,10 +37,15 @@ from autotune.paper.words import (
     person_line,
     shown,
     span_line,
+    to_eu,
     what_to_do,
 )
 from autotune.sheet.schema import AsFound, Change, Recovery, Sheet
 from autotune.sheet.store import StoredSheet
+
+_OUTCOME_WIDTH = 140.0
+_ROWS_BESIDE = 12
+"""A longer table of the operating point takes the whole width, where it can go on overleaf."""
 
 Described = Mapping[str, Any]
 
@@ -54,12 +62,13 @@ def described(sheet: Sheet) -> Described:
 def title(stored: StoredSheet) -> list[Flowable]:
     """The loop's name in large, the outcome beside it, and what nobody may miss below."""
     sheet = stored.sheet
-    outcome = Table([[text(sheet.outcome.ended, STRONG)], [text(sheet.outcome.code or "", SMALL)]])
-    loud = sheet.outcome.ended == "STRANDED"
-    outcome.setStyle(looks(("BOX", (0, 0), (-1, -1), 1.2, ACCENT if loud else "black")))
+    outcome = Table(
+        [[text(sheet.outcome.ended, OUTCOME)], [text(sheet.outcome.code or "", STRONG_FIGURE)]], [_OUTCOME_WIDTH]
+    )
+    outcome.setStyle(looks(("RIGHTPADDING", (0, 0), (-1, -1), 0)))
     head = Table(
         [[[text(sheet.loop, LOOP), text(sheet.service, SERVICE)], outcome]],
-        colWidths=[ROOM - 140.0, 140.0],
+        colWidths=[ROOM - _OUTCOME_WIDTH, _OUTCOME_WIDTH],
         splitInRow=1,
     )
     head.setStyle(
@@ -160,9 +169,38 @@ def as_found_as_left(stored: StoredSheet, zone: tzinfo) -> Iterator[Flowable]:
         yield text("The loop was never taken: there is no reading as found.")
         return
     yield gap()
-    yield grid(("operating point", "as found", "last reading of the test"), list(_operating_point(found, sheet)))
-    yield gap()
-    yield from _settings(found, newest_change(stored), zone)
+    points = list(_operating_point(found, sheet))
+    change = newest_change(stored)
+    if len(points) > _ROWS_BESIDE:
+        yield _point_grid(points, ROOM)
+        yield gap()
+        yield _settings_grid(found, change, ROOM)
+    else:
+        yield side_by_side([_point_grid(points, ROOM * 0.61)], [_settings_grid(found, change, ROOM * 0.38)])
+    if change is None:
+        yield text("This test changed none of the settings. They were not read again after it.", NOTE)
+    else:
+        yield text(
+            f"As left: {change.result}, read back {instant(change.utc, zone)}; {RESULTS[change.result]}.",
+            WARNING if change.result == "UNVERIFIED" else NOTE,
+        )
+
+
+def _point_grid(points: Sequence[tuple[str, str, str]], room: float) -> Flowable:
+    return grid(("operating point", "as found", "last reading of the test"), points, room=room)
+
+
+def _settings_grid(found: AsFound, change: Change | None, room: float) -> Flowable:
+    if not found.settings:
+        return text("Settings: not read.")
+    if change is None:
+        body = [(field.label, exact(field.amount), field.unit) for field in found.settings]
+        return grid(("settings", "as found", "unit"), body, figures=(1,), room=room)
+    left = change.read_back
+    compared = [
+        (field.label, exact(field.amount), exact(amount_of(left, field.name)), field.unit) for field in found.settings
+    ]
+    return grid(("settings", "as found", "as left", "unit"), compared, figures=(1, 2), room=room)
 
 
 def _operating_point(found: AsFound, sheet: Sheet) -> Iterator[tuple[str, str, str]]:
@@ -177,32 +215,12 @@ def _operating_point(found: AsFound, sheet: Sheet) -> Iterator[tuple[str, str, s
         ("Setpoint", found.sp_pct, found.sp_eu, sp_pct, pv_span),
         ("PV", found.pv_pct, found.pv_eu, pv_pct, pv_span),
     ):
-        later_eu = None if later_pct is None else span.low_eu + later_pct * (span.high_eu - span.low_eu) / 100.0
+        later_eu = None if later_pct is None else to_eu(later_pct, span)
         yield label, both(pct, eu, span), both(later_pct, later_eu, span)
     for column in samples.watch:
         known = [reading for reading in column.reading_eu if reading is not None]
         first, final = (known[0], known[-1]) if known else (None, None)
         yield f"watched: {column.name}", shown(first), shown(final)
-
-
-def _settings(found: AsFound, change: Change | None, zone: tzinfo) -> Iterator[Flowable]:
-    if not found.settings:
-        yield text("Settings: not read.")
-        return
-    if change is None:
-        body = [(field.label, exact(field.amount), "unchanged", field.unit) for field in found.settings]
-        yield grid(("settings", "as found", "as left", "unit"), body, figures=(1, 2))
-        yield text("This test changed none of the settings.", SMALL)
-        return
-    body = [
-        (field.label, exact(field.amount), exact(amount_of(change.read_back, field.name)), field.unit)
-        for field in found.settings
-    ]
-    yield grid(("settings", "as found", "as left", "unit"), body, figures=(1, 2))
-    yield text(
-        f"As left: {change.result}, read back {instant(change.utc, zone)}; {RESULTS[change.result]}.",
-        WARNING if change.result == "UNVERIFIED" else SMALL,
-    )
 
 
 def permission(sheet: Sheet, zone: tzinfo) -> Iterator[Flowable]:
@@ -214,10 +232,9 @@ def permission(sheet: Sheet, zone: tzinfo) -> Iterator[Flowable]:
             ("Permit, change no.", "." * 60 + " (by hand)"),
         ]
     )
-    yield text("Cautions accepted:")
-    yield from bullets(
-        f"{said.text} (accepted {said.utc.astimezone(zone):%H:%M:%S})" for said in sheet.cautions_accepted
-    )
+    for accepted, said in groupby(sheet.cautions_accepted, lambda one: f"{one.utc.astimezone(zone):%H:%M:%S}"):
+        yield text(f"Cautions accepted at {accepted}:", STRONG)
+        yield from bullets(one.text for one in said)
 
 
 def planned(sheet: Sheet) -> Iterator[Flowable]:
@@ -230,6 +247,7 @@ def planned(sheet: Sheet) -> Iterator[Flowable]:
             ("Excitation", f"{plan.kind}, first {plan.first_move}"),
             ("Steps", f"up {shown(plan.step_up_pct, '%')}, down {shown(plan.step_down_pct, op_unit)}"),
             ("Hysteresis", f"{hysteresis} (half-width)"),
+            *_rested(sheet),
             ("Wanted swing", _or_off(plan.wanted_swing_pct, pv_unit, "not asked for")),
             (
                 "Cycles",
@@ -244,8 +262,8 @@ def planned(sheet: Sheet) -> Iterator[Flowable]:
             ("Output", f"{shown(limits.op_low_pct, '%')} to {shown(limits.op_high_pct, op_unit)}"),
             ("Steps at most", f"up {shown(limits.step_up_pct, '%')}, down {shown(limits.step_down_pct, op_unit)}"),
             ("Output rate", _or_off(limits.op_rate_pct_per_s, "%/s")),
-            ("PV low", both(limits.pv_low_pct, _eu(limits.pv_low_pct, sheet), sheet.pv_span, 4)),
-            ("PV high", both(limits.pv_high_pct, _eu(limits.pv_high_pct, sheet), sheet.pv_span, 4)),
+            ("PV low", both(limits.pv_low_pct, to_eu(limits.pv_low_pct, sheet.pv_span), sheet.pv_span, 4)),
+            ("PV high", both(limits.pv_high_pct, to_eu(limits.pv_high_pct, sheet.pv_span), sheet.pv_span, 4)),
             ("PV rate", _or_off(limits.pv_rate_pct_per_s, "%/s")),
             ("PV deviation", _or_off(limits.pv_deviation_pct, pv_unit)),
             ("Test within", shown(limits.test_within_s, "s")),
@@ -258,9 +276,15 @@ def planned(sheet: Sheet) -> Iterator[Flowable]:
         yield grid(("watched", "from", "to", "otherwise"), body, figures=(1, 2))
 
 
+def _rested(sheet: Sheet) -> Iterator[tuple[str, str]]:
+    rested, span = sheet.rested, sheet.pv_span
+    if rested is None:
+        return
+    width_eu = abs(span.high_eu - span.low_eu) / 100.0
+    yield "in force", both(rested.hysteresis_pct, rested.hysteresis_pct * width_eu, span, 4)
+    yield "PV at rest", both(rested.reference_pct, to_eu(rested.reference_pct, span), span, 5)
+    yield "Noise, drift", f"sd {shown(rested.noise_pct, '%', 2)}, {shown(rested.drift_pct_per_s, '%/s', 2)}"
+
+
 def _or_off(number: float | None, unit: str, off: str = "switched off") -> str:
     return off if number is None else shown(number, unit)
-
-
-def _eu(pct: float, sheet: Sheet) -> float:
-    return sheet.pv_span.low_eu + pct * (sheet.pv_span.high_eu - sheet.pv_span.low_eu) / 100.0

@@ -23,15 +23,16 @@ ROOM = PAGE_WIDTH - LEFT - RIGHT
 ACCENT = Color(0.55, 0.0, 0.05)
 GREY = Color(0.38, 0.38, 0.38)
 RULE = Color(0.62, 0.62, 0.62)
-SHADE = Color(0.93, 0.93, 0.93)
+SHADE = Color(0.86, 0.86, 0.86)
 
 BODY = ParagraphStyle(
     "body", fontName=REGULAR, fontSize=9.2, leading=11.6, textColor=black, bulletFontName=REGULAR, splitLongWords=1
 )
 STRONG = ParagraphStyle("strong", parent=BODY, fontName=BOLD)
 SMALL = ParagraphStyle("small", parent=BODY, fontSize=8, leading=10)
+NOTE = ParagraphStyle("note", parent=SMALL, spaceBefore=3, spaceAfter=1)
+OUTCOME = ParagraphStyle("outcome", parent=BODY, fontName=BOLD, fontSize=15, leading=19, alignment=TA_RIGHT)
 LABEL = ParagraphStyle("label", parent=BODY, textColor=GREY)
-FIGURE = ParagraphStyle("figure", parent=BODY, alignment=TA_RIGHT)
 STRONG_FIGURE = ParagraphStyle("strong figure", parent=STRONG, alignment=TA_RIGHT)
 HEAD = ParagraphStyle("head", parent=BODY, fontName=BOLD, fontSize=8.2, leading=10)
 HEAD_FIGURE = ParagraphStyle("head figure", parent=HEAD, alignment=TA_RIGHT)
@@ -55,8 +56,8 @@ def looks(*commands: Any) -> TableStyle:
     return TableStyle([("FONTNAME", (0, 0), (-1, -1), REGULAR), *commands])
 
 
-def section(number: int, title: str, parts: Iterable[Flowable]) -> list[Flowable]:
-    """A numbered section; one without content is left out, a title never stands alone at a page's end."""
+def section(number: int, title: str, parts: Iterable[Flowable], needs: float = 32 * mm) -> list[Flowable]:
+    """A numbered section, begun where its page has the points it ``needs``; one without content is left out."""
     body = list(parts)
     if not body:
         return []
@@ -69,7 +70,7 @@ def section(number: int, title: str, parts: Iterable[Flowable]) -> list[Flowable
             ("BOTTOMPADDING", (0, 0), (-1, -1), 2),
         )
     )
-    return [Spacer(1, 9), CondPageBreak(32 * mm), heading, *body]
+    return [Spacer(1, 9), CondPageBreak(needs), heading, *body]
 
 
 def rows(pairs: Iterable[tuple[str, str]], room: float = ROOM, label_width: float = _LABEL_WIDTH) -> list[Flowable]:
@@ -113,18 +114,21 @@ def grid(
     body: Sequence[Sequence[str]],
     figures: Iterable[int] = (),
     strong: Iterable[int] = (),
+    style: ParagraphStyle = BODY,
     room: float = ROOM,
 ) -> Flowable:
     """A table under its titles, which come again on every page.
 
-    ``figures`` are the columns that stand at the right edge, ``strong`` the rows in bold.
+    ``figures`` are the columns that stand at the right edge, ``strong`` the rows in bold, ``style`` that of the rest.
     """
     right, bold = set(figures), set(strong)
+    plain = ParagraphStyle(f"{style.name} figure", parent=style, alignment=TA_RIGHT)
+    styles = {(False, False): style, (False, True): STRONG, (True, False): plain, (True, True): STRONG_FIGURE}
     table = LongTable(
         [
             [text(cell, HEAD_FIGURE if n in right else HEAD) for n, cell in enumerate(titles)],
             *(
-                [text(cell, _style(n in right, row in bold)) for n, cell in enumerate(cells)]
+                [text(cell, styles[n in right, row in bold]) for n, cell in enumerate(cells)]
                 for row, cells in enumerate(body)
             ),
         ],
@@ -163,12 +167,6 @@ def _width(told: str) -> float:
     return width_of(drawable(told), BOLD, BODY.fontSize)
 
 
-def _style(is_figure: bool, is_strong: bool) -> ParagraphStyle:
-    if is_figure:
-        return STRONG_FIGURE if is_strong else FIGURE
-    return STRONG if is_strong else BODY
-
-
 def band(lines: Sequence[str]) -> Flowable:
     """White on dark: what nobody may miss, also on a monochrome printer."""
     table = Table([[text(line, LOUD)] for line in lines], colWidths=[ROOM], splitInRow=1)
@@ -184,9 +182,39 @@ def band(lines: Sequence[str]) -> Flowable:
     return table
 
 
+def side_by_side(left: Sequence[Flowable], right: Sequence[Flowable]) -> Flowable:
+    """Two small things beside each other; both must fit on one page."""
+    table = Table([[list(left), list(right)]], colWidths=[ROOM * 0.62, ROOM * 0.38])
+    table.setStyle(
+        looks(
+            ("VALIGN", (0, 0), (-1, -1), "TOP"),
+            ("LEFTPADDING", (0, 0), (-1, -1), 0),
+            ("RIGHTPADDING", (0, 0), (-1, -1), 0),
+            ("TOPPADDING", (0, 0), (-1, -1), 0),
+        )
+    )
+    return table
+
+
 def together(parts: Iterable[Flowable]) -> Flowable:
     """Parts on one page where a page has room for them."""
     return KeepTogether(list(parts))
+
+
+class TickBox(Flowable):
+    """An empty square, to be ticked by hand."""
+
+    _EDGE = 3.4 * mm
+
+    def wrap(self, _width: float, _height: float) -> tuple[float, float]:
+        """Its size."""
+        return self._EDGE, self._EDGE
+
+    def draw(self) -> None:
+        """Draw it onto the page."""
+        self.canv.setStrokeColor(black)
+        self.canv.setLineWidth(0.8)
+        self.canv.rect(0, 0, self._EDGE, self._EDGE)
 
 
 def gap(points: float = 4.0) -> Flowable:

@@ -6,8 +6,8 @@ from datetime import tzinfo
 
 from reportlab.platypus import Flowable
 
-from autotune.paper.layout import SMALL, STRONG, bullets, gap, grid, text, together
-from autotune.paper.words import amount_of, both, exact, quantity, shown, to_eu
+from autotune.paper.layout import NOTE, SMALL, STRONG, bullets, gap, grid, text
+from autotune.paper.words import amount_of, exact, quantity, shown
 from autotune.sheet.schema import Findings, Proposal, Quantity, Sheet, Span, WriteLine
 
 LINES_AT_MOST = 150
@@ -27,10 +27,10 @@ def cycles(sheet: Sheet) -> Iterator[Flowable]:
         (
             str(n),
             f"{cycle.from_s:.1f}",
-            shown(cycle.period_s),
-            shown(cycle.pv_amplitude_pct),
-            shown(abs(cycle.pv_amplitude_pct * width_eu / 100.0)),
-            shown(cycle.amplitude_pct),
+            _even(cycle.period_s),
+            _even(cycle.pv_amplitude_pct),
+            _even(abs(cycle.pv_amplitude_pct * width_eu / 100.0)),
+            _even(cycle.amplitude_pct),
         )
         for n, cycle in enumerate(sheet.findings.cycles, start=1)
     ]
@@ -43,6 +43,11 @@ def cycles(sheet: Sheet) -> Iterator[Flowable]:
         "half step of OP, % of span",
     )
     yield grid(titles, body, figures=range(6))
+
+
+def _even(number: float) -> str:
+    """Four significant digits, zeros at the end as well, so that a column reads evenly."""
+    return f"{number:#.4g}".rstrip(".")
 
 
 def findings(sheet: Sheet) -> Iterator[Flowable]:
@@ -58,14 +63,14 @@ def findings(sheet: Sheet) -> Iterator[Flowable]:
             ("concluded", "with its interval"), [(one.label, quantity(one)) for one in found.concluded], strong=(0, 1)
         )
     if found.method:
-        yield text(f"By {found.method}; time from {found.time_base}.", SMALL)
+        yield text(f"By {found.method}; time from {found.time_base}.", NOTE)
     if found.because:
         yield gap(2)
-        yield text("Why the intervals are as wide as they are:")
+        yield text("Why the intervals are as wide as they are:", STRONG)
         yield from bullets(found.because)
     if found.cautions:
         yield gap(2)
-        yield text("Cautions:")
+        yield text("Cautions:", STRONG)
         yield from bullets(found.cautions)
     yield from _seen(found)
 
@@ -77,10 +82,10 @@ def _seen(found: Findings) -> Iterator[Flowable]:
     body = [
         (
             point.method,
-            shown(point.frequency_rad_per_s),
-            shown(point.gain),
+            _even(point.frequency_rad_per_s),
+            _even(point.gain),
             shown(100.0 * point.gain_sd_ratio, digits=2),
-            shown(point.phase_rad),
+            _even(point.phase_rad),
             shown(point.phase_sd_rad, digits=2),
         )
         for point in found.seen
@@ -100,11 +105,12 @@ def proposals(sheet: Sheet, written: frozenset[str]) -> Iterator[Flowable]:
     if offered:
         yield _side_by_side(sheet, offered, written)
         yield gap()
-    for one in offered:
-        yield together(_in_words(one))
+        in_words = [(one.name, f"{one.title}, after {one.source}. {_spoken(one)}") for one in offered]
+        yield grid(("proposal", "where it comes from, and what speaks against it"), in_words, style=SMALL)
     if refused:
-        yield text("Not proposed:")
-        yield from bullets((f"{one.title}: {one.not_proposed_because}" for one in refused), SMALL)
+        yield gap()
+        body = [(one.name, f"{one.title}: {one.not_proposed_because}") for one in refused]
+        yield grid(("not proposed", "because"), body, style=SMALL)
 
 
 def _side_by_side(sheet: Sheet, offered: Sequence[Proposal], written: frozenset[str]) -> Flowable:
@@ -144,12 +150,10 @@ def _figure(figures: Sequence[Quantity], name: str) -> str:
     return shown(amount_of(figures, name)) if any(one.name == name for one in figures) else ""
 
 
-def _in_words(one: Proposal) -> Iterator[Flowable]:
-    yield text(f"{one.name}: {one.title}", STRONG if one.is_recommended else SMALL)
-    rounded = (
-        "" if one.rounding_pct is None else f"; rounding changed a setting by at most {shown(one.rounding_pct, '%')}"
-    )
-    yield from bullets((f"after {one.source}{rounded}", *one.cautions), SMALL)
+def _spoken(one: Proposal) -> str:
+    rounded = one.rounding_pct is not None and one.rounding_pct > 0.0
+    note = (f"Rounding changed a setting by at most {shown(one.rounding_pct, '%')}.",) if rounded else ()
+    return " ".join((*one.cautions, *note))
 
 
 def events(sheet: Sheet, zone: tzinfo) -> Iterator[Flowable]:
@@ -190,8 +194,10 @@ def writes(sheet: Sheet, zone: tzinfo) -> Iterator[Flowable]:
         yield from _cut(len(listed))
     counted = Counter((write.tag, write.outcome) for write in sheet.writes)
     told = ", ".join(f"{tag} {count} x {outcome}" for (tag, outcome), count in counted.items())
-    yield gap(2)
-    yield text(f"Altogether {len(sheet.writes)} tags were written: {told}. The list has those that changed.", SMALL)
+    yield text(
+        f"Altogether {len(sheet.writes)} tags were written: {told}. The list has those that changed or did not land.",
+        NOTE,
+    )
 
 
 def _notable(lines: Sequence[WriteLine]) -> list[WriteLine]:
@@ -211,8 +217,3 @@ def _raw(write: WriteLine) -> str:
 def _cut(count: int) -> Iterator[Flowable]:
     if count > LINES_AT_MOST:
         yield text(f"{count - LINES_AT_MOST} more lines are in the export of this sheet as CSV and JSON.", STRONG)
-
-
-def signal(pct: float | None, span: Span) -> str:
-    """A reading in both units."""
-    return both(pct, None if pct is None else to_eu(pct, span), span)

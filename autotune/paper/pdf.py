@@ -4,9 +4,10 @@ The same sheets give the same file, byte for byte: its date is that of the newes
 """
 
 import io
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
 from datetime import UTC, datetime, tzinfo
+from typing import Any
 
 from reportlab.lib.units import mm
 from reportlab.pdfgen.canvas import Canvas
@@ -39,6 +40,8 @@ from autotune.sheet.schema import Change
 from autotune.sheet.store import StoredSheet
 
 _FOOT_AT = 11 * mm
+_NEEDS = 32 * mm
+_ROOM_NEEDED = {"Trend": 102 * mm, "Closing list and signatures": 118 * mm}
 
 
 def to_pdf(sheets: Sequence[StoredSheet], head_hash: str, zone: tzinfo = UTC) -> bytes:
@@ -68,21 +71,16 @@ def to_pdf(sheets: Sequence[StoredSheet], head_hash: str, zone: tzinfo = UTC) ->
     )
     named = [("index", numbers) for numbers in index] + [(str(n), numbers) for n, numbers in enumerate(numbering)]
     document.addPageTemplates([_template(name, numbers) for name, numbers in named])
-    newest = max(entry.utc for stored in sheets for entry in stored.addenda) if _has_addenda(sheets) else None
-    made = max([stored.sheet.ended_utc for stored in sheets] + ([] if newest is None else [newest]))
+    made = max(utc for one in sheets for utc in (one.sheet.ended_utc, *(entry.utc for entry in one.addenda)))
     document.build(story, canvasmaker=_canvas_maker(made))
     return file.getvalue()
 
 
-def _has_addenda(sheets: Sequence[StoredSheet]) -> bool:
-    return any(stored.addenda for stored in sheets)
-
-
-def _canvas_maker(made: datetime):  # type: ignore[no-untyped-def]
+def _canvas_maker(made: datetime) -> Callable[..., Canvas]:
     stamp = f"D:{made.astimezone(UTC):%Y%m%d%H%M%S}Z"
 
-    def make(*arguments: object, **options: object) -> Canvas:
-        canvas = Canvas(*arguments, **options)  # type: ignore[arg-type]
+    def make(*arguments: Any, **options: Any) -> Canvas:
+        canvas = Canvas(*arguments, **options)
         canvas.setDateFormatter(lambda *_: stamp)
         return canvas
 
@@ -103,20 +101,19 @@ def _sheet(stored: StoredSheet, head_hash: str, zone: tzinfo) -> list[Flowable]:
         ("Findings", measured.findings(sheet)),
         ("Cycles seen", measured.cycles(sheet)),
         ("Proposals", measured.proposals(sheet, written)),
-        ("What this test can't tell, and what that costs", bullets(sheet.costs)),
+        ("What this test can't tell, and what that costs", bullets(sheet.costs or ("nothing is recorded here",))),
         ("Permission and cautions", heading.permission(sheet, zone)),
         ("The test as planned, and its limits", heading.planned(sheet)),
         ("What happened", measured.events(sheet, zone)),
         ("What was written during the test", measured.writes(sheet, zone)),
         ("Added later; the sheet above is unchanged", closing.addenda(stored, zone)),
         ("Record", closing.record(stored, head_hash)),
-        ("Closing list", closing.closing_list()),
-        ("Signatures", closing.signatures(stored)),
+        ("Closing list and signatures", closing.closing(stored)),
     ]
     story: list[Flowable] = heading.title(stored)
     number = 0
     for title, body in parts:
-        laid = section(number + 1, title, body)
+        laid = section(number + 1, title, body, _ROOM_NEEDED.get(title, _NEEDS))
         number += bool(laid)
         story += laid
     return story

@@ -4,20 +4,21 @@ from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from datetime import datetime, timedelta, timezone, tzinfo
 
-from reportlab.lib.colors import Color, black
+from reportlab.lib.colors import Color, black, white
 from reportlab.lib.units import mm
 from reportlab.pdfgen.canvas import Canvas
+from reportlab.pdfgen.pathobject import PDFPathObject
 from reportlab.platypus import Flowable
 
 from autotune.paper.fonts import BOLD, REGULAR, cut_to, drawable, width_of
-from autotune.paper.layout import ACCENT, GREY, ROOM, RULE
+from autotune.paper.layout import ACCENT, GREY, ROOM, RULE, SHADE
 from autotune.paper.scales import Point, Scale, clock_ticks, runs, scale_for, thinned, ticks
 from autotune.paper.words import shown, to_eu
 from autotune.sheet.schema import EventLine, Sheet
 
-_HEIGHT = 104 * mm
+_HEIGHT = 93 * mm
 _LEFT, _RIGHT_EDGE = 34.0, ROOM - 28.0
-_OP_LOW, _OP_HIGH = 26.0, 26.0 + 27 * mm
+_OP_LOW, _OP_HIGH = 26.0, 26.0 + 24 * mm
 _PV_LOW, _PV_HIGH = _OP_HIGH + 13.0, _HEIGHT - 40.0
 _SMALL = 7.0
 _ROWS_OF_LABELS = 3
@@ -47,8 +48,9 @@ class Trend(Flowable):
         self._midnight = first.replace(hour=0, minute=0, second=0, microsecond=0)
         self._offset_s = (first - self._midnight).total_seconds()
         self._t0_s = sheet.samples.t_s[0]
-        first_s, last_s = (self._clock_s(sheet.samples.t_s[n]) for n in (0, -1))
-        self._time = Scale(first_s, max(last_s, first_s + 1.0), _LEFT, _RIGHT_EDGE)
+        shown_s = [*sheet.samples.t_s, *(event.t_s for event in sheet.events if event.kind == "phase")]
+        first_s, last_s = self._clock_s(min(shown_s)), self._clock_s(max(shown_s))
+        self._time = Scale(first_s, max(last_s, first_s + 0.1), _LEFT, _RIGHT_EDGE)
 
     def wrap(self, _width: float, _height: float) -> tuple[float, float]:
         """Its size."""
@@ -58,6 +60,7 @@ class Trend(Flowable):
         """Draw it onto the page."""
         pv, op = self._pv_scale(), self._op_scale()
         self._ground(pv, op)
+        self._hysteresis(pv)
         self._phases()
         self._levels(pv, self._pv_levels())
         self._levels(op, self._op_levels())
@@ -126,6 +129,16 @@ class Trend(Flowable):
             label = cut_to(drawable(f"{word}, {unit}"), _LEFT + 60.0, BOLD, _SMALL + 0.5)
             _word(canvas, 0, scale.at_high + 3.5, label, font=BOLD, size=_SMALL + 0.5)
 
+    def _hysteresis(self, scale: Scale) -> None:
+        """The band in which the relay does not switch, grey; PV at rest is its middle."""
+        rested, span = self._sheet.rested, self._sheet.pv_span
+        if rested is None:
+            return
+        edges = (rested.reference_pct - rested.hysteresis_pct, rested.reference_pct + rested.hysteresis_pct)
+        low, high = sorted(min(max(to_eu(pct, span), scale.low), scale.high) for pct in edges)
+        self.canv.setFillColor(SHADE)
+        self.canv.rect(_LEFT, scale.at(low), _RIGHT_EDGE - _LEFT, scale.at(high) - scale.at(low), stroke=0, fill=1)
+
     def _levels(self, scale: Scale, levels: Iterator[_Level]) -> None:
         canvas = self.canv
         for level in levels:
@@ -144,10 +157,13 @@ class Trend(Flowable):
         """A level that lies outside of what is shown is told at that edge, with an arrow."""
         canvas, is_above = self.canv, level.eu > scale.high
         edge, towards = (scale.at_high, 1.0) if is_above else (scale.at_low, -1.0)
-        told = drawable(f"{level.word} {shown(level.eu, self._unit_of(scale))}")
+        told = cut_to(drawable(f"{level.word} {shown(level.eu, self._unit_of(scale))}"), 200.0, REGULAR, 6.5)
         at = edge - towards * 6.0 - 2.4
         _arrow(canvas, _RIGHT_EDGE - 5.0, edge - towards * 1.5, towards, level.ink)
-        _word(canvas, _RIGHT_EDGE - 10.0, at + towards * 1.0, told, edge="right", ink=level.ink, size=6.5)
+        width = width_of(told, REGULAR, 6.5)
+        canvas.setFillColor(white)
+        canvas.rect(_RIGHT_EDGE - 12.0 - width, at - 1.5 + towards, width + 3.5, 8.0, stroke=0, fill=1)
+        _word(canvas, _RIGHT_EDGE - 10.0, at + towards, told, edge="right", ink=level.ink, size=6.5)
 
     def _unit_of(self, scale: Scale) -> str:
         return self._sheet.pv_span.unit if scale.at_low == _PV_LOW else self._sheet.op_span.unit
@@ -180,9 +196,9 @@ class Trend(Flowable):
             canvas.setStrokeColor(ink)
             canvas.setLineWidth(0.8 if event.kind == "trip" else 0.4)
             canvas.line(at, _OP_LOW, at, _PV_HIGH + 2.0)
-            told = drawable(_event_word(event))
+            told = cut_to(drawable(_event_word(event)), 100.0, REGULAR, 6.5)
             width = width_of(told, REGULAR, 6.5)
-            left = min(at, _RIGHT_EDGE + 26.0 - width)
+            left = min(at + 1.5, _RIGHT_EDGE + 26.0 - width)
             row = next((n for n, end in enumerate(ends) if left >= end + 3.0), None)
             if row is None:
                 continue
@@ -213,9 +229,8 @@ class Trend(Flowable):
             instant = self._midnight + timedelta(seconds=mark)
             told = f"{instant:%H:%M:%S}" if step_s >= 1.0 else f"{instant:%H:%M:%S.%f}"[:-5]
             _word(canvas, at, _OP_LOW - 11.0, told, edge="middle")
-        note = (
-            f"local time, {self._midnight:%Y-%m-%d}, UTC{_zone(self._midnight)}; wedges: written changes of the output"
-        )
+        day = f"local time, {self._midnight:%Y-%m-%d}, UTC{_zone(self._midnight)}"
+        note = f"{day}; wedges: written changes of the output; grey: hysteresis of the relay"
         _word(canvas, _LEFT, 1.5, drawable(note), ink=GREY)
 
 
@@ -237,13 +252,13 @@ def _eu(pct: float | None, low_eu: float, width_eu: float) -> float | None:
     return None if pct is None else low_eu + pct * width_eu / 100.0
 
 
-def _draw_run(path: object, points: Sequence[Point], *, is_held: bool) -> None:
+def _draw_run(path: PDFPathObject, points: Sequence[Point], *, is_held: bool) -> None:
     (x, y), *rest = points
-    path.moveTo(x, y)  # type: ignore[attr-defined]
+    path.moveTo(x, y)
     for at, height in rest:
         if is_held and height != y:
-            path.lineTo(at, y)  # type: ignore[attr-defined]
-        path.lineTo(at, height)  # type: ignore[attr-defined]
+            path.lineTo(at, y)
+        path.lineTo(at, height)
         y = height
 
 
