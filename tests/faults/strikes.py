@@ -171,6 +171,8 @@ async def second_master_asks(pair: Pair, rng: random.Random) -> None:
     for _ in range(rng.choice((1, 20))):
         await write_as_master(pair.plant.port, HOLDER_REQUEST_ADDRESS, (0, FOREIGN_TOKEN))
         await _lasts(pair, 0.02)
+        if (await pair.look())["holder"] == FOREIGN_TOKEN:  # the guard was free just then, and is theirs now
+            pair.taken["holder"] = FOREIGN_TOKEN
 
 
 async def change_mode(pair: Pair, _: random.Random) -> None:

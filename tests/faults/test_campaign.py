@@ -4,18 +4,32 @@
 """
 
 import asyncio
+from collections import Counter
 
 import pytest
 
 from tests.faults.campaign import Outcome, Run, Tally, campaign, described
 from tests.faults.evidence import End
-from tests.faults.moments import OF_A_TEST, OF_SETTINGS
+from tests.faults.moments import OF_A_TEST, OF_SETTINGS, Moment
 from tests.faults.strikes import FAULTS, Fault
 
 pytestmark = pytest.mark.socket
 
 PAIRS = 4
-RUNS = [Run(fault, fault.moments[index % len(fault.moments)], seed=index) for index, fault in enumerate(FAULTS)]
+
+
+def spread() -> list[Run]:
+    """Every fault once, each at that of its moments which was struck least so far."""
+    struck: Counter[Moment] = Counter()
+    runs = []
+    for seed, fault in enumerate(FAULTS):
+        moment = min(fault.moments, key=lambda one: struck[one])
+        struck[moment] += 1
+        runs.append(Run(fault, moment, seed))
+    return runs
+
+
+RUNS = spread()
 
 
 @pytest.fixture(scope="module")
