@@ -34,7 +34,7 @@ BEGUN = datetime(2026, 3, 2, 8, 0, tzinfo=UTC)
 """The instant at which virtual time begins."""
 BEGIN_S = 1.0
 """When the test begins, the plant being at rest."""
-AFTERWARDS_S = 3.0
+AFTERWARDS_S = 1.5
 """How long the plant runs on after it, so that what is late can still land."""
 
 
