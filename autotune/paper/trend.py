@@ -188,7 +188,7 @@ class Trend(Flowable):
 
     def _phases(self) -> None:
         """Lines where a phase began and where the test was tripped, with their words above."""
-        canvas, ends = self.canv, [0.0] * _ROWS_OF_LABELS
+        canvas, ends, labels = self.canv, [0.0] * _ROWS_OF_LABELS, list[tuple[float, float, str, Color]]()
         for event in self._sheet.events:
             if event.kind not in {"phase", "trip"} or not self._time.holds(self._clock_s(event.t_s)):
                 continue
@@ -205,6 +205,10 @@ class Trend(Flowable):
             ends[row] = left + width
             height = _PV_HIGH + 14.0 + 8.0 * row
             canvas.line(at, _PV_HIGH + 2.0, at, height - 1.0)
+            labels.append((left, height, told, ink))
+        for left, height, told, ink in labels:  # over all lines, so that none strikes through a word
+            canvas.setFillColor(white)
+            canvas.rect(left - 0.8, height - 1.2, width_of(told, REGULAR, 6.5) + 1.6, 7.4, stroke=0, fill=1)
             _word(canvas, left, height, told, ink=ink, size=6.5)
 
     def _switches(self) -> None:
@@ -230,7 +234,8 @@ class Trend(Flowable):
             told = f"{instant:%H:%M:%S}" if step_s >= 1.0 else f"{instant:%H:%M:%S.%f}"[:-5]
             _word(canvas, at, _OP_LOW - 11.0, told, edge="middle")
         day = f"local time, {self._midnight:%Y-%m-%d}, UTC{_zone(self._midnight)}"
-        note = f"{day}; wedges: written changes of the output; grey: hysteresis of the relay"
+        grey = "" if self._sheet.rested is None else "; grey: hysteresis of the relay"
+        note = f"{day}; wedges: written changes of the output{grey}"
         _word(canvas, _LEFT, 1.5, drawable(note), ink=GREY)
 
 

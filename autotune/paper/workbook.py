@@ -8,12 +8,13 @@ import io
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from datetime import UTC, datetime, tzinfo
+from operator import itemgetter
 
 import xlsxwriter
 
 from autotune.paper.words import amount_of, instant
-from autotune.sheet.schema import Quantity
-from autotune.sheet.store import AsLeft, SheetStore, StoredSheet
+from autotune.sheet.schema import Change, Quantity, Samples, Sheet
+from autotune.sheet.store import SheetStore, StoredSheet, newest_settings
 
 Cell = str | float | None
 LoopLine = tuple[str, str, str]
@@ -27,83 +28,81 @@ _EXCEL_BEGINS = datetime(1980, 1, 1, tzinfo=UTC)
 
 
 @dataclass(frozen=True, slots=True)
-class _Found:
-    settings: tuple[Quantity, ...]
-    utc: datetime
-    sheet_id: str
+class _Kept:
+    """What the workbook needs of a sheet: the sheet without its bulk, its hash, and its changes with their places."""
+
+    sheet: Sheet
+    hash: str
+    newest: datetime
+    entries: tuple[tuple[int, Sheet | Change], ...]
 
 
 def to_workbook(store: SheetStore, loops: Sequence[LoopLine], zone: tzinfo = UTC) -> bytes:
     """The workbook's file; ``loops`` are those of the configuration, those in the archive alone come after them."""
-    stored = [store.get(line.sheet_id) for line in store.list()]
+    kept = [_without_bulk(store.get(line.sheet_id)) for line in store.list()]
     file = io.BytesIO()
     book = xlsxwriter.Workbook(
         file, {"in_memory": True, "strings_to_formulas": False, "strings_to_urls": False, "strings_to_numbers": False}
     )
-    made = max((_newest(one) for one in stored), default=_EXCEL_BEGINS)
+    made = max((one.newest for one in kept), default=_EXCEL_BEGINS)
     book.set_properties({"title": "Loop settings", "created": made.astimezone(UTC).replace(tzinfo=None)})
-    _write(book, "settings", _SETTINGS, _settings_rows(store, stored, loops, zone))
-    _write(book, "tests", _TESTS, _test_rows(stored, zone))
-    _write(book, "about", ("what", ""), _about_rows(store))
+    _write(book, "settings", _SETTINGS, _settings_rows(kept, loops, zone))
+    _write(book, "tests", _TESTS, _test_rows(kept, zone))
+    _write(book, "about", ("what", ""), _about_rows(store.head_hash()))
     book.close()
     return file.getvalue()
 
 
-def _newest(stored: StoredSheet) -> datetime:
-    return max([stored.sheet.ended_utc, *(entry.utc for entry in stored.addenda)])
+def _without_bulk(stored: StoredSheet) -> _Kept:
+    """One sheet at a time: an archive of long tests would not fit into memory."""
+    bare = stored.sheet.model_copy(update={"samples": Samples(), "writes": (), "events": ()})
+    places = [link.n for link in stored.entries]
+    changes = [(n, entry) for n, entry in zip(places[1:], stored.addenda, strict=True) if isinstance(entry, Change)]
+    newest = max([bare.ended_utc, *(entry.utc for entry in stored.addenda)])
+    return _Kept(bare, stored.hash, newest, ((places[0], bare), *changes))
 
 
-def _settings_rows(
-    store: SheetStore, stored: Sequence[StoredSheet], loops: Sequence[LoopLine], zone: tzinfo
-) -> Iterator[Sequence[Cell]]:
-    for name, service, unit in _with_archived(loops, stored):
-        found, left = _first_found(stored, name), store.as_left(name)
-        if found is None and left is None:
+def _settings_rows(kept: Sequence[_Kept], loops: Sequence[LoopLine], zone: tzinfo) -> Iterator[Sequence[Cell]]:
+    for name, service, unit in _with_archived(loops, kept):
+        own = sorted((entry for one in kept if one.sheet.loop == name for entry in one.entries), key=itemgetter(0))
+        left = newest_settings((entry for _, entry in reversed(own)), None)
+        found = next((one.sheet for one in kept if one.sheet.loop == name and _settings_found(one.sheet)), None)
+        if found is None or left is None:
             yield (name, service, unit, "no settings in the archive")
             continue
-        for field in left.settings if left is not None and left.settings else () if found is None else found.settings:
+        for field in _settings_found(found):
             yield (
                 name,
                 service,
                 unit,
                 field.label,
                 field.unit,
-                None if found is None else amount_of(found.settings, field.name),
-                None if left is None else amount_of(left.settings, field.name),
-                _left_by(left),
-                None if found is None else instant(found.utc, zone),
-                None if found is None else found.sheet_id,
-                None if left is None else instant(left.utc, zone),
-                None if left is None else left.sheet_id,
+                field.amount,
+                amount_of(left.settings, field.name),
+                "as a test found them" if left.origin == "AS_FOUND" else left.origin,
+                instant(found.started_utc, zone),
+                found.sheet_id,
+                instant(left.utc, zone),
+                left.sheet_id,
             )
 
 
-def _with_archived(loops: Sequence[LoopLine], stored: Sequence[StoredSheet]) -> list[LoopLine]:
+def _settings_found(sheet: Sheet) -> tuple[Quantity, ...]:
+    return () if sheet.as_found is None else sheet.as_found.settings
+
+
+def _with_archived(loops: Sequence[LoopLine], kept: Sequence[_Kept]) -> list[LoopLine]:
     known = {name for name, _, _ in loops}
     archived = {
         one.sheet.loop: (one.sheet.loop, one.sheet.service, one.sheet.unit)
-        for one in stored
+        for one in kept
         if one.sheet.loop not in known
     }
     return [*loops, *archived.values()]
 
 
-def _first_found(stored: Sequence[StoredSheet], loop: str) -> _Found | None:
-    for one in stored:
-        found = one.sheet.as_found
-        if one.sheet.loop == loop and found is not None and found.settings:
-            return _Found(found.settings, one.sheet.started_utc, one.sheet.sheet_id)
-    return None
-
-
-def _left_by(left: AsLeft | None) -> str:
-    if left is None:
-        return "not known"
-    return {"AS_FOUND": "as a test found them"}.get(left.origin, left.origin)
-
-
-def _test_rows(stored: Sequence[StoredSheet], zone: tzinfo) -> Iterator[Sequence[Cell]]:
-    for one in stored:
+def _test_rows(kept: Sequence[_Kept], zone: tzinfo) -> Iterator[Sequence[Cell]]:
+    for one in kept:
         sheet = one.sheet
         yield (
             sheet.loop, sheet.sheet_id, instant(sheet.started_utc, zone), sheet.outcome.ended, sheet.outcome.code,
@@ -111,12 +110,12 @@ def _test_rows(stored: Sequence[StoredSheet], zone: tzinfo) -> Iterator[Sequence
         )  # fmt: skip
 
 
-def _about_rows(store: SheetStore) -> Iterator[Sequence[Cell]]:
+def _about_rows(head_hash: str) -> Iterator[Sequence[Cell]]:
     yield ("as found", "what the first test of the loop in this archive met")
     yield ("as left", "the newest read-back of a write or restore, or what the newest test met")
     yield ("UNVERIFIED", "the settings could not be read back: look at the controller's own panel")
     yield ("empty cell", "not known")
-    yield ("head hash of the archive", store.head_hash())
+    yield ("head hash of the archive", head_hash)
 
 
 def _write(book: xlsxwriter.Workbook, name: str, titles: Sequence[str], rows: Iterator[Sequence[Cell]]) -> None:

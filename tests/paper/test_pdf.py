@@ -289,6 +289,7 @@ def test_a_test_without_samples_findings_or_as_found_still_makes_a_paper() -> No
                  "nothing is recorded here"):  # fmt: skip
         assert line in told
     assert "None" not in told
+    assert "hysteresis of the relay" not in told
     assert stays_on_the_page(pdf)
 
 
