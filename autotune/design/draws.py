@@ -8,7 +8,7 @@ from numpy.typing import NDArray
 
 from autotune.design.held import held_plant
 from autotune.design.loop_grid import SeenPlant
-from autotune.design.margins import turns_say_stable
+from autotune.design.margins import rows_say_stable
 from autotune.identify.model import ModelWithDraws
 
 Array = NDArray[np.float64]
@@ -20,18 +20,14 @@ class DrawsOnGrid:
     """Each draw's response on the grid of the best estimate (rows), its integrators and its weight."""
 
     responses: Complex
-    integrators: tuple[int, ...]
+    integrators: NDArray[np.int_]
     shares: Array
 
     def peak_sensitivities(self, controller: Complex, block_integrators: int) -> Array:
         """Ms of each draw under C(jw); infinite where the loop is unstable."""
         loops = self.responses * controller
         peaks = 1.0 / np.min(np.abs(1.0 + loops), axis=1)
-        stable = [
-            turns_say_stable(loop, plant + block_integrators)
-            for loop, plant in zip(loops, self.integrators, strict=True)
-        ]
-        return np.where(stable, peaks, inf)
+        return np.where(rows_say_stable(loops, self.integrators + block_integrators), peaks, inf)
 
 
 def draws_on_grid(model: ModelWithDraws, plant: SeenPlant) -> DrawsOnGrid:
@@ -45,7 +41,7 @@ def draws_on_grid(model: ModelWithDraws, plant: SeenPlant) -> DrawsOnGrid:
     shares = np.array(model.weights or [1.0] * len(draws), dtype=np.float64)
     return DrawsOnGrid(
         np.array(responses),
-        tuple(len(draw.denominator) - len(np.trim_zeros(draw.denominator, "b")) for draw in draws),
+        np.array([len(draw.denominator) - len(np.trim_zeros(draw.denominator, "b")) for draw in draws]),
         shares / np.sum(shares),
     )
 

@@ -70,6 +70,7 @@ class ForecastBench:
     bench: LoopBench
     draws: DrawsOnGrid
     drawn: tuple[HeldPlant, ...]
+    drawn_scan_s: float
     drawn_at: tuple[int, ...]
     noise_pct: float | None
     dead_band_pct: float | None
@@ -98,7 +99,7 @@ def forecast_bench(
         held_plant(model.draws[i], times * scan_s, max(-model.draws[i].dead_time_s, plant.op_delay_s - excess_s))
         for i in chosen
     )
-    return ForecastBench(bench, draws, drawn, chosen, noise_pct, dead_band_pct)
+    return ForecastBench(bench, draws, drawn, times * scan_s, chosen, noise_pct, dead_band_pct)
 
 
 def forecast(ready: ForecastBench, settings: PidSettings) -> Forecast | Refusal:
@@ -151,11 +152,12 @@ def _drawn_bands(ready: ForecastBench, settings: PidSettings, peaks: Array, best
     """Overshoot, setpoint IAE, load peak and load IAE over the stable ones among the chosen draws."""
     rows, shares = [], []
     lasting = _lasting_pct_s(settings)
+    equation = block_equation(ready.bench.block, settings, ready.drawn_scan_s)
     for held, at in zip(ready.drawn, ready.drawn_at, strict=True):
         if not np.isfinite(peaks[at]):
             continue
         scans = horizon_scans(held.scan_s, ready.bench.period_s, settings.integral_time_s)
-        after_sp, after_load = pv_after_steps(held, block_equation(ready.bench.block, settings, held.scan_s), scans)
+        after_sp, after_load = pv_after_steps(held, equation, scans)
         seen, signed = held.scan_s * float(np.sum(np.abs(after_load))), held.scan_s * float(np.sum(after_load))
         rows.append(
             (

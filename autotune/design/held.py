@@ -47,7 +47,7 @@ class HeldPlant:
 
 def held_plant(model: ProcessModel, scan_s: float, op_delay_s: float = 0.0) -> HeldPlant:
     """What a block that runs once in ``scan_s`` sees; ``op_delay_s`` is from reading PV to OP's effect."""
-    delay_scans, fraction_s = whole_scans(model.dead_time_s + op_delay_s, scan_s)
+    delay_scans, fraction_s = _whole_scans(model.dead_time_s + op_delay_s, scan_s)
     phi_f, gamma_f = exponential(model, fraction_s, scan_s)
     phi_r, gamma_r = exponential(model, scan_s - fraction_s, scan_s)
     output = output_row(model, scan_s)
@@ -66,7 +66,7 @@ def held_plant(model: ProcessModel, scan_s: float, op_delay_s: float = 0.0) -> H
     return HeldPlant(scan_s, delay_scans, numerator, denominator, np.expm1(poles_per_scan))
 
 
-def whole_scans(delay_s: float, scan_s: float) -> tuple[int, float]:
+def _whole_scans(delay_s: float, scan_s: float) -> tuple[int, float]:
     """(q, f): whole scans in a delay and what is left, 0 <= f < h."""
     scans = delay_s / scan_s
     whole = floor(scans + _WHOLE_SCAN_RATIO)

@@ -104,12 +104,18 @@ def turns_say_stable(loop: Complex, integrators: int) -> bool:
     ``loop`` is L on a grid from far below the loop's own frequencies to pi/h (or to where it has died away), fine
     enough that nothing turns by 180 degrees between two points.  Plant and block are otherwise stable.
     """
-    angle = np.unwrap(np.angle(1.0 + loop))
+    return bool(rows_say_stable(loop[None, :], np.array([integrators]))[0])
+
+
+def rows_say_stable(loops: Complex, integrators: NDArray[np.int_]) -> NDArray[np.bool_]:
+    """``turns_say_stable`` of each row."""
+    around = 1.0 + loops
+    angle = np.angle(around[:, 0])
+    turned = np.sum(np.angle(around[:, 1:] * np.conj(around[:, :-1])), axis=1)
     # Each integrator starts 90 degrees lower: two of them along the negative axis, where a hair decides on which side
     # of the cut the angle lies.
-    start = -integrators * pi / 2.0
-    turns = round((start - float(angle[0])) / (2.0 * pi))
-    return abs(float(angle[-1]) + 2.0 * pi * turns) < 1.5
+    turns = np.round((-integrators * pi / 2.0 - angle) / (2.0 * pi))
+    return np.asarray(np.abs(angle + turned + 2.0 * pi * turns) < 1.5)
 
 
 def _controller(terms: BlockTerms, settings: PidSettings) -> Complex:

@@ -58,10 +58,10 @@ def cohen_coon_pid(m: Fotd) -> Terms:
     return gain, dead_s * (32.0 + 6.0 * r) / (13.0 + 8.0 * r), 4.0 * dead_s / (11.0 + 2.0 * r)
 
 
-def chien_hrones_reswick(m: Fotd, gain: float, ti: tuple[float, float] | None, td_ratio: float | None) -> Terms:
+def chien_hrones_reswick(m: Fotd, gain: float, ti_ratio: tuple[float, float] | None, td_ratio: float | None) -> Terms:
     """Chien, Hrones and Reswick 1952: gain over a = K L/T; Ti is (share of T, share of L): setpoint rules take T."""
     intercept = m.process_gain * m.dead_time_s / m.time_constant_s
-    ti_s = None if ti is None else ti[0] * m.time_constant_s + ti[1] * m.dead_time_s
+    ti_s = None if ti_ratio is None else ti_ratio[0] * m.time_constant_s + ti_ratio[1] * m.dead_time_s
     return gain / intercept, ti_s, _times(td_ratio, m.dead_time_s)
 
 

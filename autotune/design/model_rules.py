@@ -126,7 +126,7 @@ def _chr(
     return _step(
         f"chr-{aim}-{percent}-{letters.lower()}",
         f"Chien-Hrones-Reswick {aim} {percent} % {letters}",
-        partial(laws.chien_hrones_reswick, gain=gain, ti=ti, td_ratio=td),
+        partial(laws.chien_hrones_reswick, gain=gain, ti_ratio=ti, td_ratio=td),
         f"{_CHR}, {aim}, {percent} % overshoot, {letters}",
         f"{'setpoint changes' if purpose is FOLLOW else 'upsets'} with about {percent} % overshoot",
         purpose,

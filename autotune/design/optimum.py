@@ -132,8 +132,8 @@ def best_pid(bench: LoopBench, limits: LoopLimits, pi: Found, near: PidSettings 
     if near is not None and near.integral_time_s and near.derivative_time_s:
         best = np.log([near.integral_time_s, near.derivative_time_s])
     else:
-        _, best = min((least_by_simplex(cost, start) for start in starts), key=lambda pair: pair[0])
-    _, x = least_by_simplex(cost, best, size_ratio=0.1)
+        best = min((least_by_simplex(cost, start) for start in starts), key=cost)
+    x = least_by_simplex(cost, best, size_ratio=0.1)
     iae_pct_s, gain = _with_times(bench, limits, exp(x[0]), exp(x[1]))
     pid = Found(PidSettings(bench.block.form, gain, exp(x[0]), exp(x[1])), iae_pct_s)
     return min(pid, pi, key=lambda found: found.iae_pct_s)
@@ -202,7 +202,7 @@ def _golden(function: Callable[[float], float], low: float, high: float) -> floa
 
 def least_by_simplex(
     function: Callable[[Array], float], start: Array, size_ratio: float = 0.4, turns: int = _PID_TURNS_AT_MOST
-) -> tuple[float, Array]:
+) -> Array:
     """Nelder and Mead from a simplex of the given size (in logarithms)."""
     corners = np.vstack([start, start + size_ratio * np.eye(len(start))])
     search: Any = minimize  # its stubs don't know "initial_simplex"
@@ -212,4 +212,4 @@ def least_by_simplex(
         method="Nelder-Mead",
         options={"initial_simplex": corners, "maxfev": turns, "xatol": 3e-3, "fatol": 1e-12},
     )
-    return float(result.fun), np.asarray(result.x)
+    return np.asarray(result.x, dtype=np.float64)

@@ -225,40 +225,37 @@ def _halved(factors: _Factors, order: int) -> Fotd | Sotd | Ipdt | Refusal:
     low = _settled(factors, order, bare_s)
     high = _settled(factors, order, bare_s + sum(lag for lag in factors.lags_s[1:] if isfinite(lag)))
     if isinstance(low, Refusal) or isinstance(high, Refusal):
-        return high if isinstance(low, Refusal) else low
-    if low == high:
-        return low
-    points = [ratio * 1j / max(low.dead_time_s, high.dead_time_s) for ratio in _COMPARED_RATIOS]
-    return min(
-        low,
-        high,
-        key=lambda reduced: sum(abs(_response(reduced, s) / _response_of_factors(factors, s) - 1.0) for s in points),
-    )
+        return _named(high if isinstance(low, Refusal) else low, order)
+    points = [ratio * 1j / (max(low.dead_time_s, high.dead_time_s) or 1.0) for ratio in _COMPARED_RATIOS]
+
+    def misfit(reduced: _Factors) -> float:
+        return sum(abs(_response(reduced, s) / _response(factors, s) - 1.0) for s in points)
+
+    return _named(min(low, high, key=misfit), order)
+
+
+def _named(reduced: _Factors | Refusal, order: int) -> Fotd | Sotd | Ipdt | Refusal:
+    if isinstance(reduced, Refusal):
+        return reduced
+    gain, dead_time_s = reduced.gain, reduced.dead_time_s
+    first_s, second_s = (*reduced.lags_s, 0.0)[:2]
+    if first_s == inf:
+        return Ipdt(gain, second_s, dead_time_s)
+    return Fotd(gain, first_s, dead_time_s) if order == 1 else Sotd(gain, first_s, second_s, dead_time_s)
 
 
 def _bare_dead_time_s(factors: _Factors) -> float:
     return factors.dead_time_s + sum(-zero for zero in factors.zeros_s if zero < 0.0)
 
 
-def _settled(factors: _Factors, order: int, dead_time_s: float, turns: int = _TURNS) -> Fotd | Sotd | Ipdt | Refusal:
+def _settled(factors: _Factors, order: int, dead_time_s: float, turns: int = _TURNS) -> _Factors | Refusal:
     reduced = _reduced(*_without_zeros(factors, dead_time_s), _bare_dead_time_s(factors), order)
     if isinstance(reduced, Refusal) or reduced.dead_time_s == dead_time_s or turns == 0:
         return reduced
     return _settled(factors, order, reduced.dead_time_s, turns - 1)
 
 
-def _response(reduced: Fotd | Sotd | Ipdt, s: complex) -> complex:
-    match reduced:
-        case Fotd(gain, lag_s, dead_time_s):
-            return gain * exp(-dead_time_s * s) / (1.0 + lag_s * s)
-        case Sotd(gain, lag_s, second_s, dead_time_s):
-            return gain * exp(-dead_time_s * s) / ((1.0 + lag_s * s) * (1.0 + second_s * s))
-        case _:
-            gain_per_s, second_s = reduced.process_gain_per_s, reduced.second_time_constant_s
-            return gain_per_s * exp(-reduced.dead_time_s * s) / (s * (1.0 + second_s * s))
-
-
-def _response_of_factors(factors: _Factors, s: complex) -> complex:
+def _response(factors: _Factors, s: complex) -> complex:
     response = factors.gain * exp(-factors.dead_time_s * s)
     for zero_s in factors.zeros_s:
         response *= 1.0 + zero_s * s
@@ -267,18 +264,14 @@ def _response_of_factors(factors: _Factors, s: complex) -> complex:
     return response
 
 
-def _reduced(gain: float, lags_s: list[float], bare_s: float, order: int) -> Fotd | Sotd | Ipdt | Refusal:
+def _reduced(gain: float, lags_s: list[float], bare_s: float, order: int) -> _Factors | Refusal:
     if not lags_s:
         return _no_half_rule("no lag is left beside the dead time")
     kept, rest = lags_s[:order], lags_s[order:]
     half_s = rest[0] / 2.0 if rest else 0.0
-    dead_time_s = bare_s + half_s + sum(rest[1:])
     kept[-1] += half_s
     kept.sort(reverse=True)
-    second_s = kept[1] if len(kept) > 1 else 0.0
-    if kept[0] == inf:
-        return Ipdt(gain, second_s, dead_time_s)
-    return Fotd(gain, kept[0], dead_time_s) if order == 1 else Sotd(gain, kept[0], second_s, dead_time_s)
+    return _Factors(gain, tuple(kept), (), bare_s + half_s + sum(rest[1:]))
 
 
 def _without_zeros(factors: _Factors, dead_time_s: float) -> tuple[float, list[float]]:

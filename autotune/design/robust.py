@@ -178,10 +178,8 @@ def _following(bench: LoopBench, limits: LoopLimits, start: Found) -> Found:
 
     def settings_of(x: Array) -> PidSettings | None:
         td_s = exp(x[2]) if len(x) > 2 else None
-        if exp(x[1]) > LONGEST_INTEGRAL_RATIO * bench.period_s:
-            return None
-        top = admissible_gain(bench, limits, exp(x[1]), td_s)
-        if top is None:
+        is_too_long = exp(x[1]) > LONGEST_INTEGRAL_RATIO * bench.period_s
+        if is_too_long or (top := admissible_gain(bench, limits, exp(x[1]), td_s)) is None:
             return None
         return PidSettings(bench.block.form, min(exp(x[0]), top), exp(x[1]), td_s)
 
@@ -195,7 +193,7 @@ def _following(bench: LoopBench, limits: LoopLimits, start: Found) -> Found:
     first = start.settings
     times = [first.integral_time_s or bench.period_s, *([first.derivative_time_s] if first.derivative_time_s else [])]
     x = np.log([first.controller_gain, *times])
-    _, x = least_by_simplex(cost, x, turns=_FOLLOW_TURNS)
+    x = least_by_simplex(cost, x, turns=_FOLLOW_TURNS)
     settings = settings_of(x) or first
     return Found(settings, iae_pct_s(bench, settings))
 

@@ -261,6 +261,17 @@ def test_the_least_error_after_an_upset_is_for_regulate() -> None:
     )
 
 
+@pytest.mark.parametrize("purpose", [Purpose.FOLLOW, Purpose.GENTLE])
+def test_an_integrating_loop_gets_times_within_reach(purpose: Purpose) -> None:
+    """Without overshoot an integrator would like no integral at all; and a short one leaves no admissible gain."""
+    model = plant(1.0, gain=0.3, dead_time_s=1.0, integrators=1)
+    bench = _bench(model)
+    found = robust_optimum(bench, draws_on_grid(ModelWithDraws(model), bench.plant), purpose, Caution.BRISK)
+    assert isinstance(found, RobustOptimum)
+    assert (found.settings.integral_time_s or inf) <= 60.0 * bench.period_s
+    assert keeps(bench, LoopLimits(1.401, 1.401), found.settings)
+
+
 def test_derivative_is_chosen_by_what_it_buys_and_that_is_said() -> None:
     _, _, lagging = _optimum(Purpose.REGULATE)
     assert lagging.settings.derivative_time_s is not None
