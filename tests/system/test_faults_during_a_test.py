@@ -23,10 +23,12 @@ pytestmark = pytest.mark.socket
 QUICK: tuple[Change, ...] = (
     ("look_around_s = 0.6", "look_around_s = 0.3"),
     ("hold_s = 1.2", "hold_s = 0.8"),
-    ("scan_s = 0.05\nwrite", "scan_s = 0.1\nwrite"),
+    ("request_timeout_s = 0.5", "request_timeout_s = 0.9"),
     ("timeout_s = 1.0", "timeout_s = 2.0"),
 )
-UNHURRIED = (*QUICK[:2], ("scan_s = 0.05\nwrite", "scan_s = 0.2\nwrite"), QUICK[3])  # between two steps of a hand-back
+SCANS: tuple[Change, ...] = (("scan_s = 0.05\nwrite", "scan_s = 0.1\nwrite"),)
+UNHURRIED: tuple[Change, ...] = (("scan_s = 0.05\nwrite", "scan_s = 0.2\nwrite"),)
+"""Scans with time between two steps of a hand-back."""
 PATIENT_GUARD: tuple[Change, ...] = (("timeout_s = 1.0", "timeout_s = 2.0"),)
 SCANS_AFTER = 20
 
@@ -173,9 +175,15 @@ STRIKES: dict[str, Strike] = {
 }
 
 
+UNANSWERED = (kill, freeze_for_good, lose_all_requests)
+"""After these nothing can be shown any more: the hand-back uses up all its time."""
+
+
 async def happens(folder: Path, moment: Moment, strike: Strike) -> Story:
     async with soft_plant(rig_with(folder, PATIENT_GUARD)) as plant:
-        changes = UNHURRIED if moment is is_giving_back else QUICK
+        changes = (*QUICK, *(UNHURRIED if moment is is_giving_back else SCANS))
+        if strike not in UNANSWERED:
+            changes = (*changes, ("hand_back_within_s = 3.0", "hand_back_within_s = 10.0"))
         workplace, loop = bench_workplace(folder, plant.port, changes)
         await plant.press(f"enable {LOOP}")
         found = await plant.until(lambda state: state["enable"])

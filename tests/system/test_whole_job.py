@@ -26,7 +26,7 @@ class Job:
 
 async def rehearsed(folder: Path) -> Job:
     kept = folder / "records"
-    ran = await run("rehearse", "--scripted-operator", "--json", "--keep", kept, patience_s=150.0)
+    ran = await run("rehearse", "--scripted-operator", "--json", "--keep", kept, patience_s=300.0)
     store = SqliteStore(kept / "sheets.sqlite")
     return Job(ran, store.get(ran.answer["sheet"]), len(store.verify()))
 
