@@ -84,5 +84,16 @@ class SheetError(AutotuneError):
     """Means: the store of sheets is missing, damaged or of a newer version.  Do: run ``autotune sheet verify``."""
 
 
+class RecordNotKept(SheetError):
+    """Means: a test or a write is over and its record could not be kept.  Do: note how it ended, which the text tells.
+
+    ``is_stranded`` says that the loop was not shown to be as found, or its settings not to be the old or the new ones.
+    """
+
+    def __init__(self, text: str, *, is_stranded: bool = False) -> None:
+        super().__init__(text)
+        self.is_stranded = is_stranded
+
+
 class JournalError(AutotuneError):
     """Means: the journal can't be written or read.  Do: free the disk or mend its rights; no test starts without it."""

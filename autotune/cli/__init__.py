@@ -11,6 +11,7 @@ from autotune.errors import (
     JournalError,
     LinkError,
     LoopBusy,
+    RecordNotKept,
     SheetError,
     WriteNotVerified,
 )
@@ -28,6 +29,8 @@ def main() -> None:
 def exit_code_of(fault: AutotuneError) -> ExitCode:
     """The exit code of a contract that was broken."""
     match fault:
+        case RecordNotKept(is_stranded=True):
+            return ExitCode.STRANDED
         case ConfigError() | SheetError() | JournalError():
             return ExitCode.USAGE
         case LinkError():

@@ -12,7 +12,7 @@ from autotune.confirmed_write.limits import changed_fields, check_plan, write_or
 from autotune.confirmed_write.phases import Phase
 from autotune.confirmed_write.plan import Confirmation, WritePlan
 from autotune.confirmed_write.state import WritePace, WriteState
-from autotune.errors import SheetError
+from autotune.errors import RecordNotKept, SheetError
 from autotune.field.link import LoopLink
 from autotune.field.translate import held_fields
 from autotune.loop.outcome import Refusal
@@ -184,7 +184,14 @@ class SettingsChange:
             if state.is_taken:
                 await self._keep(self._note(sheet_id, state, person))
             return state.because[0]
-        return ChangeEnd(state, await self._keep(self._addendum(kind, sheet_id, axis, state, writer, person)))
+        addendum = self._addendum(kind, sheet_id, axis, state, writer, person)
+        try:
+            return ChangeEnd(state, await self._keep(addendum))
+        except SheetError as fault:
+            is_stranded = state.phase is Phase.UNVERIFIED
+            told = f"{state.phase.name}. {addendum.text}{' Go to the panel now.' if is_stranded else ''}"
+            lost = f"Its record could not be kept ({fault}); its journal is {journal.file}"
+            raise RecordNotKept(f"{told} {lost}", is_stranded=is_stranded) from fault
 
     async def _keep(self, addendum: schema.Addendum) -> str:
         return await self._workplace.in_thread(self._workplace.store.append_addendum, addendum)

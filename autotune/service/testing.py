@@ -11,6 +11,8 @@ from autotune.config.test_plan import plan_for
 from autotune.config.types import LoopConfig
 from autotune.design.proposal import ProposalSheet
 from autotune.design.propose import propose
+from autotune.errors import RecordNotKept, SheetError
+from autotune.experiment.phases import Phase
 from autotune.experiment.state import Experiment, record
 from autotune.field.link import LoopLink
 from autotune.identify.findings import Findings, FindingsOrRefusal
@@ -133,7 +135,14 @@ class SupervisedTest:
         findings, proposed = await self._conclude(runner, settings)
         told = _Told(runner, findings, proposed, settings, journal.file)
         sheet = self._sheet(self._sheet_id, self._axis, permission, told)
-        sheet_hash = await self._workplace.in_thread(self._workplace.store.append, sheet)
+        try:
+            sheet_hash = await self._workplace.in_thread(self._workplace.store.append, sheet)
+        except SheetError as fault:
+            ended = sheet.outcome
+            raise RecordNotKept(
+                f"{ended.ended}. {ended.text} Its sheet could not be kept ({fault}); its journal is {journal.file}",
+                is_stranded=runner.experiment.phase is Phase.STRANDED,
+            ) from fault
         if broken is not None:
             raise broken
         return TestEnd(runner.experiment, findings, proposed, settings, sheet, sheet_hash, tuple(runner.faults))

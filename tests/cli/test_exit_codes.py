@@ -13,6 +13,7 @@ from autotune.errors import AutotuneError, Complaint, ConfigError
 CODES: dict[type[AutotuneError], ExitCode] = {
     errors.ConfigError: ExitCode.USAGE,
     errors.SheetError: ExitCode.USAGE,
+    errors.RecordNotKept: ExitCode.USAGE,
     errors.JournalError: ExitCode.USAGE,
     errors.LinkError: ExitCode.LINK,
     errors.LinkTimeout: ExitCode.LINK,
@@ -38,6 +39,10 @@ def test_every_error_has_its_exit_code(kind: type[AutotuneError]) -> None:
     assert exit_code_of(fault) is CODES.get(kind, ExitCode.STRANDED)
     if kind not in CODES:
         assert kind.__name__ not in ("LinkError", "ConfigError")
+
+
+def test_a_record_that_is_lost_does_not_hide_a_stranded_loop() -> None:
+    assert exit_code_of(errors.RecordNotKept("text", is_stranded=True)) is ExitCode.STRANDED
 
 
 def test_the_numbers_are_the_published_ones() -> None:

@@ -203,6 +203,12 @@ async def fill_disk(pair: Pair, _: random.Random) -> None:
     pair.fill_disk()
 
 
+async def fill_disk_and_kill_plc(pair: Pair, _: random.Random) -> None:
+    """Neither can the loop be given back, nor can it be written down."""
+    pair.fill_disk()
+    await pair.kill_plant()
+
+
 async def lock_journal(pair: Pair, _: random.Random) -> None:
     """From now on no file of the tool can grow any more, as on a disk that has gone read-only."""
     assert pair.tool is not None
@@ -257,6 +263,7 @@ FAULTS: tuple[Fault, ...] = (
     Fault("operator presses stop", press_stop, EVERYWHERE, GIVEN_BACK),
     Fault("operator changes a setting", change_a_setting, OF_SETTINGS, ANY_TOLD),
     Fault("disk full", fill_disk, EVERYWHERE, GIVEN_BACK, needs="small disk"),
+    Fault("disk full and PLC killed", fill_disk_and_kill_plc, EVERYWHERE, OR_STRANDED, needs="small disk"),
     Fault("journal can't be written", lock_journal, EVERYWHERE, GIVEN_BACK),
     Fault("wall clock stepped", step_clock, EVERYWHERE, GIVEN_BACK),
     Fault(

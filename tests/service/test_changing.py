@@ -12,7 +12,7 @@ from autotune.config.types import LoopConfig
 from autotune.confirmed_write.confirmation import GOOD_FOR_S
 from autotune.confirmed_write.phases import Phase
 from autotune.confirmed_write.plan import FieldLimit, WritePlan
-from autotune.errors import LinkError, SheetError
+from autotune.errors import LinkError, RecordNotKept, SheetError
 from autotune.loop.mode import LoopMode
 from autotune.loop.outcome import Refusal
 from autotune.loop.settings import BlockFields
@@ -23,7 +23,7 @@ from autotune.service.recovery import close_write_intents, open_write_intents, r
 from autotune.service.sheet_mapping import settings_quantities
 from autotune.service.workplace import Workplace
 from autotune.sheet import schema
-from autotune.sheet.store import StoredSheet
+from autotune.sheet.store import SheetStore, StoredSheet
 from tests.fakes.link import FakeLink, Fault, FaultKind
 from tests.fakes.plant import WITH_GUARD, PlantInMemory
 from tests.fakes.virtual_time import run_virtual
@@ -113,6 +113,35 @@ def test_a_confirmed_proposal_is_written_read_back_and_kept(place: Place) -> Non
     assert kept.plan_digest.startswith(kept.confirmation_digest.replace("-", ""))
     assert place.workplace.store.head_hash() == ended.addendum_hash
     assert open_intents(place.workplace.data_dir) == ()
+
+
+class FullStore:
+    """The store of a place, with no room left for more."""
+
+    def __init__(self, store: SheetStore) -> None:
+        self._store = store
+
+    def get(self, sheet_id: str) -> StoredSheet:
+        return self._store.get(sheet_id)
+
+    def append_addendum(self, addendum: schema.Addendum) -> str:
+        raise SheetError(f"the disk is full; nothing can be added to {addendum.sheet_id}")
+
+
+@pytest.mark.parametrize("is_seen", [True, False])
+def test_how_a_write_ended_is_told_though_its_addendum_can_not_be_kept(place: Place, is_seen: bool) -> None:
+    place.workplace = replace(place.workplace, store=FullStore(place.workplace.store))  # type: ignore[arg-type]
+
+    async def act(one: SettingsChange) -> ChangeEnd | Refusal:
+        plan = await planned(one, place)
+        if not is_seen:
+            place.link.read_faults |= {number: Fault(FaultKind.SILENT) for number in range(4, 500)}
+        return await one.write("write", place.sheet.sheet_id, plan, digest_to_type(plan), R_LIND)
+
+    with pytest.raises(RecordNotKept, match=r"disk is full.*jsonl") as raised:
+        change(place, act)
+    assert str(raised.value).startswith("WRITTEN. " if is_seen else "UNVERIFIED. ")
+    assert raised.value.is_stranded is not is_seen
 
 
 @pytest.mark.parametrize(

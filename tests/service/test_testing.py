@@ -13,7 +13,7 @@ import pytest
 from scipy.optimize import brentq
 
 from autotune.config.types import LoopConfig
-from autotune.errors import JournalError, LoopBusy, SheetError
+from autotune.errors import JournalError, LoopBusy, RecordNotKept, SheetError
 from autotune.experiment.phases import Phase
 from autotune.experiment.state import Stage
 from autotune.identify.findings import Findings, FindingsOrRefusal
@@ -283,6 +283,35 @@ def test_a_store_that_is_damaged_is_told_before_anything_moves(tmp_path: Path) -
                 test.prepare(is_no_guard_accepted=False)
 
     run_virtual(main())
+
+
+class FullStore:
+    """A store that has no room left when the sheet comes."""
+
+    def head_hash(self) -> str:
+        return "0" * 64
+
+    def append(self, sheet: Sheet) -> str:
+        raise SheetError(f"the disk is full; {sheet.sheet_id} can't be kept")
+
+
+@pytest.mark.parametrize("is_stranded", [False, True])
+def test_how_a_test_ended_is_told_though_its_sheet_can_not_be_kept(is_stranded: bool, tmp_path: Path) -> None:
+    plant = PlantInMemory()
+    if is_stranded:
+        at(plant, 5.5, plant.plc.restart)
+    raised = supervise(
+        WITHOUT_GUARD,
+        tmp_path,
+        plant=plant,
+        change=lambda place: replace(place, store=FullStore()),  # type: ignore[arg-type]
+    ).raised
+    assert isinstance(raised, RecordNotKept)
+    assert raised.is_stranded is is_stranded
+    assert str(raised).startswith("STRANDED. " if is_stranded else "COMPLETE. ")
+    assert ("Go to the panel now and enter by hand" in str(raised)) is is_stranded
+    assert "the disk is full" in str(raised)
+    assert ".jsonl" in str(raised)
 
 
 @pytest.mark.parametrize("is_disturbed", [False, True])
