@@ -43,7 +43,7 @@ def serve(
 ) -> None:
     """Serve the loops of a configuration: the daemon owns tests and writes, and offers the page. Ctrl-C ends it."""
     address = PageAddress(host, port, certificate, key, tuple(name or ()))
-    workplace = _workplace(config, may_create=not watch_only)
+    workplace = _workplace(config)
     job = serving.run(Voice(is_json=is_json), workplace, address, is_watch_only=watch_only, lock_after_min=lock_after)
     raise typer.Exit(asyncio.run(job))
 
@@ -74,5 +74,5 @@ def remove(config: _Config, name: _Name, is_json: _Json = False) -> None:
     raise typer.Exit(persons.remove(Voice(is_json=is_json), _workplace(config), name))
 
 
-def _workplace(config: Path, *, may_create: bool = True) -> Workplace:
-    return open_workplace(load(config), may_create=may_create)
+def _workplace(config: Path) -> Workplace:
+    return open_workplace(load(config), may_create=True)

@@ -5,8 +5,10 @@ It decides nothing and keeps nothing: who may do what is the daemon's to say, by
 
 import json
 from collections.abc import AsyncIterator, Mapping
+from contextlib import aclosing
 from importlib.resources import as_file, files
 from pathlib import Path
+from secrets import compare_digest
 from typing import Any
 
 from starlette.applications import Starlette
@@ -96,11 +98,13 @@ class Console:
     async def _told(self, asked: Mapping[str, object]) -> AsyncIterator[bytes]:
         """Each answer of the daemon as one event; a refusal as an event of its own, then the end."""
         try:
-            async for told in listen(self._socket, asked):
-                name = "message" if "answer" in told else "refusal"
-                yield f"event: {name}\ndata: {json.dumps(told.get('answer') or told['refusal'])}\n\n".encode()
+            async with aclosing(listen(self._socket, asked)) as stream:
+                async for told in stream:
+                    yield _event(told)
+                    if "refusal" in told:
+                        return
         except LinkClosed:
-            yield f"event: refusal\ndata: {json.dumps(_NO_DAEMON['refusal'])}\n\n".encode()
+            yield _event(_NO_DAEMON)
 
     async def _file(self, request: Request) -> Response:
         told = await self._ask({"act": "export_sheet", "session": _session(request), **request.path_params})
@@ -124,7 +128,7 @@ class Console:
 
     async def _is_own_page(self, session: str, csrf: str) -> bool:
         known = (await self._ask({"act": "who_am_i", "session": session})).get("answer")
-        return known is not None and bool(csrf) and known["csrf"] == csrf
+        return known is not None and bool(csrf) and compare_digest(known["csrf"], csrf)
 
     async def _ask(self, request: Mapping[str, Any]) -> Told:
         try:
@@ -135,6 +139,11 @@ class Console:
 
 def _session(request: Request) -> str:
     return request.cookies.get(COOKIE, "")[:200]
+
+
+def _event(told: Told) -> bytes:
+    name = "message" if "answer" in told else "refusal"
+    return f"event: {name}\ndata: {json.dumps(told.get('answer') or told['refusal'])}\n\n".encode()
 
 
 def _json(told: Told) -> JSONResponse:

@@ -2,8 +2,8 @@
 
 import asyncio
 import json
-from collections.abc import AsyncIterator, Mapping
-from contextlib import suppress
+from collections.abc import AsyncGenerator, Mapping
+from contextlib import aclosing, suppress
 from pathlib import Path
 from typing import Any
 
@@ -16,12 +16,13 @@ Told = dict[str, Any]
 
 async def ask(file: Path, request: Mapping[str, object]) -> Told:
     """One question and its answer.  Raises ``LinkClosed`` when the daemon can't be reached or goes away."""
-    async for told in listen(file, request):
-        return told
+    async with aclosing(listen(file, request)) as answers:
+        async for told in answers:
+            return told
     raise LinkClosed(f"{file}: the daemon has closed the connection; see its log")
 
 
-async def listen(file: Path, request: Mapping[str, object]) -> AsyncIterator[Told]:
+async def listen(file: Path, request: Mapping[str, object]) -> AsyncGenerator[Told, None]:
     """All answers to a stream, or the one to a question; ends when the daemon ends.  Raises ``LinkClosed``."""
     try:
         reader, writer = await asyncio.open_unix_connection(str(file), limit=_LINE_BYTES_AT_MOST)

@@ -62,11 +62,11 @@ class Screen:
         if not url.startswith(self.url):
             self.outside.append(url)
 
-    async def sign_in(self, secret: str = SECRET) -> None:
+    async def sign_in(self, name: str = NAME) -> None:
         """Open the page and sign in."""
         await self.page.goto(self.url)
-        await self.page.get_by_label("Name").fill(NAME)
-        await self.page.get_by_label("Secret").fill(secret)
+        await self.page.get_by_label("Name").fill(name)
+        await self.page.get_by_label("Secret").fill(SECRET)
         await self.page.get_by_role("button", name="Sign in").click()
 
     async def open_loop(self, loop: str) -> None:

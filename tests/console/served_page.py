@@ -8,7 +8,8 @@ from collections.abc import AsyncIterator
 from contextlib import asynccontextmanager, suppress
 from pathlib import Path
 
-from tests.system.command import run
+from autotune.config.load import load
+from autotune.service.persons import PersonBook, Role
 from tests.system.plant import ROOT
 
 NAME = "R. Bench"
@@ -62,11 +63,10 @@ async def served_page(config: Path, *options: str) -> AsyncIterator[ServedPage]:
             await process.wait()
 
 
-async def add_person(config: Path, *roles: str, name: str = NAME) -> None:
-    """Put somebody into the book by the command line."""
-    options = [option for role in roles for option in ("--role", role)]
-    ran = await run("person", "add", config, name, *options, "--json", typed=f"{SECRET}\n")
-    assert ran.code == 0, ran.err
+def add_person(config: Path, *roles: Role, name: str = NAME) -> None:
+    """Put somebody into the book of persons of a configuration."""
+    book = PersonBook(load(config).data_dir)
+    book.add(name, roles, SECRET, "2026-12-01T00:00:00+00:00")
 
 
 def _children(process_id: int) -> list[int]:

@@ -9,6 +9,7 @@ from tempfile import TemporaryDirectory
 
 from playwright.async_api import Browser, expect
 
+from autotune.service.persons import Role
 from tests.console.browser import Screen, browser, screen
 from tests.console.served_page import SECRET, ServedPage, add_person, served_page
 from tests.system.plant import SoftPlant, soft_plant
@@ -34,7 +35,7 @@ async def _skid(kept: Path) -> AsyncIterator[tuple[SoftPlant, ServedPage]]:
         text = (ROOT / "config" / "rehearsal.toml").read_text("utf-8")
         config = kept / "skid.toml"
         config.write_text(text.replace("port = 50502", f"port = {plant.port}"), "utf-8")
-        await add_person(config, "test", "write")
+        add_person(config, Role.TEST, Role.WRITE)
         async with served_page(config) as page:
             yield plant, page
 

@@ -53,14 +53,17 @@ export function may(role) {
 }
 
 const SILENT_AFTER_MS = 3500;
+const REOPEN_EVERY = 4; // seconds
 
-/** A stream that comes back by itself.  `onLost(since)` is heard once when it falls silent, `onBack` when it speaks. */
+/** A stream that comes back by itself.  `onLost(since)` is heard once when it falls silent, `onBack` when it speaks again, `onRefused(fault)` when it is told no. */
 export class Stream {
-  constructor(act, fields, { onAnswer, onLost = () => {}, onBack = () => {} }) {
+  constructor(act, fields, { onAnswer, onLost, onBack, onRefused }) {
     this.lastHeard = new Date();
     this.isLost = false;
     this.url = `/events/${act}?${new URLSearchParams(fields)}`;
+    this.silentFor = 0;
     this.heard = (answer) => {
+      this.silentFor = 0;
       this.lastHeard = new Date();
       if (this.isLost) {
         this.isLost = false;
@@ -74,7 +77,7 @@ export class Stream {
         this.isLost = true;
         onLost(this.lastHeard);
       }
-      if (silent > SILENT_AFTER_MS) this.reopen();
+      if (silent > SILENT_AFTER_MS && ++this.silentFor % REOPEN_EVERY === 1) this.reopen();
     }, 1000);
     this.open();
   }
@@ -83,9 +86,10 @@ export class Stream {
     this.source = new EventSource(this.url);
     this.source.onmessage = (event) => this.heard(JSON.parse(event.data));
     this.source.addEventListener("refusal", (event) => {
-      const { code } = JSON.parse(event.data);
-      if (["SIGN_IN", "REMOVED"].includes(code)) document.dispatchEvent(new Event("signed-out"));
-      this.source.close();
+      const refusal = JSON.parse(event.data);
+      this.source.close(); // it is opened again when the silence lasts
+      if (["SIGN_IN", "REMOVED"].includes(refusal.code)) document.dispatchEvent(new Event("signed-out"));
+      else onRefused(new Refused(refusal));
     });
   }
 

@@ -130,8 +130,9 @@ function signedIn(answer) {
       reach.show(answered.loops.filter((line) => line.doing === "test"));
       for (const listener of listeners) listener(answered.loops);
     },
-    onLost: (since) => page.onAlarm(since),
+    onLost: page.onAlarm,
     onBack: () => page.onAlarm(null),
+    onRefused: (fault) => tell(fault.message, true),
   });
   if (answer.is_locked) showLock();
   route();

@@ -110,6 +110,14 @@ export function part(title, attributes, ...children) {
   return h("section", { class: "part", "aria-labelledby": id, ...attributes }, h("h2", { id }, title), ...children);
 }
 
+/** Put the keyboard where something new has come, at its heading. */
+export function attend(element) {
+  const heading = element.querySelector("h1, h2");
+  if (!heading) return;
+  heading.tabIndex = -1;
+  heading.focus();
+}
+
 /** Labels and what stands beside them. */
 export function facts(...rows) {
   return h("dl", { class: "facts" }, rows.filter(Boolean).map(([label, what]) => [h("dt", {}, label), h("dd", {}, what)]));

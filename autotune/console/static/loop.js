@@ -1,7 +1,7 @@
 // The working sheet of one loop, from the look to the sheet that is kept.
 
 import { ask, may, perform, session, Stream } from "./api.js";
-import { duration, exact, facts, figure, h, instant, mark, part, reading, rounded, say, set, table } from "./dom.js";
+import { attend, duration, exact, facts, figure, h, instant, mark, part, reading, rounded, say, set, table } from "./dom.js";
 import { stateMark } from "./loops.js";
 import { secretField } from "./persons.js";
 import { sheetParts } from "./sheet.js";
@@ -45,8 +45,9 @@ export function loopView(page, name) {
   };
   const stream = new Stream("watch_loop", { loop: name }, {
     onAnswer,
-    onLost: (since) => page.onAlarm(since),
+    onLost: page.onAlarm,
     onBack: () => page.onAlarm(null),
+    onRefused: (fault) => page.tell(fault.message, true),
   });
   return { element, leave: () => stream.close() };
 }
@@ -78,7 +79,7 @@ function identityPart(line, place) {
       if (told !== before) {
         before = told;
         set(state, stateMark(one));
-        rest.hidden = one.doing === "test"; // read before it began, and the test itself tells what is so now
+        rest.hidden = state.parentElement.hidden = one.doing === "test"; // read before it began, and the test itself tells what is so now
         set(notes, one.notes.map((note) => h("p", { class: one.is_settled ? "quiet" : "trouble" }, note)));
       }
       say(now, `PV ${reading(one.pv_eu, one.pv_unit)}, SP ${reading(one.sp_eu, one.pv_unit)}, OP ${reading(one.op_eu, one.op_unit)}, mode ${one.mode ?? "not known"}`);
@@ -105,6 +106,7 @@ function lookPart(page, name, readiness, permission) {
       set(result, h("p", { class: "trouble" }, fault.message));
     } finally {
       button.disabled = false;
+      if (document.activeElement === document.body) button.focus();
     }
   }
 
@@ -172,6 +174,7 @@ function permissionPart(page, name, answer, line, onStarted) {
     } catch (fault) {
       say(trouble, fault.message);
       secret.value = "";
+      secret.focus();
     } finally {
       button.disabled = false;
     }
@@ -224,6 +227,7 @@ function testPart(page, name, first, place) {
     }
   };
   set(place, part("The test", { class: "part test" }, h("p", { class: "state-line" }, phase, stage, left), h("figure", {}, trend.element), acts, numbers, watch, cycles, story));
+  if (document.activeElement === document.body) attend(place);
   let cyclesTold = -1;
   let storyTold = -1;
   let watchTold = "";
@@ -242,6 +246,7 @@ function testPart(page, name, first, place) {
       const isTesting = test.phase === "TESTING";
       keep.hidden = smaller.hidden = test.is_over || !may("test");
       keep.disabled = smaller.disabled = !isTesting;
+      numbers.hidden = watch.hidden = test.is_over; // the last readings, taken before the loop was given back
       set(numbers, figures(test, line));
       const told = JSON.stringify(test.watch);
       if (told !== watchTold) {

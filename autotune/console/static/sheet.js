@@ -1,7 +1,7 @@
 // One sheet as it is kept: what was found, what is proposed, and the change that a person confirms.
 
 import { ask, may, perform, session } from "./api.js";
-import { exact, facts, figure, h, instant, mark, outcomeMark, part, rounded, say, set, table } from "./dom.js";
+import { attend, exact, facts, figure, h, instant, mark, outcomeMark, part, rounded, say, set, table } from "./dom.js";
 import { secretField } from "./persons.js";
 import { Trend } from "./trend.js";
 
@@ -159,8 +159,8 @@ async function openPlan(page, act, fields, place, onChanged) {
   try {
     const answer = await perform(act, fields);
     set(place, planPart(page, answer, place, onChanged));
-    place.querySelector("h2").scrollIntoView({ block: "start" });
-    place.querySelector("input")?.focus({ preventScroll: true });
+    attend(place);
+    place.scrollIntoView({ block: "start" });
   } catch (fault) {
     set(place, part("Confirmation", {}, h("p", { class: "trouble", role: "alert" }, `Nothing was written. ${fault.message}`)));
   }
@@ -194,12 +194,13 @@ function planPart(page, plan, place, onChanged) {
       const written = await perform("confirm_change", { loop: plan.loop, typed: typed.value, secret: secret.value });
       clearInterval(timer);
       set(place, writtenPart(plan, written));
-      place.scrollIntoView({ block: "start" });
+      attend(place);
       await onChanged();
     } catch (fault) {
       button.disabled = false;
       secret.value = "";
       say(trouble, `Nothing was written. ${fault.message}`);
+      typed.focus();
     }
   };
   return part(

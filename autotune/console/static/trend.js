@@ -6,9 +6,9 @@ const WIDTH = 860;
 const LEFT = 64;
 const RIGHT = 46;
 const PV_TOP = 26;
-const PV_HEIGHT = 190;
-const OP_TOP = PV_TOP + PV_HEIGHT + 36;
-const OP_HEIGHT = 84;
+const PV_HEIGHT = 166;
+const OP_TOP = PV_TOP + PV_HEIGHT + 30;
+const OP_HEIGHT = 72;
 const HEIGHT = OP_TOP + OP_HEIGHT + 34;
 const INNER = WIDTH - LEFT - RIGHT;
 
