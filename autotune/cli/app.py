@@ -1,6 +1,5 @@
 """The command line: arguments in, one function call, an exit code out."""
 
-import asyncio
 from collections.abc import Coroutine
 from pathlib import Path
 from typing import Annotated, Any
@@ -17,6 +16,7 @@ from autotune.cli import test as testing
 from autotune.cli.exit_codes import ExitCode
 from autotune.cli.operators import PersonAtTheTerminal
 from autotune.cli.printing import Voice
+from autotune.cli.signals import run_to_its_end
 from autotune.cli.soft_plant import Link
 from autotune.config.load import load
 from autotune.loop.settings import BlockFields, PidForm
@@ -46,7 +46,7 @@ PersonName = Annotated[
 
 
 def _run(coroutine: Coroutine[Any, Any, ExitCode]) -> None:
-    raise typer.Exit(asyncio.run(coroutine))
+    raise typer.Exit(run_to_its_end(coroutine))
 
 
 def _workplace(config: Path, *, may_create: bool = False) -> Workplace:

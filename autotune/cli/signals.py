@@ -2,10 +2,29 @@
 
 import asyncio
 import signal
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Coroutine, Iterator
 from contextlib import contextmanager
+from typing import Any, TypeVar
+
+T = TypeVar("T")
 
 _NAMES = ("SIGINT", "SIGTERM", "SIGHUP")
+
+
+def run_to_its_end(job: Coroutine[Any, Any, T]) -> T:
+    """Run ``job`` as ``asyncio.run`` does; once it is over Ctrl-C isn't heard, lest its exit code be lost to it."""
+
+    async def whole() -> T:
+        try:
+            return await job
+        finally:
+            signal.signal(signal.SIGINT, signal.SIG_IGN)
+
+    before = signal.getsignal(signal.SIGINT)
+    try:
+        return asyncio.run(whole())
+    finally:
+        signal.signal(signal.SIGINT, before)
 
 
 @contextmanager

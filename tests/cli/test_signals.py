@@ -2,12 +2,12 @@
 
 import asyncio
 import signal
-from collections.abc import Callable
+from collections.abc import AsyncGenerator, Callable
 from typing import Any
 
 import pytest
 
-from autotune.cli.signals import hear_signals
+from autotune.cli.signals import hear_signals, run_to_its_end
 
 
 class WithoutSignals(asyncio.SelectorEventLoop):
@@ -46,3 +46,25 @@ def test_a_signal_is_heard_as_often_as_it_comes_and_then_no_more(
         loop.close()
         signal.signal(signal.SIGINT, before)
     assert heard == ["SIGINT", "SIGINT"]
+
+
+def test_ctrl_c_that_comes_when_all_is_over_does_not_take_the_exit_code_away() -> None:
+    kept: list[AsyncGenerator[None, None]] = []
+
+    async def late() -> AsyncGenerator[None, None]:
+        try:
+            yield
+        finally:
+            signal.raise_signal(signal.SIGINT)
+
+    async def job() -> int:
+        kept.append(late())  # what is left open is closed when the job is over
+        await anext(kept[0])
+        return 4
+
+    before = signal.signal(signal.SIGINT, signal.default_int_handler)
+    try:
+        assert run_to_its_end(job()) == 4
+        assert signal.getsignal(signal.SIGINT) is signal.default_int_handler
+    finally:
+        signal.signal(signal.SIGINT, before)

@@ -6,7 +6,6 @@ the command, none of which decides anything: identification runs in place, the d
 wall clock can be stepped while it runs.
 """
 
-import asyncio
 import sys
 from collections.abc import Sequence
 from dataclasses import replace
@@ -17,6 +16,7 @@ from autotune.cli import exit_code_of
 from autotune.cli.operators import PersonAtTheTerminal
 from autotune.cli.printing import Voice, complain
 from autotune.cli.settings import restore
+from autotune.cli.signals import run_to_its_end
 from autotune.cli.test import test
 from autotune.config.load import load
 from autotune.errors import AutotuneError
@@ -65,8 +65,8 @@ def main(arguments: Sequence[str]) -> int:
         )
         loop = workplace.loop(loop_name)
         if act == "test":
-            return asyncio.run(test(voice, workplace, loop, PersonAtTheTerminal(voice, "bench of the faults")))
-        return asyncio.run(restore(voice, workplace, loop, None, TypesWhatIsShown()))
+            return run_to_its_end(test(voice, workplace, loop, PersonAtTheTerminal(voice, "bench of the faults")))
+        return run_to_its_end(restore(voice, workplace, loop, None, TypesWhatIsShown()))
     except AutotuneError as fault:
         complain(str(fault))
         return exit_code_of(fault)
