@@ -168,7 +168,8 @@ class Guard:
         # Used up whatever becomes of it: a request that waits for manual would be a late write.
         self._sequence = seen.sequence
         is_inside = self.limits.op_low_pct <= seen.op_request_pct <= self.limits.op_high_pct
-        if seen.mode != MODE_MAN or not is_inside:
+        # An output that is not what was passed on last has been moved by somebody: it is theirs.
+        if seen.mode != MODE_MAN or not is_inside or seen.op_pct != self._left_op_pct:
             return NOTHING
         self._left_op_pct = seen.op_request_pct
         self._has_passed_on = True

@@ -193,6 +193,13 @@ def test_a_loop_that_a_person_took_is_left_alone(taken: dict[str, float]) -> Non
     assert (pair.seen.op_pct, pair.seen.mode) == (taken.get("op_pct", 55.0), taken.get("mode", 0))
 
 
+def test_a_move_that_meets_a_persons_output_in_the_same_scan_is_not_passed_on() -> None:
+    pair = armed_in_manual()
+    pair.step(sequence=1, op_request_pct=55.0, heartbeat=3)
+    pair.step(50, heartbeat=4, op_pct=60.0, sequence=2, op_request_pct=38.0)
+    assert pair.seen.op_pct == 60.0
+
+
 def test_onto_a_failed_measurement_manual_is_kept() -> None:
     pair = armed_in_manual()
     pair.step(sequence=1, op_request_pct=55.0, heartbeat=3)

@@ -276,6 +276,11 @@ def test_a_loop_that_a_person_has_taken_is_theirs(taken: dict[str, object]) -> N
     assert bench.guard.is_alarm
 
 
+def test_a_move_that_meets_a_persons_output_in_the_same_scan_is_not_passed_on() -> None:
+    bench = moved_bench()
+    assert bench.scan(op_pct=60.0, sequence=bench.seen.sequence + 1, op_request_pct=38.0) == NOTHING
+
+
 def test_before_the_first_move_the_output_of_automatic_counts_as_found() -> None:
     bench = Bench()
     bench.arm()
