@@ -37,7 +37,8 @@ def harmonic_points(signals: Waveforms, cycles: tuple[Cycle, ...]) -> tuple[Osci
     fundamental = 2 * np.pi * len(cycles) / (to_s - from_s)
     order = np.array(HARMONICS, dtype=float)
     op_all = held_integral(signals.effect_s, signals.op_pct, from_s, to_s, order * fundamental)
-    order = order[np.abs(op_all) >= INPUT_SHARE_AT_LEAST * np.abs(op_all[0])]
+    held = [np.abs(op_all), *(np.abs(_op_of_cycle(signals, cycle, order)) for cycle in cycles)]
+    order = order[np.all([op >= INPUT_SHARE_AT_LEAST * op[0] for op in held], axis=0)]
     op_all = held_integral(signals.effect_s, signals.op_pct, from_s, to_s, order * fundamental)
     pv_all = joined_integral(signals.sample_s, level, from_s, to_s, order * fundamental)
     seen = pv_all / op_all
@@ -112,13 +113,18 @@ def _spread(signals: Waveforms, level: Array, cycles: tuple[Cycle, ...], order: 
     for cycle in cycles:
         to_s = cycle.from_s + cycle.period_s
         w = order * 2 * np.pi / cycle.period_s
-        op = held_integral(signals.effect_s, signals.op_pct, cycle.from_s, to_s, w)
-        ratios.append(joined_integral(signals.sample_s, level, cycle.from_s, to_s, w) / op / seen)
+        pv = joined_integral(signals.sample_s, level, cycle.from_s, to_s, w)
+        ratios.append(pv / _op_of_cycle(signals, cycle, order) / seen)
     several = np.array(ratios)
     # two real components a cycle: the pooled variance has 2 (n - 1) degrees of freedom
     freedom = 2 * (len(cycles) - 1)
     variance = np.sum(np.abs(several - np.mean(several, axis=0)) ** 2, axis=0) / freedom
     return np.asarray(np.sqrt(variance / len(cycles)) * float(student.ppf(0.975, freedom)) / 1.959964)
+
+
+def _op_of_cycle(signals: Waveforms, cycle: Cycle, order: Array) -> ComplexArray:
+    w = order * 2 * np.pi / cycle.period_s
+    return held_integral(signals.effect_s, signals.op_pct, cycle.from_s, cycle.from_s + cycle.period_s, w)
 
 
 def _edge_doubt_s(signals: Waveforms, from_s: float, to_s: float) -> float:

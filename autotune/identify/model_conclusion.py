@@ -61,7 +61,7 @@ def conclude_from(signals: Waveforms, found: PlantFits) -> ModelConclusion | Non
     period = _interval(point.log_period_s, [(end.log_period_s, end.period_half_ratio) for end in ends])
     for sure in point.disagreeing:
         gain = _holding(gain, exp(sure.point.log_gain))
-        period = _holding(period, exp(sure.point.log_period) * found.period_s)
+        period = _holding(period, exp(sure.point.log_period_ratio) * found.period_s)
     is_open = None in at_ends
     because = tuple(_because(signals, found, point, weighed, ends))
     return ModelConclusion(
@@ -81,7 +81,7 @@ def _ends(signals: Waveforms, found: PlantFits, hull_s: float) -> tuple[ModelPoi
     plant must make up for it, and is fitted again.
     """
     later = model_point(found, hull_s)
-    if found.best.dead_time * found.period_s >= hull_s:
+    if found.best.dead_time_ratio * found.period_s >= hull_s:
         sooner = model_point(found, -hull_s)
     else:
         sooner = model_point(update_plant(signals, found, hull_s))
@@ -108,7 +108,7 @@ def _because(
 ) -> Iterator[str]:
     """Each cause of the width with its size, in the words of the trade."""
     yield (
-        f"the plant fitted: {found.best.structure}, dead time {found.best.dead_time * found.period_s:.3g} s; "
+        f"the plant fitted: {found.best.structure}, dead time {found.best.dead_time_ratio * found.period_s:.3g} s; "
         f"what it leaves of PV is {_misfit_ratio(signals, found):.2f} times the noise at rest"
     )
     yield (
@@ -143,11 +143,11 @@ def _cautions(signals: Waveforms, found: PlantFits, point: ModelPoint, *, is_ope
             "What the stamps leave unknown exceeds the plant's dead time: without it the fitted plant has no ultimate "
             "gain at all. Offer the PLC's clock tags, or read and write over a faster link."
         )
-    if found.trace.load_from is not None:
+    if found.trace.load_from_ratio is not None:
         size_pct = float(best.linear[-1] / best.numerator[0])
         yield (
             f"The load changed during the test, by as much as {size_pct:+.2g} % of output would do, about "
-            f"{found.trace.load_from * found.period_s:.3g} s on the record's clock; this was taken out."
+            f"{found.trace.load_from_ratio * found.period_s:.3g} s on the record's clock; this was taken out."
         )
     misfit_ratio = _misfit_ratio(signals, found)
     if misfit_ratio > MISFIT_WORTH_SAYING:

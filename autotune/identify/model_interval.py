@@ -22,11 +22,14 @@ GAIN_FLOOR_RATIO, PERIOD_FLOOR_RATIO = 0.003, 0.0012  # standard deviations: no 
 LAGS_PER_PERIOD = 0.25  # over which residuals may hang together
 NEAR_TIE_BIC = 6.0
 WEIGHED_BIC = 12.0  # beyond, a weight of 0.2 %
-FLAT_RATIO = 1e-9
+PRIOR_SD = 1.0  # of a shape parameter (a logarithm) and of the dead time (periods)
+KNOWN_SD = 1e-6
+RIDGE = 1e-12  # what rounding leaves of a direction
 COVERED = 1.959964
 DRAWS = 64
 DRAW_SD_AT_MOST = 2.5
 DRAW_CHI_SQUARED_AT_MOST = 20.0  # by which a draw may explain the test worse: 2.5 deviations in three directions
+HALVINGS = 5
 
 
 @dataclass(frozen=True, slots=True)
@@ -73,9 +76,9 @@ class ModelPoint:
         return hypot(self.period_noise_ratio, self.period_spread_ratio, COVERED * PERIOD_FLOOR_RATIO)
 
 
-def sureness(fit: Fit, samples_per_period: float, later: float = 0.0) -> Sureness | None:
-    """Point and covariance of one structure with ``later`` periods more dead time; ``None`` without such a point."""
-    point = crossing(fit, later)
+def sureness(fit: Fit, samples_per_period: int, later_ratio: float = 0.0) -> Sureness | None:
+    """Point and covariance of one structure with ``later_ratio`` periods more dead time; ``None`` without a point."""
+    point = crossing(fit, later_ratio)
     if point is None:
         return None
     covariance = _covariance(fit, max(4, round(LAGS_PER_PERIOD * samples_per_period)))
@@ -84,23 +87,27 @@ def sureness(fit: Fit, samples_per_period: float, later: float = 0.0) -> Surenes
 
 
 def _covariance(fit: Fit, lags: int) -> Array:
-    """Of shape, dead time and numerator; a parameter at its bound, and a flat direction, count as known."""
+    """Of shape, dead time and numerator; a dead time at its bound counts as known.
+
+    Where two factors share a pole, a direction of the shape changes nothing at all: a wide prior holds it.
+    """
     rows = np.concatenate((fit.slopes, fit.columns, fit.onset_slopes))
-    known = np.zeros(len(rows), dtype=bool)
-    known[len(fit.slopes) - 1] = fit.dead_time <= 0
-    scale = np.where(known, np.inf, np.maximum(np.linalg.norm(rows, axis=1), 1e-300))
-    influence = np.linalg.pinv((rows / scale[:, None]).T, rcond=FLAT_RATIO) / scale[:, None]
+    count, samples = rows.shape
+    variance = max(fit.misfit, fit.misfit_floor) / max(samples - count, 1)
+    prior = np.zeros(count)
+    prior[: len(fit.slopes)] = variance / PRIOR_SD**2
+    if fit.dead_time_ratio <= 0:
+        prior[len(fit.slopes) - 1] = variance / KNOWN_SD**2
+    scale = np.sqrt(np.sum(rows**2, axis=1) + prior + 1e-300)
+    information = (rows @ rows.T + np.diag(prior)) / np.outer(scale, scale) + RIDGE * np.eye(count)
+    inverse = np.linalg.inv(information) / np.outer(scale, scale)
     kept = len(fit.slopes) + fit.structure.outputs
-    influence = influence[:kept]
-    samples = rows.shape[1]
-    freedom = samples / max(samples - len(rows), 1)
-    white = (influence @ influence.T) * fit.misfit / samples * freedom
-    moved = influence * fit.residual_pct
+    moved = (inverse @ rows)[:kept] * fit.residual_pct
     together = moved @ moved.T
     for lag in range(1, min(lags, samples - 1) + 1):
         across = moved[:, lag:] @ moved[:, :-lag].T
         together += (1 - lag / (lags + 1)) * (across + across.T)
-    return _larger(white, together * freedom)
+    return _larger(variance * inverse[:kept, :kept], together * samples / max(samples - count, 1))
 
 
 def _larger(white: Array, together: Array) -> Array:
@@ -140,11 +147,11 @@ def model_point(found: PlantFits, later_s: float = 0.0) -> tuple[ModelPoint, Wei
 
     point = ModelPoint(
         log_gain=best.point.log_gain,
-        log_period_s=best.point.log_period + log(found.period_s),
+        log_period_s=best.point.log_period_ratio + log(found.period_s),
         gain_noise_ratio=COVERED * best.gain_sd_ratio,
         period_noise_ratio=COVERED * best.period_sd_ratio,
         gain_spread_ratio=COVERED * spread([sure.point.log_gain for sure, _ in weighed]),
-        period_spread_ratio=COVERED * spread([sure.point.log_period for sure, _ in weighed]),
+        period_spread_ratio=COVERED * spread([sure.point.log_period_ratio for sure, _ in weighed]),
         kappa_ratio=best.point.kappa_ratio,
         disagreeing=tuple(
             sure for sure, _ in weighed if sure.fit.bic < best_bic + NEAR_TIE_BIC and _disagree(best, sure)
@@ -153,10 +160,10 @@ def model_point(found: PlantFits, later_s: float = 0.0) -> tuple[ModelPoint, Wei
     return point, tuple((sure, weight / total) for sure, weight in weighed)
 
 
-def samples_per_period(found: PlantFits) -> float:
+def samples_per_period(found: PlantFits) -> int:
     """Samples in one observed period, on the average."""
     at = found.trace.stairs.sample_s
-    return len(at) / float(at[-1] - at[0])
+    return round(len(at) / float(at[-1] - at[0]))
 
 
 def _disagree(one: Sureness, other: Sureness) -> bool:
@@ -168,16 +175,15 @@ def model_with_draws(found: PlantFits, weighed: Weighed, hull_s: float, because:
     """The best model, and draws from each weighed structure's covariance; their weights are the structures'.
 
     The draws are a fixed low-discrepancy set (J. H. Halton, Numer. Math. 2 (1960) 84) within DRAW_SD_AT_MOST
-    deviations of each direction; those of negative dead time and those whose own best numerator explains the test
-    much worse are left out.  Their dead times are spread evenly over what the stamps leave unknown
-    (``hull_s`` either way).
+    deviations of each direction and near the best in likelihood.  Their dead times are spread evenly over what the
+    stamps leave unknown (``hull_s`` either way), and are never negative.
     """
     draws: list[ProcessModel] = []
     weights: list[float] = []
     for sure, weight in weighed:
         models = _draws(found, sure, hull_s, max(8, round(DRAWS * weight)))
         draws += models
-        weights += [weight / len(models) for _ in models]
+        weights += [weight / len(models)] * len(models)
     total = sum(weights)
     return ModelWithDraws(
         best=process_model(found.best, found.period_s),
@@ -200,16 +206,29 @@ def _draws(found: PlantFits, sure: Sureness, hull_s: float, count: int) -> list[
     scale = np.sqrt(np.maximum(np.diag(covariance), 1e-300))
     spread, direction = np.linalg.eigh(covariance / np.outer(scale, scale))
     drawn = normal @ (direction * np.sqrt(np.maximum(spread, 0.0))).T * scale
-    drawn += np.concatenate((fit.parameters, [log(gain)], zeros))
-    drawn[:, :order] = np.clip(drawn[:, :order], SHAPE_LOW, SHAPE_HIGH)
+    best = np.concatenate((fit.parameters, [log(gain)], zeros))
     freedom = len(fit.residual_pct) - len(fit.slopes) - len(fit.columns)
-    misfit_at_most = max(fit.misfit, fit.misfit_floor) * (1 + DRAW_CHI_SQUARED_AT_MOST / freedom)
+    misfit_at_most = max(fit.misfit, fit.misfit_floor) * (1 + DRAW_CHI_SQUARED_AT_MOST / max(freedom, 1))
     models = []
-    for one, unknown in zip(drawn, 2 * cube[:, -1] - 1, strict=True):
-        dead_time = float(one[order]) + unknown * hull_s / found.period_s
-        if min(one[order], dead_time) < 0:
-            continue
-        if fitted(found.trace, fit.structure, one[: order + 1]).misfit <= misfit_at_most:
-            numerator = exp(one[order + 1]) * np.append(1.0, one[order + 2 :])
-            models.append(model_in_seconds(one[:order], dead_time, numerator, found.period_s))
+    for away, unknown in zip(drawn, 2 * cube[:, -1] - 1, strict=True):
+        one = _within(found, fit, best, away, misfit_at_most)
+        dead_time_ratio = max(float(one[order]) + unknown * hull_s / found.period_s, 0.0)
+        numerator = exp(one[order + 1]) * np.append(1.0, one[order + 2 :])
+        models.append(model_in_seconds(one[:order], dead_time_ratio, numerator, found.period_s))
     return models
+
+
+def _within(found: PlantFits, fit: Fit, best: Array, away: Array, misfit_at_most: float) -> Array:
+    """The draw, brought back towards the best by halves until its own best numerator explains the test nearly as well.
+
+    The covariance is that of a straight line; a lag that hardly shows bends far from it.
+    """
+    order = fit.structure.order
+    for _ in range(HALVINGS):
+        one = best + away
+        one[:order] = np.clip(one[:order], SHAPE_LOW, SHAPE_HIGH)
+        one[order] = max(one[order], 0.0)
+        if fitted(found.trace, fit.structure, one[: order + 1]).misfit <= misfit_at_most:
+            return one
+        away = away / 2
+    return best

@@ -26,19 +26,19 @@ class Trace:
     """A test in periods: PV at its samples, the staircase of OP, and what beside it moves PV.
 
     Below ``misfit_floor`` (a sum of squares) a fit is as good as perfect.
-    ``has_ramp`` lets PV drift; ``load_from`` is when a step of load begins (periods), where one is suspected.
+    ``has_ramp`` lets PV drift; ``load_from_ratio`` is when a step of load begins (periods), where one is suspected.
     """
 
     stairs: Staircase
     pv_pct: Array
     misfit_floor: float
     has_ramp: bool = False
-    load_from: float | None = None
+    load_from_ratio: float | None = None
 
     @property
     def nuisances(self) -> int:
         """Parameters beside the plant's: level, ramp, and size and onset of a load step."""
-        return 1 + self.has_ramp + 2 * (self.load_from is not None)
+        return 1 + self.has_ramp + 2 * (self.load_from_ratio is not None)
 
 
 @dataclass(frozen=True, slots=True)
@@ -52,7 +52,7 @@ class Fit:
 
     structure: Structure
     shape: Array
-    dead_time: float
+    dead_time_ratio: float
     linear: Array
     residual_pct: Array
     columns: Array
@@ -70,7 +70,7 @@ class Fit:
     @property
     def parameters(self) -> Array:
         """Shape and dead time."""
-        return np.append(self.shape, self.dead_time)
+        return np.append(self.shape, self.dead_time_ratio)
 
     @property
     def numerator(self) -> Array:
@@ -87,17 +87,17 @@ class Fit:
 
 def fitted(trace: Trace, structure: Structure, parameters: Array) -> Fit:
     """The best linear part for this shape and dead time (the last of ``parameters``)."""
-    shape, dead_time = parameters[:-1], float(parameters[-1])
+    shape, dead_time_ratio = parameters[:-1], float(parameters[-1])
     roots = poles(shape)
-    seen = responses(roots, trace.stairs, dead_time)
+    seen = responses(roots, trace.stairs, dead_time_ratio)
     count = structure.outputs
     at = trace.stairs.sample_s
     rows = [seen.steps[:count], np.ones((1, len(at)))]
     if trace.has_ramp:
         rows.append(((at - at[0]) / (at[-1] - at[0]) - 0.5)[None])
     load = None
-    if trace.load_from is not None:
-        load = responses(roots, Staircase(at, np.array([trace.load_from]), np.ones(1)), 0.0)
+    if trace.load_from_ratio is not None:
+        load = responses(roots, Staircase(at, np.array([trace.load_from_ratio]), np.ones(1)), 0.0)
         rows.append(load.steps[:1])
     columns = np.concatenate(rows)
     basis, triangle = np.linalg.qr(columns.T)
@@ -112,7 +112,7 @@ def fitted(trace: Trace, structure: Structure, parameters: Array) -> Fit:
     return Fit(
         structure=structure,
         shape=shape,
-        dead_time=dead_time,
+        dead_time_ratio=dead_time_ratio,
         linear=linear,
         residual_pct=trace.pv_pct - linear @ columns,
         columns=columns,
@@ -133,8 +133,8 @@ def _least(columns: Array, pv_pct: Array) -> Array:
     return np.asarray(np.linalg.lstsq(columns.T, pv_pct, rcond=1e-10)[0])
 
 
-def refined(trace: Trace, start: Fit, tolerance: float = 1e-4, steps_at_most: int = 40) -> Fit:
-    """Levenberg and Marquardt from a start until the misfit falls by less than ``tolerance`` of itself in a step.
+def refined(trace: Trace, start: Fit, tolerance_ratio: float = 1e-4, steps_at_most: int = 40) -> Fit:
+    """Levenberg and Marquardt from a start until the misfit falls by less than ``tolerance_ratio`` of itself in a step.
 
     The dead time stays in 0 .. DEAD_TIME_HIGH and the shape in its bounds: a parameter that pushes against its
     bound is held there for the step.
@@ -160,7 +160,7 @@ def refined(trace: Trace, start: Fit, tolerance: float = 1e-4, steps_at_most: in
                 fit, damping = tried, max(damping / 8, DAMPING_LOWEST)
                 break
             damping *= 5
-        if not fit.misfit < (1 - tolerance) * before or fit.misfit < tolerance * fit.misfit_floor:
+        if not fit.misfit < (1 - tolerance_ratio) * before or fit.misfit < tolerance_ratio * fit.misfit_floor:
             break
     return fit
 

@@ -66,21 +66,21 @@ def fit_plant(signals: Waveforms, period_s: float) -> PlantFits:
 def update_plant(signals: Waveforms, earlier: PlantFits, later_s: float = 0.0) -> PlantFits:
     """The fits of a test that has changed little since: it has grown, or its effects count as ``later_s`` later."""
     grown = trace_of(signals, earlier.period_s, later_s)
-    trace = replace(grown, has_ramp=earlier.trace.has_ramp, load_from=earlier.trace.load_from)
+    trace = replace(grown, has_ramp=earlier.trace.has_ramp, load_from_ratio=earlier.trace.load_from_ratio)
     return _ranked(trace, earlier.period_s, updated_fits(trace, earlier.fits))
 
 
 def process_model(fit: Fit, period_s: float) -> ProcessModel:
     """The fit in seconds: s in 1/period is s period_s in 1/s."""
-    return model_in_seconds(fit.shape, fit.dead_time, fit.numerator, period_s)
+    return model_in_seconds(fit.shape, fit.dead_time_ratio, fit.numerator, period_s)
 
 
-def model_in_seconds(shape: Array, dead_time: float, numerator: Array, period_s: float) -> ProcessModel:
+def model_in_seconds(shape: Array, dead_time_ratio: float, numerator: Array, period_s: float) -> ProcessModel:
     """B e^(-Ls)/D from parameters in periods; ``numerator`` in ascending powers."""
     order = len(shape)
     bottom = denominator(shape) * period_s ** -np.arange(order + 1.0)
     top = (numerator * period_s ** (np.arange(len(numerator)) - float(order)))[::-1]
-    return ProcessModel(tuple(map(float, top)), tuple(map(float, bottom)), dead_time * period_s)
+    return ProcessModel(tuple(map(float, top)), tuple(map(float, bottom)), dead_time_ratio * period_s)
 
 
 def _ranked(trace: Trace, period_s: float, fits: tuple[Fit, ...]) -> PlantFits:
@@ -107,7 +107,7 @@ def _suspect(trace: Trace, fits: tuple[Fit, ...]) -> Fit | None:
 
 def _loaded(trace: Trace, suspect: Fit) -> Trace:
     """The trace with its likeliest step of load: the plant is fitted anew at each of a few onsets, then nearer."""
-    tried = [replace(trace, load_from=float(onset)) for onset in _onsets(trace, COARSE_ONSETS)]
+    tried = [replace(trace, load_from_ratio=float(onset)) for onset in _onsets(trace, COARSE_ONSETS)]
     fits = [best_of(loaded, suspect.structure, [suspect.parameters]) for loaded in tried]
     best = int(np.argmin([fit.misfit for fit in fits]))
     return _nearer(tried[best], fits[best])
@@ -115,12 +115,12 @@ def _loaded(trace: Trace, suspect: Fit) -> Trace:
 
 def _nearer(loaded: Trace, fit: Fit) -> Trace:
     """The onset sought on ever finer grids, the plant refitted in between."""
-    trace = replace(loaded, load_from=None)
+    trace = replace(loaded, load_from_ratio=None)
     onsets = _onsets(trace, ONSETS)
     for _ in range(ONSET_ROUNDS):
         explained = _explained(fitted(trace, fit.structure, fit.parameters), _loads(fit, trace, onsets))
         onset, step = float(onsets[int(np.argmax(explained))]), float(onsets[1] - onsets[0])
-        loaded = replace(trace, load_from=onset)
+        loaded = replace(trace, load_from_ratio=onset)
         fit = best_of(loaded, fit.structure, [fit.parameters])
         onsets = np.linspace(onset - step, onset + step, ONSETS)
     return loaded

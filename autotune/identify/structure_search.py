@@ -51,37 +51,37 @@ def _start_families(structure: Structure, fits: dict[Structure, Fit]) -> Iterato
     if simpler is not None:
         yield _with_another_lag(simpler)
     elif structure.order == 1:
-        yield (np.array([-np.log(lag), dead_time]) for dead_time in FIRST_DEAD_TIMES for lag in FIRST_LAGS)
+        yield (np.array([-np.log(lag), dead_time_ratio]) for dead_time_ratio in FIRST_DEAD_TIMES for lag in FIRST_LAGS)
     if structure == Structure(3, 0):
         yield _with_a_pair(fits[Structure(1, 0)])
     if structure.zeros:
         plain = fits[Structure(structure.order, 0)]
         for kicks in DEAD_TIME_KICKS:
-            yield (np.append(plain.shape, kick * plain.dead_time + 0.02) for kick in kicks)
+            yield (np.append(plain.shape, kick * plain.dead_time_ratio + 0.02) for kick in kicks)
 
 
 def _with_another_lag(fit: Fit) -> Iterator[Array]:
     """A lag that takes its time from the dead time, or from the fastest lag."""
     before = poles(fit.shape)
     for share in LAG_SHARES:
-        lag = share * max(fit.dead_time, 0.03)
-        yield np.append(shape_of(np.append(-1 / lag, before)), max(fit.dead_time - lag, 0.0))
+        lag = share * max(fit.dead_time_ratio, 0.03)
+        yield np.append(shape_of(np.append(-1 / lag, before)), max(fit.dead_time_ratio - lag, 0.0))
     fastest = int(np.argmin(before.real))
     if before[fastest].imag == 0:
         halves = np.append(2 * before[fastest], np.where(np.arange(len(before)) == fastest, 2 * before, before))
-        yield np.append(shape_of(halves), fit.dead_time)
+        yield np.append(shape_of(halves), fit.dead_time_ratio)
 
 
 def _with_a_pair(fit: Fit) -> Iterator[Array]:
     """A damped pair beside the one lag, of as much lag at low frequency (2 zeta/w) as it takes from the dead time."""
     for share in PAIR_SHARES:
         for damping in PAIR_DAMPINGS:
-            w = 2 * damping / (share * max(fit.dead_time, 0.03))
+            w = 2 * damping / (share * max(fit.dead_time_ratio, 0.03))
             yield np.append(
-                np.concatenate((fit.shape, [2 * np.log(w), np.log(2 * damping * w)])), (1 - share) * fit.dead_time
+                np.concatenate((fit.shape, [2 * np.log(w), np.log(2 * damping * w)])), (1 - share) * fit.dead_time_ratio
             )
 
 
 def polished(trace: Trace, fit: Fit) -> Fit:
     """The fit driven to the bottom of its valley."""
-    return refined(trace, fit, tolerance=1e-12)
+    return refined(trace, fit, tolerance_ratio=1e-12)

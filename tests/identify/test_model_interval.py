@@ -12,7 +12,7 @@ from autotune.identify.plant_fit import PlantFits, trace_of
 from tests.identify.exact_relay import Plant
 from tests.identify.traces import EIGHT_LAGS, LAG, TWO_LAGS, period_s, seen
 
-SAMPLES_PER_PERIOD = 40.0
+SAMPLES_PER_PERIOD = 40
 
 
 def fits_of(plant: Plant, structures: list[Structure], noise_ratio: float = 0.02, seed: int = 1) -> PlantFits:
@@ -41,7 +41,7 @@ def test_the_standard_deviations_are_those_of_a_monte_carlo() -> None:
     for _ in range(120):
         trace = replace(found.trace, pv_pct=quiet + rng.normal(0.0, noise_pct, len(quiet)))
         one = sure(best_of(trace, Structure(2, 0), [found.best.parameters]))
-        points.append((one.point.log_gain, one.point.log_period))
+        points.append((one.point.log_gain, one.point.log_period_ratio))
         told.append((one.gain_sd_ratio, one.period_sd_ratio))
     # the standard error of a standard deviation of 120 draws is 6 %; the larger of two estimates reads a little high
     assert np.mean(told, axis=0) == pytest.approx(np.std(points, axis=0), rel=0.25)
@@ -57,7 +57,7 @@ def test_residuals_that_hang_together_widen_the_interval() -> None:
 def test_a_dead_time_held_at_nothing_counts_as_known() -> None:
     found = fits_of(TWO_LAGS, [Structure(3, 0)])
     held = fitted(found.trace, Structure(3, 0), np.append(found.best.shape, 0.0))
-    assert sure(held).covariance[3] == pytest.approx(0.0, abs=1e-20)
+    assert sure(held).covariance[3, 3] < 1e-11 < 0.1 * sure(found.best).covariance[3, 3]
 
 
 def test_a_structure_without_an_ultimate_point_has_no_sureness_and_as_the_best_no_conclusion() -> None:

@@ -30,13 +30,13 @@ def test_the_point_is_that_of_the_exact_root_search() -> None:
         point = crossing(fit)
         assert point is not None
         assert exp(point.log_gain) == pytest.approx(plant.ultimate_gain, rel=1e-9)
-        assert exp(point.log_period) == pytest.approx(plant.ultimate_period_s, rel=1e-9)
+        assert exp(point.log_period_ratio) == pytest.approx(plant.ultimate_period_s, rel=1e-9)
 
 
 def test_more_dead_time_is_that_of_the_plant_with_more() -> None:
     fit = fit_of(Structure(1, 0), [-log(3.0), 1.0], [2.0 / 3.0])
     longer = with_truth(Plant("longer", gain=2.0, lags_s=(3.0,), dead_time_s=1.2))
-    point = crossing(fit, later=0.2)
+    point = crossing(fit, later_ratio=0.2)
     assert point is not None
     assert exp(point.log_gain) == pytest.approx(longer.ultimate_gain, rel=1e-9)
 
@@ -59,15 +59,17 @@ def test_gradients_and_kappa_are_central_differences(
     def point(at: np.ndarray) -> np.ndarray:
         found = crossing(fit_of(structure, list(at[: len(parameters)]), list(at[len(parameters) :])))
         assert found is not None
-        return np.array([found.log_gain, found.log_period])
+        return np.array([found.log_gain, found.log_period_ratio])
 
     found = crossing(fit_of(structure, parameters, numerator))
     assert found is not None
     slopes = [(point(here + h * to) - point(here - h * to)) / (2 * h) for to in np.eye(len(here))]
     assert pytest.approx(np.array(slopes), rel=1e-4, abs=1e-6) == found.gradients.T
     # more dead time by dL turns the phase by w dL and moves ln Ku by kappa times as much
-    dead_time = found.gradients[:, len(parameters) - 1]
-    assert -dead_time[0] / (2 * np.pi / np.exp(found.log_period)) == pytest.approx(found.kappa_ratio, rel=1e-9)
+    dead_time_ratio = found.gradients[:, len(parameters) - 1]
+    assert -dead_time_ratio[0] / (2 * np.pi / np.exp(found.log_period_ratio)) == pytest.approx(
+        found.kappa_ratio, rel=1e-9
+    )
 
 
 def test_where_there_is_no_crossing_there_is_no_point() -> None:

@@ -31,7 +31,7 @@ def trace(noise_ratio: float = 0.02) -> Trace:
 def test_slopes_are_central_differences_of_what_pv_would_be(
     structure: Structure, parameters: list[float], beside: str
 ) -> None:
-    at = replace(trace(), has_ramp=beside == "a ramp", load_from=2.05 if beside == "a load step" else None)
+    at = replace(trace(), has_ramp=beside == "a ramp", load_from_ratio=2.05 if beside == "a load step" else None)
     fit, h = fitted(at, structure, np.array(parameters)), 1e-6
     for slope, direction in zip(fit.slopes, np.eye(len(parameters)), strict=True):
         up, down = (fitted(at, structure, np.array(parameters) + sign * h * direction) for sign in (1, -1))
@@ -40,7 +40,7 @@ def test_slopes_are_central_differences_of_what_pv_would_be(
 
 
 def test_the_linear_part_is_numpys_least_squares() -> None:
-    at = replace(trace(), has_ramp=True, load_from=2.0)
+    at = replace(trace(), has_ramp=True, load_from_ratio=2.0)
     fit = fitted(at, Structure(2, 1), np.array([2.0, 2.0, 0.1]))
     expected, *_ = np.linalg.lstsq(fit.columns.T, at.pv_pct)
     assert fit.linear == pytest.approx(expected, rel=1e-6)
@@ -51,7 +51,7 @@ def test_the_linear_part_is_numpys_least_squares() -> None:
 
 def test_the_optimum_is_that_of_a_general_optimiser() -> None:
     at = trace()
-    fit = refined(at, fitted(at, Structure(2, 0), np.array([2.0, 2.0, 0.1])), tolerance=1e-12)
+    fit = refined(at, fitted(at, Structure(2, 0), np.array([2.0, 2.0, 0.1])), tolerance_ratio=1e-12)
 
     def residuals(parameters: np.ndarray) -> np.ndarray:
         return fitted(at, Structure(2, 0), parameters).residual_pct
@@ -66,9 +66,9 @@ def test_a_noiseless_lag_is_found_exactly() -> None:
     unit_s = period_s(signals)
     starts = [np.array([lag, 0.1]) for lag in (-1.0, 1.0)]
     fit = best_of(trace_of(signals, unit_s), Structure(1, 0), starts)
-    fit = refined(trace_of(signals, unit_s), fit, tolerance=1e-12)
+    fit = refined(trace_of(signals, unit_s), fit, tolerance_ratio=1e-12)
     assert np.exp(fit.shape[0]) / unit_s == pytest.approx(1 / 3.0, rel=1e-6)
-    assert fit.dead_time * unit_s == pytest.approx(1.0, rel=1e-6)
+    assert fit.dead_time_ratio * unit_s == pytest.approx(1.0, rel=1e-6)
     assert fit.numerator[0] / unit_s == pytest.approx(2.0 / 3.0, rel=1e-6)
 
 
@@ -76,7 +76,7 @@ def test_a_dead_time_below_nothing_is_held_at_nothing() -> None:
     signals = seen(INVERSE)
     at = trace_of(signals, period_s(signals), later_s=signals.sample_s[6] - signals.sample_s[0])
     fit = refined(at, fitted(at, Structure(1, 0), np.array([0.0, 0.0])))
-    assert 0.0 <= fit.dead_time <= DEAD_TIME_HIGH
+    assert 0.0 <= fit.dead_time_ratio <= DEAD_TIME_HIGH
 
 
 def test_a_dead_time_beyond_the_test_leaves_nothing_to_fit_and_does_no_harm() -> None:

@@ -37,7 +37,7 @@ def test_without_noise_a_plant_of_the_bank_is_found_in_seconds_and_percent(plant
     found = fit_plant(signals, period_s(signals))
     assert off(found, plant) < 2e-3
     assert not found.trace.has_ramp
-    assert found.trace.load_from is None
+    assert found.trace.load_from_ratio is None
 
 
 def test_the_simplest_structure_that_explains_the_test_is_best() -> None:
@@ -60,8 +60,8 @@ def test_a_step_of_load_is_found_and_taken_out() -> None:
     plain = seen(TWO_LAGS, 0.02)
     from_s = 0.55 * float(plain.sample_s[-1])
     found = fit_plant(loaded(plain, TWO_LAGS, from_s, 1.0), period_s(plain))
-    assert found.trace.load_from is not None
-    assert found.trace.load_from * found.period_s == pytest.approx(from_s, abs=0.1 * TWO_LAGS.ultimate_period_s)
+    assert found.trace.load_from_ratio is not None
+    assert found.trace.load_from_ratio * found.period_s == pytest.approx(from_s, abs=0.1 * TWO_LAGS.ultimate_period_s)
     assert found.best.linear[-1] / found.best.numerator[0] == pytest.approx(1.0, rel=0.1)
     assert off(found, TWO_LAGS) < 0.05
 
@@ -84,7 +84,7 @@ def test_effects_that_come_later_are_dead_time_that_the_plant_does_not_have() ->
     signals = seen(TWO_LAGS)
     found = fit_plant(signals, period_s(signals))
     moved = update_plant(signals, found, later_s=0.2)
-    assert moved.best.dead_time * moved.period_s == pytest.approx(0.3, abs=1e-3)
+    assert moved.best.dead_time_ratio * moved.period_s == pytest.approx(0.3, abs=1e-3)
 
 
 def test_earlier_fits_are_starts_too() -> None:

@@ -27,6 +27,8 @@ EXCEPTIONS = {
     "autotune/identify/closed_forms.py Rational.*": "its unit is in the docstring; w is written as in the formulas",
     "autotune/identify/describing_function.py * -> float": "a describing function is a gain, as the docstrings say",
     "autotune/identify/refusals.py samples_per_cycle -> float": "a count; its name says of what to what",
+    "autotune/identify/output_error.py *misfit*": "a sum of squares of percents",
+    "autotune/identify/output_error.py Fit.bic -> float": "an information criterion",
     "autotune/experiment/plan.py RelayPlan.hysteresis_per_noise": "a ratio; its name says of what to what",
 }
 
