@@ -126,11 +126,11 @@ def kinds_of(has_guard: bool) -> tuple[str, ...]:
 
 
 def cuts(loop: LoopConfig) -> Iterable[int]:
-    """Every line up to the first move and from the hand-back on, and every seventh in between."""
+    """Every line up to the first move and from the hand-back on, and every eleventh in between."""
     kinds = kinds_of(loop.has_guard)
     back = max(index for index, kind in enumerate(kinds) if kind == "phase" and index < len(kinds) - 3) - 8
     begun = kinds.index("as_found") + 12
-    return [*range(1, begun), *range(begun, back, 7), *range(back, len(kinds))]
+    return [*range(1, begun), *range(begun, back, 11), *range(back, len(kinds))]
 
 
 def is_begun(loop: LoopConfig, last: int) -> bool:

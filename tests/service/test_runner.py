@@ -8,7 +8,7 @@ import pytest
 
 from autotune.config.types import LoopConfig
 from autotune.errors import IllegalEvent, JournalError
-from autotune.experiment.events import AbortAsked, TicksMissed
+from autotune.experiment.events import AbortAsked, TicksMissed, TimePassed
 from autotune.experiment.phases import Phase
 from autotune.experiment.relay import SMALLER_RATIO
 from autotune.experiment.state import EndKind, Stage, record
@@ -372,3 +372,16 @@ def test_other_things_may_happen_at_the_plant_meanwhile() -> None:
     assert ran.experiment.trip is not None
     assert ran.experiment.trip.code == "STOP_PRESSED"
     assert ran.plant.mode is LoopMode.AUTO
+
+
+@LOOPS
+def test_a_deadline_between_two_scans_is_kept_and_told_as_time_that_passed(loop: LoopConfig) -> None:
+    ran = begin(replace(loop, limits=replace(loop.limits, test_within_s=2.537)))
+    run(ran)
+    assert ran.experiment.trip is not None
+    assert ran.experiment.trip.code == "TEST_TOO_LONG"
+    (passed,) = [line.payload for line in ran.lines if isinstance(line.payload, TimePassed)]
+    assert ran.experiment.touched_s is not None
+    assert passed.t_s == pytest.approx(ran.experiment.touched_s + 2.537, abs=1e-6)
+    assert passed.t_s >= ran.experiment.touched_s + 2.537
+    assert_ended_as_found(ran)

@@ -150,7 +150,7 @@ def _cancelling(ran: Ran, first: int, times: int, *, whom: Callable[[], set["asy
 @pytest.mark.parametrize("which", LOOPS)
 def test_a_cancellation_of_the_caller_is_heard_as_abort_and_raised_after_the_hand_back(which: str) -> None:
     _, _, passes = _clean(which)
-    for first in range(3, passes, 4):
+    for first in range(3, passes, 7):
         ran = begin(LOOPS[which])
         _cancelling(ran, first, 1 + first % 3, whom=lambda ran=ran: {ran.task} if ran.task else set())  # type: ignore[misc]
         if ran.experiment.phase is not Phase.IDLE:  # cancelled before its first step, a task never runs
@@ -165,7 +165,7 @@ def _all_but_the_test_itself() -> set["asyncio.Task[object]"]:
 def test_cancelling_every_task_once_twice_or_thrice_at_any_await_leaves_the_loop_as_found(which: str) -> None:
     """As the end of ``asyncio.run`` does it; the hand-back is deaf to it too."""
     _, _, passes = _clean(which)
-    for first in range(3, passes):
+    for first in range(3, passes, 2):
         ran = begin(LOOPS[which])
         _cancelling(ran, first, 1 + first % 3, whom=_all_but_the_test_itself)
         assert_as_found(ran)
