@@ -42,13 +42,16 @@ class Run:
 
 @dataclass(frozen=True, slots=True)
 class Outcome:
-    """One run that struck: the verdict, the seconds to a safe loop and how far PV went beyond its limits."""
+    """One run that struck: the verdict, the seconds to a safe loop and how far PV went beyond its limits.
+
+    ``safe_s`` is ``None`` where that never came, ``pv_beyond_pct`` where somebody else moved the output.
+    """
 
     run: Run
     verdict: Verdict
     is_borne: bool
     safe_s: float | None
-    pv_beyond_pct: float
+    pv_beyond_pct: float | None
     told: str
 
     @property
@@ -74,7 +77,8 @@ class Tally:
         for one in self.outcomes:
             table[one.run.fault.name][one.run.moment.name][one.verdict.outcome] += 1
             row = worst[one.run.fault.name]
-            row["pv_beyond_limit_pct"] = max(row.get("pv_beyond_limit_pct", 0.0), one.pv_beyond_pct)
+            if one.pv_beyond_pct is not None:
+                row["pv_beyond_limit_pct"] = max(row.get("pv_beyond_limit_pct", 0.0), one.pv_beyond_pct)
             if one.safe_s is not None and not one.is_borne:
                 row["s_to_safe"] = max(row.get("s_to_safe", 0.0), one.safe_s)
         ends = Counter(one.verdict.end for one in self.outcomes)
@@ -88,7 +92,9 @@ class Tally:
             "beyond_limits": sum(one.verdict.beyond_limits for one in self.outcomes),
             "writes_after_release": sum(one.verdict.writes_after_release for one in self.outcomes),
             "worst_s_to_safe": max((row.get("s_to_safe", 0.0) for row in worst.values()), default=None),
-            "worst_pv_beyond_limit_pct": max((row["pv_beyond_limit_pct"] for row in worst.values()), default=None),
+            "worst_pv_beyond_limit_pct": max(
+                (row.get("pv_beyond_limit_pct", 0.0) for row in worst.values()), default=None
+            ),
             "worst": worst,
             "complaints": [line for one in self.outcomes for line in described(one)],
             "missed": self.missed,
@@ -234,7 +240,7 @@ async def _strike_once(bench: Pair, run: Run, sheets: Path) -> Outcome | None:
         verdict=judge(evidence),
         is_borne=is_borne,
         safe_s=seconds_to_safe(bench.seen, evidence) if is_test else None,
-        pv_beyond_pct=pv_beyond_pct(bench.seen, struck_s),
+        pv_beyond_pct=None if "op" in bench.taken else pv_beyond_pct(bench.seen, struck_s),
         told=said,
     )
 

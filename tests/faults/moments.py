@@ -91,17 +91,17 @@ WHEN_WRITTEN = OF_SETTINGS[2:]
 """From where the tool has seen the output that it holds in manual, so that it can tell that somebody moved it."""
 
 
-async def reach(pair: Pair, moment: Moment, rng: random.Random) -> bool:
+async def reach(pair: Pair, moment: Moment, rng: random.Random, *, is_spread: bool = True) -> bool:
     """Wait until the moment has come, and a little longer; whether it came before the tool ended."""
     if moment.after_signal is not None:
-        if not await reach(pair, moment.after_signal, rng):
+        if not await reach(pair, moment.after_signal, rng, is_spread=False):
             return False
         pair.signal(signal.SIGINT)
     assert pair.tool is not None
     ended = asyncio.ensure_future(pair.tool.ended())
     comes = asyncio.ensure_future(pair.wire.until(lambda: moment.shows(pair)))
     await asyncio.wait({ended, comes}, return_when=asyncio.FIRST_COMPLETED)
-    if comes.done() and not ended.done():
+    if is_spread and comes.done() and not ended.done():
         await asyncio.wait({ended}, timeout=rng.uniform(0.0, moment.within_s))
     has_come = comes.done() and not ended.done()
     for waiting in (ended, comes):

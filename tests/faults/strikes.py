@@ -14,7 +14,7 @@ from collections.abc import Awaitable, Callable
 from dataclasses import dataclass
 
 from tests.faults.evidence import SETTINGS, End
-from tests.faults.moments import OF_A_TEST, OF_SETTINGS, WHEN_TOUCHED, WHEN_WRITTEN, Moment
+from tests.faults.moments import BASELINE, CHECKING, OF_A_TEST, OF_SETTINGS, WHEN_TOUCHED, WHEN_WRITTEN, Moment
 from tests.faults.pair import Pair
 from tests.faults.tool import CLOCK_STEP
 from tests.faults.wire import Spoiling, Write, write_as_master
@@ -111,7 +111,7 @@ def _spoil(pair: Pair, spoiling: Spoiling) -> None:
 
 async def delay_answers(pair: Pair, rng: random.Random) -> None:
     _spoil(pair, Spoiling(answers_left=-1, answer_delay_s=rng.choice((0.03, 0.15, 0.3, 0.6))))
-    await _lasts(pair, rng.choice((0.5, 2.0, FOR_GOOD_S)))
+    await _lasts(pair, rng.choice((0.5, 2.0, 4.0)))
     pair.wire.heal()
 
 
@@ -236,7 +236,9 @@ FAULTS: tuple[Fault, ...] = (
     Fault("tool stopped for a while", stop_tool, EVERYWHERE, GIVEN_BACK),
     Fault("tool stopped for a while, no guard", stop_tool, OF_A_TEST, GIVEN_BACK, has_guard=False),
     Fault("PLC killed", kill_plc, EVERYWHERE, OR_STRANDED),  # as found where nothing had been written yet
-    Fault("PLC frozen", freeze_plc, OF_A_TEST, GIVEN_BACK),
+    Fault("PLC frozen", freeze_plc, (CHECKING, *WHEN_TOUCHED[1:]), GIVEN_BACK),
+    # The guard holds back a late output, but a request for manual that still waits in the PLC's socket is carried out.
+    Fault("PLC frozen while it is taken over", freeze_plc, (BASELINE,), OR_STRANDED),
     Fault("PLC frozen", freeze_plc, OF_SETTINGS, OR_STRANDED),
     Fault("PLC frozen, no guard", freeze_plc, OF_A_TEST, OR_STRANDED, has_guard=False),
     Fault("cable pulled", pull_cable, OF_A_TEST, GIVEN_BACK, needs="network"),
