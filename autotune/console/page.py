@@ -4,6 +4,7 @@ It decides nothing and keeps nothing: who may do what is the daemon's to say, by
 """
 
 import json
+from base64 import b64decode
 from collections.abc import AsyncIterator, Mapping
 from contextlib import aclosing
 from importlib.resources import as_file, files
@@ -113,8 +114,8 @@ class Console:
         kept = told["answer"]
         disposition = "inline" if request.path_params["what"] == "page" else "attachment"
         return Response(
-            kept["text"],
-            media_type=f"{kept['media_type']}; charset=utf-8",
+            b64decode(kept["content"]) if kept["is_base64"] else kept["content"],
+            media_type=kept["media_type"] if kept["is_base64"] else f"{kept['media_type']}; charset=utf-8",
             headers={"Content-Disposition": f'{disposition}; filename="{kept["file_name"]}"'},
         )
 

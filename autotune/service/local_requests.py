@@ -85,7 +85,7 @@ class ExportSheet(Request):
 
     act: Literal["export_sheet"] = "export_sheet"
     sheet: Name
-    what: Literal["page", "samples", "writes", "json"]
+    what: Literal["page", "pdf", "samples", "writes", "json"]
 
 
 class Look(Request):

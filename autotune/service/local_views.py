@@ -52,11 +52,12 @@ class SheetAnswer(Answer):
 
 
 class FileAnswer(Answer):
-    """One file to keep."""
+    """One file to keep; its content is text, or the base64 of bytes."""
 
     file_name: str
     media_type: str
-    text: str
+    content: str
+    is_base64: bool = False
 
 
 class LoopLineAnswer(Answer):

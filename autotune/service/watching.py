@@ -1,6 +1,7 @@
 """Answers to who only watches: nothing here can write."""
 
 import asyncio
+from base64 import b64encode
 from collections.abc import AsyncIterator
 from datetime import datetime
 from typing import assert_never
@@ -35,6 +36,7 @@ from autotune.service.local_views import (
     SheetAnswer,
     SheetLinesAnswer,
 )
+from autotune.service.printing import pdf_of
 from autotune.service.sheet_mapping import controller_line, settings_quantities
 from autotune.service.workplace import endpoint_line
 from autotune.sheet.export import samples_to_csv, to_json, writes_to_csv
@@ -68,6 +70,8 @@ class Watcher:
             case OpenSheet(sheet=sheet):
                 stored = await self._workplace.in_thread(self._stored, sheet)
                 return SheetAnswer(sheet=stored.sheet, addenda=stored.addenda, hash=stored.hash)
+            case ExportSheet(what="pdf", sheet=sheet):
+                return await self._printed(sheet)
             case ExportSheet():
                 return await self._workplace.in_thread(self._export, question)
             case Look(loop=loop):
@@ -182,6 +186,16 @@ class Watcher:
             raise SheetError(f"{self._workplace.data_dir}: no sheet is kept there yet; test a loop first")
         return self._workplace.store.get(max(lines, key=lambda line: line.started_utc).sheet_id)
 
+    async def _printed(self, name: str) -> FileAnswer:
+        stored = await self._workplace.in_thread(self._stored, name)
+        pdf = await pdf_of(stored, await self._workplace.in_thread(self._workplace.store.head_hash))
+        return FileAnswer(
+            file_name=f"{stored.sheet.sheet_id}.pdf",
+            media_type="application/pdf",
+            content=b64encode(pdf).decode(),
+            is_base64=True,
+        )
+
     def _export(self, asked: ExportSheet) -> FileAnswer:
         stored = self._stored(asked.sheet)
         name = stored.sheet.sheet_id
@@ -189,10 +203,12 @@ class Watcher:
             case "page":
                 zone = datetime.now().astimezone().tzinfo
                 page = sheet_page(stored) if zone is None else sheet_page(stored, zone)
-                return FileAnswer(file_name=f"{name}.txt", media_type="text/plain", text=page)
+                return FileAnswer(file_name=f"{name}.txt", media_type="text/plain", content=page)
             case "samples":
-                return FileAnswer(file_name=f"{name}-samples.csv", media_type="text/csv", text=samples_to_csv(stored))
+                return FileAnswer(
+                    file_name=f"{name}-samples.csv", media_type="text/csv", content=samples_to_csv(stored)
+                )
             case "writes":
-                return FileAnswer(file_name=f"{name}-writes.csv", media_type="text/csv", text=writes_to_csv(stored))
-            case "json":
-                return FileAnswer(file_name=f"{name}.json", media_type="application/json", text=to_json(stored))
+                return FileAnswer(file_name=f"{name}-writes.csv", media_type="text/csv", content=writes_to_csv(stored))
+            case _:
+                return FileAnswer(file_name=f"{name}.json", media_type="application/json", content=to_json(stored))

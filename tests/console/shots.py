@@ -1,6 +1,8 @@
 """Pictures of the page for a person to look at: python -m tests.console.shots [FOLDER]."""
 
 import asyncio
+import os
+import signal
 import sys
 from collections.abc import AsyncIterator
 from contextlib import asynccontextmanager
@@ -25,7 +27,7 @@ async def take_all(folder: Path) -> None:
     with TemporaryDirectory(prefix="shots-") as kept:
         async with _skid(Path(kept)) as (plant, page), browser() as running:
             async with screen(running, page.url) as desk:
-                await _job(desk, plant, folder)
+                await _job(desk, plant, page, folder)
             await _tablet(running, page, folder)
 
 
@@ -40,7 +42,7 @@ async def _skid(kept: Path) -> AsyncIterator[tuple[SoftPlant, ServedPage]]:
             yield plant, page
 
 
-async def _job(desk: Screen, plant: SoftPlant, folder: Path) -> None:
+async def _job(desk: Screen, plant: SoftPlant, service: ServedPage, folder: Path) -> None:
     page = desk.page
 
     async def shot(name: str, *, whole: bool = False) -> None:
@@ -68,6 +70,17 @@ async def _job(desk: Screen, plant: SoftPlant, folder: Path) -> None:
     await expect(page.get_by_role("cell", name="counts", exact=True).first).to_be_visible(timeout=_LONG_MS)
     await shot("05-test")
     await shot("06-test-whole", whole=True)
+    console = service.console_process_id
+    assert console is not None
+    os.kill(console, signal.SIGSTOP)
+    await expect(page.get_by_text("No live data since")).to_be_visible()
+    await shot("06-lost")
+    os.kill(console, signal.SIGCONT)
+    await expect(page.get_by_text("No live data since")).to_be_hidden()
+    await page.evaluate("document.dispatchEvent(new Event('locked'))")
+    await shot("06-locked")
+    await page.get_by_label("Secret of").fill(SECRET)
+    await page.get_by_role("button", name="Unlock").click()
     await expect(page.get_by_role("heading", name="Findings")).to_be_visible(timeout=_LONG_MS)
     await shot("07-found", whole=True)
     await page.get_by_role("button", name="Plan the change to").first.click()

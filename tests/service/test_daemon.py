@@ -1,6 +1,7 @@
 """The daemon over its own sockets, on the soft plant's fast loop."""
 
 import stat
+from base64 import b64decode
 from pathlib import Path
 
 import pytest
@@ -33,7 +34,9 @@ async def test_a_whole_test_is_started_watched_and_found_in_the_archive(tmp_path
         lines = (await at.ask("list_sheets", loop=LOOP))["answer"]["sheets"]
         assert [line["sheet"] for line in lines] == [ended["sheet"]]
         page = (await at.ask("export_sheet", sheet="last", what="page"))["answer"]
-        assert "TEST SHEET" in page["text"]
+        assert "TEST SHEET" in page["content"]
+        paper = (await at.ask("export_sheet", sheet="last", what="pdf"))["answer"]
+        assert b64decode(paper["content"]).startswith(b"%PDF-")
 
 
 async def test_settings_are_written_by_who_signed_in_and_types_the_digest(tmp_path: Path) -> None:

@@ -50,7 +50,7 @@ const page = {
       alarm.hidden = true;
       say(alarm, "");
     }
-    reach.setLost(Boolean(since));
+    document.body.classList.toggle("lost", Boolean(since));
   },
 };
 
@@ -126,9 +126,9 @@ function signedIn(answer) {
   stream?.close();
   stream = new Stream("watch_loops", {}, {
     onAnswer(answered) {
-      lastLoops = answered.loops;
+      lastLoops = answered;
       reach.show(answered.loops.filter((line) => line.doing === "test"));
-      for (const listener of listeners) listener(answered.loops);
+      for (const listener of listeners) listener(answered);
     },
     onLost: page.onAlarm,
     onBack: () => page.onAlarm(null),

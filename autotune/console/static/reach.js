@@ -11,7 +11,6 @@ export class Reach {
     this.tell = tell;
     this.loops = [];
     this.held = null;
-    this.isLost = false;
     document.addEventListener("keydown", (event) => this.#down(event));
     document.addEventListener("keyup", (event) => event.key === "Escape" && this.#up());
     window.addEventListener("blur", () => this.#up());
@@ -40,11 +39,6 @@ export class Reach {
         ),
       ),
     );
-  }
-
-  setLost(isLost) {
-    this.isLost = isLost;
-    this.element.classList.toggle("lost", isLost);
   }
 
   #down(event) {

@@ -281,7 +281,7 @@ function recordPart({ sheet, hash }) {
       ["Samples, writes", `${sheet.samples.t_s.length}, ${sheet.writes.length}`],
       ["Hash", h("code", { class: "hash" }, hash)],
     ),
-    h("p", { class: "files" }, file("page", "As a page to print"), file("samples", "Samples (CSV)"), file("writes", "Writes (CSV)"), file("json", "Everything (JSON)")),
+    h("p", { class: "files" }, file("pdf", "Paper to sign (PDF)"), file("page", "As plain text"), file("samples", "Samples (CSV)"), file("writes", "Writes (CSV)"), file("json", "Everything (JSON)")),
   );
 }
 

@@ -93,7 +93,7 @@ export class Trend {
     const limits = [opLow, opHigh].filter((one) => one !== null && one !== undefined);
     const [low, high] = range([this.op, asked, limits]);
     const y = (eu) => OP_TOP + (OP_HEIGHT * (high - eu)) / (high - low);
-    const parts = [frame(OP_TOP, OP_HEIGHT), levels(low, high, y, 3), title(`OP ${this.units.op}`, OP_TOP)];
+    const parts = [frame(OP_TOP, OP_HEIGHT), levels(low, high, y, 4), title(`OP ${this.units.op}`, OP_TOP)];
     for (const limit of limits) parts.push(limitLine(y(limit), "", false));
     parts.push(s("path", { class: "op", d: path(this.t, this.op, x, y) }));
     let before = null;
