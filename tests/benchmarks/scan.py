@@ -10,7 +10,8 @@ The bare Modbus client is not asked to decode registers.  They take turns, and t
 * round trip of both requests; its 99th percentile needs a hundred samples or more to mean anything;
 * ticks missed, and how late scans start.
 
-``load_average`` tells how busy the machine was: above the number of its cores only the ratios are worth a look.
+``load_average`` tells how busy the machine was: above the number of its cores only the ratios are worth a look.  Where
+the bare library misses ticks too, the peer or the machine is at its end, and the row says little about our links.
 """
 
 import argparse
