@@ -12,6 +12,10 @@ from autotune.loop.outcome import Refusal
 from autotune.service.testing import TestEnd
 from autotune.sheet import schema
 
+_BRIEF_ROWS = 8
+_COMPARED = ("peak_sensitivity", "overshoot_pct", "load_iae_pct_s")
+_WIDE_COLUMNS = 104
+
 
 def show_findings(voice: Voice, loop: LoopConfig, ended: TestEnd) -> None:
     """What was seen, what it means and how sure that is."""
@@ -41,40 +45,52 @@ def show_findings(voice: Voice, loop: LoopConfig, ended: TestEnd) -> None:
 
 
 def proposals_table(voice: Voice, sheet: schema.Sheet, *, is_brief: bool = False) -> None:
-    """All proposals side by side with the settings as found, in the controller's own words and units.
+    """Proposals side by side with the settings as found, in the controller's own words and units.
 
-    ``is_brief`` tells the cautions of the recommended one only.  A caution that all share is told once.
+    They stand in the order of the sheet, the best suited first.  ``is_brief`` shows the first few and tells the
+    cautions of the recommended one only.  A caution that several share is told once.
     """
-    as_found = () if sheet.as_found is None else sheet.as_found.settings
     proposals = [one for one in sheet.proposals if one.settings]
-    fields = proposals[0].settings if proposals else as_found
-    table = Table(box=None, padding=(0, 2, 0, 0), show_edge=False)
-    table.add_column("", no_wrap=True)
-    for one in fields:
-        table.add_column(f"{one.label} {one.unit}", justify="right", header_style="quiet", no_wrap=True)
-    table.add_column("rounded", justify="right", header_style="quiet", no_wrap=True)
-    table.add_column("gain x", justify="right", header_style="quiet", no_wrap=True)
-    table.add_row("as found", *_amounts(as_found, len(fields)), "", "1")
-    for proposal in proposals:
-        mark = " *" if proposal.is_recommended else ""
-        factor = "-" if proposal.gain_factor is None else f"{proposal.gain_factor:.2f}"
-        rounding = "-" if proposal.rounding_pct is None else f"{proposal.rounding_pct:.2f} %"
-        table.add_row(f"{proposal.name}{mark}", *_amounts(proposal.settings, len(fields)), rounding, factor)
+    shown = proposals[:_BRIEF_ROWS] if is_brief else proposals
     voice.say()
     voice.say("Proposals", style="head")
-    voice.console.print(table)
-    for proposal in sheet.proposals:
-        if proposal.not_proposed_because is not None:
-            voice.say(f"  {proposal.name}: not proposed. {proposal.not_proposed_because}", style="quiet")
+    voice.console.print(_comparison(sheet, shown, is_wide=voice.console.width >= _WIDE_COLUMNS))
     if sheet.proposals_reason:
-        recommended = any(one.is_recommended for one in proposals)
-        voice.say(
-            f"  {'* recommended: ' if recommended else 'Nothing is recommended: '}{sheet.proposals_reason}", "caution"
-        )
-    _show_cautions(voice, [one for one in proposals if one.is_recommended or not is_brief])
-    if is_brief and len(proposals) > 1:
-        voice.say(f"  'autotune propose CONFIG {sheet.sheet_id}' tells what speaks against each of the others.")
+        is_any = any(one.is_recommended for one in proposals)
+        words = "* recommended: " if is_any else "Nothing is recommended: "
+        voice.say(f"  {words}{sheet.proposals_reason}", "caution")
+    _show_cautions(voice, [one for one in shown if one.is_recommended or not is_brief])
+    if is_brief:
+        others = len(sheet.proposals) - len(shown)
+        voice.say(f"  'autotune propose CONFIG {sheet.sheet_id}' shows {others} more, and what speaks against each.")
+    else:
+        for proposal in sheet.proposals:
+            if proposal.not_proposed_because is not None:
+                voice.say(f"  {proposal.name}: not proposed. {proposal.not_proposed_because}", style="quiet")
     voice.say()
+
+
+def _comparison(sheet: schema.Sheet, proposals: Sequence[schema.Proposal], *, is_wide: bool) -> Table:
+    """A narrow terminal has room for the margin only."""
+    as_found = () if sheet.as_found is None else sheet.as_found.settings
+    fields = proposals[0].settings if proposals else as_found
+    figures = [
+        one
+        for one in (proposals[0].figures if proposals else ())
+        if one.name in (_COMPARED if is_wide else _COMPARED[:1])
+    ]
+    table = Table(box=None, padding=(0, 2, 0, 0), show_edge=False)
+    table.add_column("", no_wrap=True)
+    titles = [f"{one.label} {one.unit}".rstrip() for one in (*fields, *figures)]
+    for title in (*titles, "rounded", "gain x"):
+        table.add_column(title, justify="right", header_style="quiet", no_wrap=True)
+    table.add_row("as found", *_amounts(as_found, fields), *_amounts(sheet.as_found_figures, figures, 3), "", "1")
+    for one in proposals:
+        factor = "-" if one.gain_factor is None else f"{one.gain_factor:.2f}"
+        rounding = "-" if one.rounding_pct is None else f"{one.rounding_pct:.2f} %"
+        name = f"{one.name} *" if one.is_recommended else one.name
+        table.add_row(name, *_amounts(one.settings, fields), *_amounts(one.figures, figures, 3), rounding, factor)
+    return table
 
 
 def _show_cautions(voice: Voice, proposals: Sequence[schema.Proposal]) -> None:
@@ -86,6 +102,7 @@ def _show_cautions(voice: Voice, proposals: Sequence[schema.Proposal]) -> None:
             told.add(caution)
 
 
-def _amounts(quantities: tuple[schema.Quantity, ...], count: int) -> list[str]:
-    shown = ["-" if one.amount is None else f"{one.amount:.4g}" for one in quantities]
-    return shown + ["-"] * (count - len(shown))
+def _amounts(quantities: Sequence[schema.Quantity], wanted: Sequence[schema.Quantity], digits: int = 4) -> list[str]:
+    """The amounts of the wanted names, in their order."""
+    amounts = {one.name: one.amount for one in quantities}
+    return ["-" if (amount := amounts.get(one.name)) is None else f"{amount:.{digits}g}" for one in wanted]

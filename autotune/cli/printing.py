@@ -8,6 +8,7 @@ from pydantic import BaseModel
 from rich.console import Console
 from rich.theme import Theme
 
+_PAGE_COLUMNS = 110
 _THEME = Theme({"stop": "bold red", "caution": "yellow", "good": "green", "quiet": "dim", "head": "bold"})
 
 
@@ -21,6 +22,8 @@ class Voice:
     def __init__(self, *, is_json: bool = False) -> None:
         self.is_json = is_json
         self.console = Console(stderr=is_json, theme=_THEME, highlight=False, soft_wrap=False)
+        if not self.console.is_terminal:
+            self.console.width = _PAGE_COLUMNS  # a file or a pipe has no width of its own
 
     def say(self, text: str = "", style: str | None = None) -> None:
         """One paragraph for a person; never read as markup."""

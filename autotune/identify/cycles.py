@@ -3,7 +3,7 @@
 from itertools import pairwise
 
 import numpy as np
-from scipy.stats import norm
+from scipy.special import ndtri
 
 from autotune.identify.findings import Cycle
 from autotune.identify.waveforms import Array, Waveforms
@@ -68,7 +68,7 @@ def swing_pct(pv_pct: Array, noise_pct: float) -> float:
 
 
 def _largest_of(k: int) -> float:
-    return float(norm.ppf((k - 0.375) / (k + 0.25)))
+    return float(ndtri((k - 0.375) / (k + 0.25)))
 
 
 def _first_move(op_pct: Array) -> int:

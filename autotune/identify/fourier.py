@@ -11,7 +11,7 @@ by 2 (n/(N - n))^2 at N samples a cycle.  That share is part of each point's sca
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.stats import t as student
+from scipy.special import stdtrit
 
 from autotune.identify.findings import Cycle, OscillationPoint
 from autotune.identify.waveforms import Array, Waveforms
@@ -119,7 +119,7 @@ def _spread(signals: Waveforms, level: Array, cycles: tuple[Cycle, ...], order: 
     # two real components a cycle: the pooled variance has 2 (n - 1) degrees of freedom
     freedom = 2 * (len(cycles) - 1)
     variance = np.sum(np.abs(several - np.mean(several, axis=0)) ** 2, axis=0) / freedom
-    return np.asarray(np.sqrt(variance / len(cycles)) * float(student.ppf(0.975, freedom)) / 1.959964)
+    return np.asarray(np.sqrt(variance / len(cycles)) * float(stdtrit(freedom, 0.975)) / 1.959964)
 
 
 def _op_of_cycle(signals: Waveforms, cycle: Cycle, order: Array) -> ComplexArray:

@@ -9,7 +9,7 @@ from dataclasses import dataclass
 from math import exp, hypot, log, sqrt
 
 import numpy as np
-from scipy.stats import norm, qmc
+from scipy.special import ndtri
 
 from autotune.identify.model import ModelWithDraws, ProcessModel
 from autotune.identify.model_bank import SHAPE_HIGH, SHAPE_LOW
@@ -201,8 +201,10 @@ def _draws(found: PlantFits, sure: Sureness, hull_s: float, count: int) -> list[
     to_ratios[order + 1 :] /= gain
     to_ratios[order + 2 :, order + 1] = -zeros / gain
     covariance = to_ratios @ sure.covariance @ to_ratios.T
+    from scipy.stats import qmc  # a second of loading that only a finished test pays
+
     cube = qmc.Halton(len(covariance) + 1, scramble=False).random(count + 1)[1:]
-    normal = np.clip(norm.ppf(cube[:, :-1]), -DRAW_SD_AT_MOST, DRAW_SD_AT_MOST)
+    normal = np.clip(ndtri(cube[:, :-1]), -DRAW_SD_AT_MOST, DRAW_SD_AT_MOST)
     scale = np.sqrt(np.maximum(np.diag(covariance), 1e-300))
     spread, direction = np.linalg.eigh(covariance / np.outer(scale, scale))
     drawn = normal @ (direction * np.sqrt(np.maximum(spread, 0.0))).T * scale

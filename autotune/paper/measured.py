@@ -118,7 +118,13 @@ def _side_by_side(sheet: Sheet, offered: Sequence[Proposal], written: frozenset[
     fields = _columns([found, *(one.settings for one in offered)])
     figures = _columns(one.figures for one in offered)
     titles = ("", *(_titled(one) for one in fields), "gain x", *(_titled(one) for one in figures), "")
-    as_found = ("as found", *(exact(amount_of(found, one.name)) for one in fields), "1", *("" for _ in figures), "")
+    as_found = (
+        "as found",
+        *(exact(amount_of(found, one.name)) for one in fields),
+        "1",
+        *(_figure(sheet.as_found_figures, one.name) for one in figures),
+        "",
+    )
     body = [
         (
             one.name,

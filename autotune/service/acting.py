@@ -67,6 +67,11 @@ class Actor:
         desk = self._daemon.desk(asked.loop)
         if asked.typed_loop != desk.loop.name:
             return Refusal("NAME_WRONG", f"typed was {asked.typed_loop!r}", f"type {desk.loop.name} to start")
+        at_most = self._daemon.workplace.configuration.concurrent_tests_at_most
+        tested = [one.loop.name for one in self._daemon.desks.values() if one.occupation.doing == "test"]
+        if len(tested) >= at_most:
+            reason = f"concurrent_tests_at_most is {at_most}, and {', '.join(tested)} is being tested"
+            return Refusal("TOO_MANY_TESTS", reason, "wait until that test is over")
         words = f"permit {asked.permit}; loop owner {asked.loop_owner}; the plant is protected by {asked.protection}"
         return await desk.start(Allowed(by, words, asked.accepted)) or DoneAnswer(text="the test has begun")
 

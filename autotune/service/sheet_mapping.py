@@ -9,6 +9,7 @@ from types import MappingProxyType
 from typing import Literal
 
 from autotune.config.types import LoopConfig, ModbusEndpoint
+from autotune.design.forecast import Forecast
 from autotune.design.proposal import ProposalSheet
 from autotune.experiment.phases import Phase
 from autotune.experiment.plan import TestPlan
@@ -281,6 +282,35 @@ def findings_section(result: FindingsOrRefusal | None, time_base: str) -> schema
     )
 
 
+def forecast_figures(told: Forecast | Refusal | None) -> tuple[schema.Quantity, ...]:
+    """What settings are expected to do; empty where no model says it."""
+    if told is None or isinstance(told, Refusal):
+        return ()
+    figures = [_bounded("peak_sensitivity", "Ms", "", told.margins.peak_sensitivity, told.peak_sensitivity)]
+    for name, label, unit, amount in (
+        ("gain_margin_ratio", "gain margin", "x", told.margins.gain_margin_ratio),
+        ("phase_margin_deg", "phase margin", "deg", told.margins.phase_margin_deg),
+        ("delay_margin_s", "delay margin", "s", told.margins.delay_margin_s),
+        ("setpoint_settling_time_s", "settling", "s", None if told.setpoint is None else told.setpoint.settling_time_s),
+        ("op_noise_pct", "OP noise", "%", told.op_noise_pct),
+    ):
+        figures.append(schema.Quantity(name=name, label=label, unit=unit, amount=amount))
+    if told.setpoint is not None and told.load is not None:
+        overshoot, load_iae = told.setpoint.overshoot_pct, told.load.iae_pct_s
+        figures.insert(1, _bounded("overshoot_pct", "overshoot", "%", overshoot, told.overshoot_pct))
+        figures.insert(2, _bounded("load_iae_pct_s", "load IAE", "%s/%", load_iae, told.load_iae_pct_s))
+    return tuple(figures)
+
+
+def _bounded(name: str, label: str, unit: str, amount: float | None, band: Interval | None) -> schema.Quantity:
+    """A figure with its band, where the band holds it."""
+    if amount is None or band is None or not band.low <= amount <= band.high:
+        return schema.Quantity(name=name, label=label, unit=unit, amount=amount)
+    return schema.Quantity(
+        name=name, label=label, unit=unit, amount=amount, low=band.low, high=band.high, level=band.level
+    )
+
+
 def proposals_section(loop: LoopConfig, proposed: ProposalSheet | None) -> tuple[schema.Proposal, ...]:
     """All proposals, and the rules that propose nothing with their reason."""
     if proposed is None:
@@ -292,6 +322,7 @@ def proposals_section(loop: LoopConfig, proposed: ProposalSheet | None) -> tuple
             source=proposal.source,
             is_recommended=proposal.name == proposed.recommended,
             settings=settings_quantities(loop, proposal.fields),
+            figures=forecast_figures(proposal.forecast),
             rounding_pct=proposal.rounding_pct,
             gain_factor=proposal.gain_factor,
             cautions=proposal.cautions,

@@ -10,7 +10,6 @@ from autotune.config.digest import canonical_text
 from autotune.config.test_plan import plan_for
 from autotune.config.types import LoopConfig
 from autotune.design.proposal import ProposalSheet
-from autotune.design.propose import propose
 from autotune.errors import RecordNotKept, SheetError
 from autotune.experiment.phases import Phase
 from autotune.experiment.state import Experiment, record
@@ -23,6 +22,7 @@ from autotune.service.check import LoopCheck, check_loop
 from autotune.service.deaf import to_the_end
 from autotune.service.journal import FileJournal
 from autotune.service.persons import Person
+from autotune.service.proposing import DesignTask
 from autotune.service.runner import TestRunner
 from autotune.service.sheet_mapping import (
     TimeAxis,
@@ -31,6 +31,7 @@ from autotune.service.sheet_mapping import (
     costs_of,
     event_lines,
     findings_section,
+    forecast_figures,
     limits_section,
     outcome_section,
     person_line,
@@ -165,24 +166,18 @@ class SupervisedTest:
         findings: FindingsOrRefusal | None = None
         try:
             findings = await self._workplace.estimator.measure(recorded)
-            return findings, self._propose(findings, settings)
+            return findings, await self._propose(findings, settings)
         except Exception as fault:  # noqa: BLE001 - told on the sheet
             runner.faults.append(f"{type(fault).__name__}: {fault}")
             lost = Refusal("NOT_CONCLUDED", f"the conclusion failed: {fault}", "report it with the sheet's samples")
             return findings or lost, None
 
-    def _propose(self, findings: FindingsOrRefusal | None, settings: BlockFields | None) -> ProposalSheet | None:
+    async def _propose(self, findings: FindingsOrRefusal | None, settings: BlockFields | None) -> ProposalSheet | None:
         if not isinstance(findings, Findings):
             return None
-        return propose(
-            ultimate=findings.ultimate,
-            static_gain=findings.static_gain,
-            block=self.loop.block,
-            action=self.loop.action,
-            pv_span=self.loop.pv_span,
-            present=settings,
-            noise_pct=self.runner.experiment.noise_pct,
-        )
+        noise_pct = self.runner.experiment.noise_pct
+        task = DesignTask(findings, self.loop.block, self.loop.action, self.loop.pv_span, settings, noise_pct)
+        return await self._workplace.estimator.propose(task)
 
     def _sheet(self, sheet_id: str, axis: TimeAxis, permission: Permission, told: "_Told") -> schema.Sheet:
         runner, experiment = told.runner, told.runner.experiment
@@ -214,6 +209,7 @@ class SupervisedTest:
             findings=findings_section(told.findings, time_base.value),
             proposals=proposals_section(self.loop, told.proposed),
             proposals_reason="" if told.proposed is None else told.proposed.reason,
+            as_found_figures=() if told.proposed is None else forecast_figures(told.proposed.present_forecast),
             costs=costs_of(self.plan, self.loop),
             journal_file=told.journal.name,
             journal_digest=sha256(told.journal.read_bytes()).hexdigest(),

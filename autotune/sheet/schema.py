@@ -307,6 +307,7 @@ class Sheet(_Stored):
     findings: Findings | None = None
     proposals: tuple[Proposal, ...] = ()
     proposals_reason: str = ""
+    as_found_figures: tuple[Quantity, ...] = ()
     costs: tuple[str, ...] = ()
     journal_file: str | None = None
     journal_digest: Digest | None = None

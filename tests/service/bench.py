@@ -9,6 +9,7 @@ from typing import Any, TypeVar
 
 from autotune.config.test_plan import plan_for
 from autotune.config.types import Configuration, LoopConfig
+from autotune.design.proposal import ProposalSheet
 from autotune.experiment.commands import HandBack
 from autotune.experiment.plan import TestPlan
 from autotune.experiment.state import Experiment
@@ -20,6 +21,7 @@ from autotune.service.estimator import Estimator
 from autotune.service.journal import MemoryJournal
 from autotune.service.journal_reading import JournalLine, read_journal_text
 from autotune.service.journal_replay import replay
+from autotune.service.proposing import DesignTask, proposals_for
 from autotune.service.runner import TestRunner
 from autotune.service.workplace import Workplace
 from autotune.sheet.store import MemoryStore
@@ -171,6 +173,10 @@ class UnaskedEstimator:
     async def measure(self, record: Record) -> FindingsOrRefusal:
         """A refusal that tells how much there was."""
         return Refusal("NOT_ASKED", f"{len(record.samples)} samples were not looked at", "ask an estimator")
+
+    async def propose(self, task: DesignTask) -> ProposalSheet:
+        """As the product does, in this process."""
+        return proposals_for(task)
 
 
 def workplace_at(

@@ -13,6 +13,7 @@ import pytest
 from scipy.optimize import brentq
 
 from autotune.config.types import LoopConfig
+from autotune.design.proposal import ProposalSheet
 from autotune.errors import JournalError, LoopBusy, RecordNotKept, SheetError
 from autotune.experiment.phases import Phase
 from autotune.experiment.state import Stage
@@ -24,6 +25,7 @@ from autotune.service.check import LoopCheck
 from autotune.service.estimator import InlineEstimator
 from autotune.service.journal import journal_file
 from autotune.service.persons import Person
+from autotune.service.proposing import DesignTask, proposals_for
 from autotune.service.sheet_mapping import fields_of
 from autotune.service.testing import Permission, SupervisedTest, TestEnd
 from autotune.service.workplace import Workplace
@@ -200,6 +202,10 @@ class Clumsy:
 
     async def measure(self, record: Record) -> FindingsOrRefusal:
         raise ZeroDivisionError(f"a slip of ours after {len(record.samples)} samples")
+
+    async def propose(self, task: DesignTask) -> ProposalSheet:
+        """As the product does, in this process."""
+        return proposals_for(task)
 
 
 def test_a_slip_in_the_conclusion_costs_the_findings_and_not_the_sheet(tmp_path: Path) -> None:

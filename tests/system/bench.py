@@ -5,12 +5,14 @@ from pathlib import Path
 
 from autotune.config.load import load
 from autotune.config.types import LoopConfig
+from autotune.design.proposal import ProposalSheet
 from autotune.identify.findings import FindingsOrRefusal
 from autotune.loop.outcome import Refusal
 from autotune.loop.record import Record
 from autotune.service.clock import utc_now
 from autotune.service.estimator import Estimator
 from autotune.service.persons import person_at_the_terminal
+from autotune.service.proposing import DesignTask, proposals_for
 from autotune.service.testing import Permission
 from autotune.service.workplace import Workplace, open_workplace
 from simulator.rig import find_rig
@@ -62,6 +64,10 @@ class NotMeasured:
         return Refusal(
             "NOT_MEASURED", f"{len(record.samples)} samples were not to be identified", "choose another estimator"
         )
+
+    async def propose(self, task: DesignTask) -> ProposalSheet:
+        """As the product does, in this process."""
+        return proposals_for(task)
 
 
 def write_bench(folder: Path, port: int, changes: Sequence[Change] = ()) -> Path:
