@@ -7,8 +7,9 @@ from datetime import tzinfo
 from reportlab.platypus import Flowable
 
 from autotune.paper.layout import NOTE, SMALL, STRONG, bullets, gap, grid, text
-from autotune.paper.words import amount_of, exact, quantity, shown
+from autotune.paper.words import amount_of, compared, exact, quantity, shown, written_proposals
 from autotune.sheet.schema import Findings, Proposal, Quantity, Sheet, Span, WriteLine
+from autotune.sheet.store import StoredSheet
 
 LINES_AT_MOST = 150
 """Longer lists are cut on paper and say so; the CSV export holds all of them."""
@@ -94,9 +95,10 @@ def _seen(found: Findings) -> Iterator[Flowable]:
     yield grid(titles, body, figures=range(1, 6))
 
 
-def proposals(sheet: Sheet, written: frozenset[str]) -> Iterator[Flowable]:
-    """All proposals side by side, the reason of the choice, and what speaks for and against each."""
-    offered = [one for one in sheet.proposals if one.not_proposed_because is None]
+def proposals(stored: StoredSheet) -> Iterator[Flowable]:
+    """The first proposals side by side, the reason of the choice, and what speaks for and against each."""
+    sheet, written = stored.sheet, written_proposals(stored)
+    offered, more = compared(stored)
     refused = [one for one in sheet.proposals if one.not_proposed_because is not None]
     if sheet.proposals_reason:
         is_any = any(one.is_recommended for one in offered)
@@ -104,6 +106,8 @@ def proposals(sheet: Sheet, written: frozenset[str]) -> Iterator[Flowable]:
         yield gap()
     if offered:
         yield _side_by_side(sheet, offered, written)
+        if more:
+            yield text(f"{more} more proposals are kept on the sheet.", SMALL)
         yield gap()
         in_words = [(one.name, f"{one.title}, after {one.source}. {_spoken(one)}") for one in offered]
         yield grid(("proposal", "where it comes from, and what speaks against it"), in_words, style=SMALL)

@@ -36,7 +36,6 @@ from autotune.paper.layout import (
 )
 from autotune.paper.trend import Trend
 from autotune.paper.words import instant, newest_change
-from autotune.sheet.schema import Change
 from autotune.sheet.store import StoredSheet
 
 _FOOT_AT = 11 * mm
@@ -89,9 +88,6 @@ def _canvas_maker(made: datetime) -> Callable[..., Canvas]:
 
 def _sheet(stored: StoredSheet, head_hash: str, zone: tzinfo) -> list[Flowable]:
     sheet = stored.sheet
-    written = frozenset(
-        entry.source for entry in stored.addenda if isinstance(entry, Change) and entry.result == "WRITTEN"
-    )
     change = newest_change(stored)
     titled = "Outcome, as found and as left" if change is None else "Outcome, as found and as left (addendum)"
     parts = [
@@ -100,7 +96,7 @@ def _sheet(stored: StoredSheet, head_hash: str, zone: tzinfo) -> list[Flowable]:
         ("Trend", iter([gap(3), Trend(sheet, zone)] if sheet.samples.t_s else [text("No sample was taken.")])),
         ("Findings", measured.findings(sheet)),
         ("Cycles seen", measured.cycles(sheet)),
-        ("Proposals", measured.proposals(sheet, written)),
+        ("Proposals", measured.proposals(stored)),
         ("What this test can't tell, and what that costs", bullets(sheet.costs or ("nothing is recorded here",))),
         ("Permission and cautions", heading.permission(sheet, zone)),
         ("The test as planned, and its limits", heading.planned(sheet)),

@@ -9,6 +9,7 @@ from autotune.paper.words import (
     amount_of,
     between,
     both,
+    compared,
     exact,
     instant,
     newest_change,
@@ -39,7 +40,7 @@ def sheet_page(stored: StoredSheet, zone: tzinfo = UTC) -> str:
         *_part("What happened", _events(sheet, zone)),
         *_part("Cycles seen", _cycles(sheet)),
         *_part("Findings", _findings(sheet)),
-        *_part("Proposals", _proposals(sheet)),
+        *_part("Proposals", _proposals(stored)),
         *_part("What this test can't tell", _bullets(sheet.costs)),
         *_part("Added later", _addenda(stored, zone)),
         *_part("Record", _record(stored)),
@@ -179,11 +180,14 @@ def _findings(sheet: Sheet) -> Iterator[str]:
         )
 
 
-def _proposals(sheet: Sheet) -> Iterator[str]:
+def _proposals(stored: StoredSheet) -> Iterator[str]:
+    sheet = stored.sheet
+    offered, more = compared(stored)
+    refused = [proposal for proposal in sheet.proposals if proposal.not_proposed_because is not None]
     is_any = any(proposal.is_recommended for proposal in sheet.proposals)
     if sheet.proposals_reason:
         yield from wrapped(f"{'Recommended' if is_any else 'Nothing is recommended'}: {sheet.proposals_reason}")
-    for proposal in sheet.proposals:
+    for proposal in (*offered, *refused):
         mark = " (recommended)" if proposal.is_recommended else ""
         yield from wrapped(f"{proposal.name}: {proposal.title}{mark}")
         yield from wrapped(f"after {proposal.source}", "    ")
@@ -199,6 +203,8 @@ def _proposals(sheet: Sheet) -> Iterator[str]:
         for figure in proposal.figures:
             yield from wrapped(f"forecast, {figure.label}: {shown(figure.amount, figure.unit)}", "    ")
         yield from _bullets((f"caution: {caution}" for caution in proposal.cautions), "    ")
+    if more:
+        yield f"{more} more proposals are kept on the sheet; 'autotune propose' shows them"
 
 
 def _addenda(stored: StoredSheet, zone: tzinfo) -> Iterator[str]:

@@ -4,7 +4,7 @@ import textwrap
 from collections.abc import Iterator, Sequence
 from datetime import datetime, tzinfo
 
-from autotune.sheet.schema import Change, Person, Quantity, Sheet, Span
+from autotune.sheet.schema import Change, Person, Proposal, Quantity, Sheet, Span
 from autotune.sheet.store import StoredSheet
 
 WIDTH = 100
@@ -24,6 +24,25 @@ RESULTS = {
     "TAKEN": "somebody else had taken the loop; nothing was written",
     "STRANDED": "NOT CONFIRMED; look at the controller and enter the values as found",
 }
+
+
+COMPARED_AT_MOST = 8
+"""A person compares the first few; the sheet keeps all, the best suited first."""
+
+
+def written_proposals(stored: StoredSheet) -> frozenset[str]:
+    """The names of the proposals that were written later."""
+    return frozenset(one.source for one in stored.addenda if isinstance(one, Change) and one.result == "WRITTEN")
+
+
+def compared(stored: StoredSheet) -> tuple[tuple[Proposal, ...], int]:
+    """The proposals to show, those recommended or written always among them, and how many more the sheet keeps."""
+    offered = [one for one in stored.sheet.proposals if one.not_proposed_because is None]
+    kept = written_proposals(stored)
+    shown_ones = [
+        one for place, one in enumerate(offered) if place < COMPARED_AT_MOST or one.is_recommended or one.name in kept
+    ]
+    return tuple(shown_ones), len(offered) - len(shown_ones)
 
 
 def plain(text: str) -> str:

@@ -119,6 +119,9 @@ function intervalWords(one) {
   return `${rounded(one.low)} to ${rounded(one.high)}, ${claim}`;
 }
 
+// The sheet has them in the order of how well they suit; the first few are what a person compares.
+const SHOWN_PROPOSALS = 8;
+
 function proposalsPart(sheet, plan) {
   const proposals = sheet.proposals.filter((one) => one.settings.length);
   const not = sheet.proposals.filter((one) => one.not_proposed_because !== null);
@@ -127,27 +130,26 @@ function proposalsPart(sheet, plan) {
   const figures = [...new Map(proposals.flatMap((one) => one.figures).map((one) => [one.name, one])).values()];
   const number = (text) => [text, { class: "number" }];
   const amounts = (settings) => fields.map((field) => number(figure(settings.find((one) => one.name === field.name)?.amount ?? null)));
-  const rows = [
-    ["as found", ...amounts(sheet.as_found?.settings ?? []), number("1"), ...figures.map(() => ""), ""],
-    ...proposals.map((one) => [
-      h("span", {}, one.title, one.is_recommended && h("span", { class: "recommended" }, " \u25c6 recommended")),
-      ...amounts(one.settings),
-      number(one.gain_factor === null ? "not known" : rounded(one.gain_factor)),
-      ...figures.map((each) => number(rounded(one.figures.find((own) => own.name === each.name)?.amount ?? null))),
-      may("write") && sheet.outcome.ended === "COMPLETE"
-        ? h("button", { "aria-label": `Plan the change to ${one.title}`, onclick: () => plan("plan_change", { sheet: sheet.sheet_id, proposal: one.name }) }, "Plan change")
-        : "",
-    ]),
+  const expected = (told) => figures.map((each) => number(rounded(told.find((own) => own.name === each.name)?.amount ?? null)));
+  const asFound = ["as found", ...amounts(sheet.as_found?.settings ?? []), number("1"), ...expected(sheet.as_found_figures ?? []), ""];
+  const row = (one) => [
+    h("span", {}, one.title, one.is_recommended && h("span", { class: "recommended" }, " \u25c6 recommended")),
+    ...amounts(one.settings),
+    number(one.gain_factor === null ? "not known" : rounded(one.gain_factor)),
+    ...expected(one.figures),
+    may("write") && sheet.outcome.ended === "COMPLETE"
+      ? h("button", { "aria-label": `Plan the change to ${one.title}`, onclick: () => plan("plan_change", { sheet: sheet.sheet_id, proposal: one.name }) }, "Plan change")
+      : "",
   ];
+  const titles = ["Rule", ...fields.map((one) => number(`${one.label} ${one.unit}`)), number("Gain \u00d7 present"), ...figures.map((one) => number(`${one.label} ${one.unit}`)), ""];
+  const compared = (some) => table(titles, [asFound, ...some.map(row)], { class: "proposals" });
+  const [first, others] = [proposals.slice(0, SHOWN_PROPOSALS), proposals.slice(SHOWN_PROPOSALS)];
   return part(
     "Proposals",
     {},
     sheet.proposals_reason && h("p", {}, proposals.some((one) => one.is_recommended) ? "\u25c6 recommended: " : "Nothing is recommended: ", sheet.proposals_reason),
-    proposals.length > 0 && table(
-      ["Rule", ...fields.map((one) => number(`${one.label} ${one.unit}`)), number("Gain \u00d7 present"), ...figures.map((one) => number(`${one.label} ${one.unit}`)), ""],
-      rows,
-      { class: "proposals" },
-    ),
+    first.length > 0 && compared(first),
+    others.length > 0 && h("details", {}, h("summary", {}, `${others.length} more rules`), compared(others)),
     h("details", {}, h("summary", {}, "What speaks against each, and where it comes from"), proposals.map((one) => h("div", {}, h("h3", {}, one.title), h("p", { class: "quiet" }, one.source), one.cautions.length > 0 && h("ul", {}, one.cautions.map((each) => h("li", {}, each)))))),
     not.length > 0 && h("details", {}, h("summary", {}, `${not.length} rules propose nothing here`), h("ul", {}, not.map((one) => h("li", {}, h("strong", {}, one.title), ` ${one.not_proposed_because}`)))),
   );
