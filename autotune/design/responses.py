@@ -19,6 +19,9 @@ Array = NDArray[np.float64]
 _SETTLED_PCT = 2.0
 """Band around the end value within which a response counts as settled (common practice, no source)."""
 
+_PERIODS = 12.0
+_LONGEST_PERIODS = 40.0
+
 _REVERSAL_PCT = 0.5
 """What OP must go back by, of the whole move, to count as a reversal."""
 
@@ -133,8 +136,9 @@ def noise_gain_ratio(loop: ClosedLoop, scans: int) -> float:
 
 
 def horizon_scans(scan_s: float, period_s: float, integral_time_s: float | None) -> int:
-    """Scans that show a loop settle: twelve periods, or the longer tail of a slow integral."""
-    return ceil(max(12.0 * period_s, 4.0 * (integral_time_s or 0.0)) / scan_s)
+    """Scans that show a loop settle: twelve periods, or more of the tail of a slow integral, up to forty."""
+    tail_s = min(4.0 * (integral_time_s or 0.0), _LONGEST_PERIODS * period_s)
+    return ceil(max(_PERIODS * period_s, tail_s) / scan_s)
 
 
 def _sum(one: Array, other: Array) -> Array:

@@ -15,7 +15,14 @@ from autotune.design.held import held_plant
 from autotune.design.limit_cycle import limit_cycle
 from autotune.design.loop_grid import seen_plant
 from autotune.design.optimum import LoopBench, loop_bench
-from autotune.design.responses import closed_loop, load_figures, load_iae_pct_s, noise_gain_ratio, setpoint_figures
+from autotune.design.responses import (
+    closed_loop,
+    horizon_scans,
+    load_figures,
+    load_iae_pct_s,
+    noise_gain_ratio,
+    setpoint_figures,
+)
 from autotune.identify.describing_function import backlash
 from autotune.identify.model import ModelWithDraws, ProcessModel
 from autotune.loop.mode import ControlAction
@@ -115,6 +122,12 @@ def test_the_integral_of_the_error_after_a_load_is_ti_over_k() -> None:
     assert load_iae_pct_s(loop, 150, 10.0) == pytest.approx(10.0, rel=1e-6)
     assert load_figures(loop, 150, 10.0).iae_pct_s == pytest.approx(10.0, rel=1e-6)
     assert load_iae_pct_s(loop, 150, None) < 9.9
+
+
+def test_a_horizon_ends_however_slow_the_integral_is() -> None:
+    """A rule on a plant that nearly integrates can ask for days."""
+    assert horizon_scans(0.1, 10.0, 1e9) == 4000
+    assert horizon_scans(0.1, 10.0, 1.0) == horizon_scans(0.1, 10.0, None) == 1200
 
 
 def test_without_integral_the_offset_stays_and_settling_counts_from_it() -> None:

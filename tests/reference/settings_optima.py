@@ -28,6 +28,8 @@ SCANS_PER_PERIOD = 100
 LIMIT = 1.4
 FILTER_RATIO = 10.0
 PERIODS = 12
+LANES = 256
+"""Candidates at a time, for the memory's sake."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -130,16 +132,17 @@ def load_iae(plant: Sampled, gain: Array, ti_s: Array, td_s: Array) -> Array:
 def best(plant: Sampled, ti_s: Array, td_s: Array) -> tuple[float, float, float, float]:
     """(IAE, gain, Ti, Td) of the best of all pairs."""
     found = (np.inf, 0.0, 0.0, 0.0)
-    for run in range(2):
-        gain = largest_gains(plant, ti_s, td_s, run)
-        is_some = gain > 0.0
-        if not is_some.any():
-            continue
-        iae = load_iae(plant, gain[is_some], ti_s[is_some], td_s[is_some])
-        at = int(np.argmin(iae))
-        found = min(
-            found, (float(iae[at]), float(gain[is_some][at]), float(ti_s[is_some][at]), float(td_s[is_some][at]))
-        )
+    for first in range(0, len(ti_s), LANES):
+        lane = slice(first, first + LANES)
+        for run in range(2):
+            gain = largest_gains(plant, ti_s[lane], td_s[lane], run)
+            at = np.flatnonzero(gain > 0.0)
+            if len(at) == 0:
+                continue
+            iae = load_iae(plant, gain[at], ti_s[lane][at], td_s[lane][at])
+            least = int(np.argmin(iae))
+            i = at[least]
+            found = min(found, (float(iae[least]), float(gain[i]), float(ti_s[lane][i]), float(td_s[lane][i])))
     return found
 
 
