@@ -16,6 +16,8 @@ LINES_AT_MOST = 150
 
 _REPEATED_TAGS = ("holder_request", "heartbeat", "sequence")
 _LANDED = "applied"
+_FIGURES_LEFT_OUT = frozenset({"phase_margin_deg", "delay_margin_s", "gain_margin_ratio"})
+"""Ms bounds these margins; a table of a page's width has no room for all."""
 
 
 def cycles(sheet: Sheet) -> Iterator[Flowable]:
@@ -118,13 +120,14 @@ def proposals(stored: StoredSheet) -> Iterator[Flowable]:
 
 
 def _side_by_side(sheet: Sheet, offered: Sequence[Proposal], written: frozenset[str]) -> Flowable:
+    """Four digits to compare by; what was written stands with all its digits among the addenda."""
     found = () if sheet.as_found is None else sheet.as_found.settings
     fields = _columns([found, *(one.settings for one in offered)])
-    figures = _columns(one.figures for one in offered)
+    figures = [one for one in _columns(one.figures for one in offered) if one.name not in _FIGURES_LEFT_OUT]
     titles = ("", *(_titled(one) for one in fields), "gain x", *(_titled(one) for one in figures), "")
     as_found = (
         "as found",
-        *(exact(amount_of(found, one.name)) for one in fields),
+        *(shown(amount_of(found, one.name)) for one in fields),
         "1",
         *(_figure(sheet.as_found_figures, one.name) for one in figures),
         "",
@@ -132,7 +135,7 @@ def _side_by_side(sheet: Sheet, offered: Sequence[Proposal], written: frozenset[
     body = [
         (
             one.name,
-            *(exact(amount_of(one.settings, field.name)) for field in fields),
+            *(shown(amount_of(one.settings, field.name)) for field in fields),
             "" if one.gain_factor is None else shown(one.gain_factor, digits=3),
             *(_figure(one.figures, figure.name) for figure in figures),
             ", ".join(word for word in (one.is_recommended * "recommended", (one.name in written) * "written") if word),

@@ -73,6 +73,12 @@ class SettingsChange:
         Refused when the loop or its block is described otherwise than on the sheet, and when the
         controller no longer holds what the test found: then the proposal was judged against other settings.
         """
+        if stored.sheet.outcome.ended != "COMPLETE":
+            return Refusal(
+                "TEST_NOT_COMPLETE",
+                f"the test ended {stored.sheet.outcome.ended}, so nothing is written from its sheet",
+                "mend what stopped it and test again",
+            )
         proposal = next((one for one in stored.sheet.proposals if one.name == name and one.settings), None)
         if proposal is None:
             known = ", ".join(one.name for one in stored.sheet.proposals if one.settings) or "none"
