@@ -200,8 +200,9 @@ def _lost(evidence: Evidence, shown: Shown) -> bool:
     taken = {name: tag for name, tag in evidence.taken.items() if _is_loss(evidence, name)}
     if "mode" in taken:
         taken["mode"] = MODE_CODES[taken["mode"]]
-        if any(numbers.get("mode") == taken["mode"] for numbers in before):
-            del taken["mode"]  # it may be our own doing
+        was_ours = any(one.numbers.get("mode") == MODE_CODES["MAN"] for one in evidence.shown if one.t_s < shown.t_s)
+        if not was_ours or any(numbers.get("mode") == taken["mode"] for numbers in before):
+            del taken["mode"]  # it may not have come to manual yet, or be our own doing
     return bool(taken) and all(_is_same(shown.numbers.get(name, nan), number) for name, number in taken.items())
 
 

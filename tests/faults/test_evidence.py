@@ -119,11 +119,18 @@ def test_settings_are_written_only_with_the_numbers_as_found_or_as_confirmed() -
 def test_a_write_after_the_loss_was_shown_is_counted_and_a_release_is_not(
     taken: dict[str, Any], shown: dict[str, float]
 ) -> None:
-    lost = replace(TEST, taken=taken, shown=(Shown(5.0, shown), Shown(11.0, shown)))
+    ours = Shown(5.0, {"mode": 0, "op": 53.0, "guard_state": 1})
+    lost = replace(TEST, taken=taken, shown=(ours, Shown(11.0, shown)))
     assert judge(lost).writes_after_release == 0
     before, release, after = Write(10.5, {"mode": 0}), Write(12.0, {"holder_request": 0.0}), Write(12.0, {"mode": 1})
     for write, count in ((before, 0), (release, 0), (after, 1)):
         assert judge(replace(lost, writes=(*TEST.writes, write))).writes_after_release == count
+
+
+def test_a_mode_as_found_is_no_loss_before_manual_was_ever_shown() -> None:
+    waiting = replace(SETTINGS, taken={"mode": "AUTO"}, writes=(Write(1.0, {"mode": 0}), Write(12.0, {"mode": 1})))
+    assert judge(replace(waiting, shown=(Shown(11.0, {"mode": 1}),))).writes_after_release == 0
+    assert judge(replace(waiting, shown=(Shown(5.0, {"mode": 0}), Shown(11.0, {"mode": 1})))).writes_after_release == 1
 
 
 def test_what_happens_before_the_first_write_is_as_found() -> None:
