@@ -94,10 +94,17 @@ async def _job(desk: Screen, plant: SoftPlant, service: ServedPage, folder: Path
     await page.get_by_role("button", name="Write exactly these values").click()
     await expect(page.get_by_text("read back equal")).to_be_visible(timeout=_LONG_MS)
     await shot("09-read-back")
-    await page.get_by_role("link", name="Archive").click()
+    await _second_test(desk, plant)
+    await page.get_by_role("link", name="Archive", exact=True).click()
     await expect(page.get_by_role("heading", name="Archive")).to_be_visible()
+    for at in range(2):
+        await page.get_by_role("checkbox").nth(at).check()
     await shot("10-archive")
-    await page.locator("tbody a").first.click()
+    await page.get_by_role("button", name="Compare the two marked").click()
+    await expect(page.get_by_text("Both were made with the same configuration.")).to_be_visible()
+    await shot("10-compare")
+    await page.get_by_role("link", name="Archive", exact=True).click()
+    await page.locator("tbody a").last.click()
     await expect(page.get_by_role("heading", name="Added later")).to_be_visible()
     await shot("11-kept-sheet", whole=True)
     await page.get_by_role("link", name="Controllers").click()
@@ -107,13 +114,24 @@ async def _job(desk: Screen, plant: SoftPlant, service: ServedPage, folder: Path
         sys.exit(f"the page complained: {desk.faults}; asked outside: {desk.outside}")
 
 
+async def _second_test(desk: Screen, plant: SoftPlant) -> None:
+    """One that is aborted, so that there are two sheets to compare."""
+    page = desk.page
+    await plant.press(f"enable {LOOP}")
+    await desk.start(LOOP)
+    await expect(page.get_by_text("TESTING").first).to_be_visible(timeout=_LONG_MS)
+    await page.get_by_role("button", name="Abort").click()
+    await expect(page.get_by_text("ABORTED").first).to_be_visible(timeout=_LONG_MS)
+    await expect(page.get_by_role("heading", name="Record")).to_be_visible(timeout=_LONG_MS)
+
+
 async def _tablet(running: Browser, page: ServedPage, folder: Path) -> None:
     async with screen(running, page.url, 800, 1280) as tablet:
         await tablet.sign_in()
         await expect(tablet.page.get_by_text("last sheet").first).to_be_visible()
         await tablet.page.screenshot(path=folder / "20-tablet-index.png")
         await tablet.open_loop(LOOP)
-        await expect(tablet.page.get_by_role("heading", name="Proposals")).to_be_visible()
+        await expect(tablet.page.get_by_role("heading", name="Record")).to_be_visible()
         await tablet.page.screenshot(path=folder / "21-tablet-sheet.png", full_page=True)
 
 

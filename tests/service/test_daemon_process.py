@@ -83,6 +83,15 @@ async def over_tls(folder: Path) -> Seen:
             return {"url": service.url, "headers": await asyncio.to_thread(_sign_in, service.url, trusting)}
 
 
+async def persons_by_command(folder: Path) -> Seen:
+    config = write_bench(folder, 1)
+    added = await run("person", "add", config, NAME, "--role", "test", "--json", typed=f"{SECRET}\n")
+    listed = await run("person", "list", config, "--json")
+    removed = await run("person", "remove", config, NAME, "--json")
+    short = await run("person", "add", config, NAME, typed="short\n")
+    return {"added": added, "listed": listed, "removed": removed, "short": short}
+
+
 def _sign_in(url: str, trusting: ssl.SSLContext) -> Mapping[str, str]:
     body = json.dumps({"name": NAME, "secret": SECRET}).encode()
     request = urllib.request.Request(f"{url}api/sign_in", body, method="POST")  # noqa: S310 - it is https
@@ -119,6 +128,7 @@ STORIES: Mapping[str, Callable[[Path], Awaitable[Seen]]] = {
     "asked to end": asked_to_end,
     "killed": killed,
     "over TLS": over_tls,
+    "persons": persons_by_command,
 }
 
 
@@ -164,6 +174,16 @@ def test_a_daemon_that_starts_after_it_was_killed_settles_the_loop_first(
     assert (seen["after"]["mode"], seen["after"]["holder"]) == (seen["before"]["mode"], 0)
     assert seen["line"]["is_settled"]
     assert "broke off" in " ".join(seen["line"]["notes"])
+
+
+def test_persons_are_added_listed_and_removed_by_command(stories: Mapping[str, Seen | BaseException]) -> None:
+    seen = _of(stories, "persons")
+    assert [one["roles"] for one in seen["added"].answer["persons"]] == [["test", "watch"]]
+    assert SECRET not in seen["added"].out + seen["added"].err
+    assert [one["name"] for one in seen["listed"].answer["persons"]] == [NAME]
+    assert seen["removed"].answer == {"persons": []}
+    assert seen["short"].code == 2
+    assert "5 characters" in seen["short"].err
 
 
 def test_over_tls_the_cookie_travels_protected_only(stories: Mapping[str, Seen | BaseException]) -> None:

@@ -113,8 +113,7 @@ function signedOut() {
   lastLoops = null;
   reach.show([]);
   page.onAlarm(null);
-  lock.hidden = true;
-  content.inert = false;
+  hideLock();
   drawTop();
   set(content, signInForm(signedIn));
   content.querySelector("input")?.focus();
@@ -145,13 +144,18 @@ function showLock() {
   top_.inert = true;
   set(lock, unlockForm((answer) => {
     remember(answer);
-    lock.hidden = true;
-    content.inert = false;
-    top_.inert = false;
+    hideLock();
     content.focus();
   }));
   lock.hidden = false;
   lock.querySelector("input")?.focus();
+}
+
+function hideLock() {
+  lock.hidden = true;
+  set(lock);
+  content.inert = false;
+  top_.inert = false;
 }
 
 let touchedAt = 0;

@@ -32,6 +32,7 @@ export function archiveView(page, loop) {
             box,
           ];
         }),
+        { class: "archive" },
       ),
       h("div", { class: "acts" }, compare),
     );

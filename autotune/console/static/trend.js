@@ -2,7 +2,7 @@
 
 import { figure, reading, s, set } from "./dom.js";
 
-const WIDTH = 860;
+const WIDTH_AT_LEAST = 420;
 const LEFT = 64;
 const RIGHT = 46;
 const PV_TOP = 26;
@@ -10,7 +10,6 @@ const PV_HEIGHT = 166;
 const OP_TOP = PV_TOP + PV_HEIGHT + 30;
 const OP_HEIGHT = 72;
 const HEIGHT = OP_TOP + OP_HEIGHT + 34;
-const INNER = WIDTH - LEFT - RIGHT;
 
 export class Trend {
   /** `units` are those of PV and OP. */
@@ -20,8 +19,9 @@ export class Trend {
     this.isWide = false;
     this.marks = {};
     this.element = s("svg", {
-      class: "trend", viewBox: `0 0 ${WIDTH} ${HEIGHT}`, role: "img", "aria-label": "Trend of PV, SP and OP",
+      class: "trend", height: HEIGHT, role: "img", "aria-label": "Trend of PV, SP and OP",
     });
+    new ResizeObserver(() => this.draw()).observe(this.element);
   }
 
   clear() {
@@ -45,13 +45,15 @@ export class Trend {
   /** Draw, with `marks`: reference, hysteresis, limits of PV and OP in engineering units, null where not known. */
   draw(marks = this.marks) {
     this.marks = marks;
+    this.width = Math.max(WIDTH_AT_LEAST, this.element.clientWidth);
+    this.inner = this.width - LEFT - RIGHT;
     if (this.t.length < 2) {
       set(this.element, s("text", { x: LEFT, y: 60, class: "axis" }, "waiting for readings"));
       return;
     }
     const from = this.t[0];
     const to = Math.max(this.t[this.t.length - 1], from + 5);
-    const x = (t) => LEFT + (INNER * (t - from)) / (to - from);
+    const x = (t) => LEFT + (this.inner * (t - from)) / (to - from);
     set(this.element, this.#times(from, to, x), this.#pvPlot(x), this.#opPlot(x));
     const last = this.pv.length - 1;
     this.element.setAttribute(
@@ -68,20 +70,20 @@ export class Trend {
     const limits = [pvLow, pvHigh].filter((one) => one !== null && one !== undefined);
     const [low, high] = range([this.pv, this.sp, band, this.isWide ? limits : []]);
     const y = (eu) => PV_TOP + (PV_HEIGHT * (high - eu)) / (high - low);
-    const parts = [frame(PV_TOP, PV_HEIGHT), levels(low, high, y), title(`PV ${this.units.pv}`, PV_TOP)];
+    const parts = [frame(PV_TOP, PV_HEIGHT, this.inner), levels(low, high, y, 5, this.inner), title(`PV ${this.units.pv}`, PV_TOP)];
     if (known) {
       parts.push(
-        s("rect", { class: "band", x: LEFT, width: INNER, y: y(band[1]), height: Math.max(y(band[0]) - y(band[1]), 1) }),
-        s("line", { class: "reference", x1: LEFT, x2: LEFT + INNER, y1: y(reference), y2: y(reference) }),
+        s("rect", { class: "band", x: LEFT, width: this.inner, y: y(band[1]), height: Math.max(y(band[0]) - y(band[1]), 1) }),
+        s("line", { class: "reference", x1: LEFT, x2: LEFT + this.inner, y1: y(reference), y2: y(reference) }),
       );
     }
     for (const [limit, word] of [[pvHigh, "PV may not be above"], [pvLow, "PV may not be below"]]) {
-      if (limit > low && limit < high) parts.push(limitLine(y(limit), word, limit === pvLow));
+      if (limit > low && limit < high) parts.push(limitLine(y(limit), word, limit === pvLow, this.inner));
     }
     parts.push(
       s("path", { class: "sp", d: path(this.t, this.sp, x, y) }),
       s("path", { class: "pv", d: path(this.t, this.pv, x, y) }),
-      ...tags([["PV", "pv", y(last(this.pv) ?? high)], ["SP", "sp", y(last(this.sp) ?? low)]], PV_TOP, PV_TOP + PV_HEIGHT),
+      ...tags([["PV", "pv", y(last(this.pv) ?? high)], ["SP", "sp", y(last(this.sp) ?? low)]], PV_TOP, PV_TOP + PV_HEIGHT, this.inner),
     );
     if (known) parts.push(s("text", { class: "axis", x: LEFT + 6, y: y(band[1]) - 5 }, "switching band"));
     return parts;
@@ -93,8 +95,8 @@ export class Trend {
     const limits = [opLow, opHigh].filter((one) => one !== null && one !== undefined);
     const [low, high] = range([this.op, asked, limits]);
     const y = (eu) => OP_TOP + (OP_HEIGHT * (high - eu)) / (high - low);
-    const parts = [frame(OP_TOP, OP_HEIGHT), levels(low, high, y, 4), title(`OP ${this.units.op}`, OP_TOP)];
-    for (const limit of limits) parts.push(limitLine(y(limit), "", false));
+    const parts = [frame(OP_TOP, OP_HEIGHT, this.inner), levels(low, high, y, 4, this.inner), title(`OP ${this.units.op}`, OP_TOP)];
+    for (const limit of limits) parts.push(limitLine(y(limit), "", false, this.inner));
     parts.push(s("path", { class: "op", d: path(this.t, this.op, x, y) }));
     let before = null;
     for (const [t, eu] of this.switches) {
@@ -109,12 +111,12 @@ export class Trend {
       }
       before = eu;
     }
-    parts.push(...tags([["OP", "op", y(last(this.op) ?? high)]], OP_TOP, OP_TOP + OP_HEIGHT));
+    parts.push(...tags([["OP", "op", y(last(this.op) ?? high)]], OP_TOP, OP_TOP + OP_HEIGHT, this.inner));
     return parts;
   }
 
   #times(from, to, x) {
-    const step = niceStep((to - from) / 7);
+    const step = niceStep((to - from) / Math.max(3, Math.round(this.inner / 110)));
     const parts = [];
     for (let t = Math.ceil(from / step) * step; t <= to; t += step) {
       parts.push(
@@ -122,7 +124,7 @@ export class Trend {
         s("text", { class: "axis", x: x(t), y: HEIGHT - 12, "text-anchor": "middle" }, figure(Number(t.toFixed(6)), "", 5)),
       );
     }
-    parts.push(s("text", { class: "axis", x: WIDTH - RIGHT + 8, y: HEIGHT - 12 }, "s"));
+    parts.push(s("text", { class: "axis", x: this.width - RIGHT + 8, y: HEIGHT - 12 }, "s"));
     return parts;
   }
 }
@@ -153,42 +155,42 @@ function niceStep(rough) {
   return 10 * power;
 }
 
-function frame(top, height) {
-  return s("rect", { class: "frame", x: LEFT, y: top, width: INNER, height });
+function frame(top, height, inner) {
+  return s("rect", { class: "frame", x: LEFT, y: top, width: inner, height });
 }
 
 function title(text, top) {
   return s("text", { class: "axis strong", x: LEFT, y: top - 8 }, text);
 }
 
-function levels(low, high, y, count = 5) {
+function levels(low, high, y, count, inner) {
   const step = niceStep((high - low) / count);
   const parts = [];
   for (let eu = Math.ceil(low / step) * step; eu <= high; eu += step) {
     if (y(eu) < y(high) + 16) continue;
     parts.push(
-      s("line", { class: "grid", x1: LEFT, x2: LEFT + INNER, y1: y(eu), y2: y(eu) }),
+      s("line", { class: "grid", x1: LEFT, x2: LEFT + inner, y1: y(eu), y2: y(eu) }),
       s("text", { class: "axis", x: LEFT - 8, y: y(eu) + 5, "text-anchor": "end" }, figure(Number(eu.toFixed(9)), "", 5)),
     );
   }
   return parts;
 }
 
-function limitLine(y, word, isLow) {
+function limitLine(y, word, isLow, inner) {
   return [
-    s("line", { class: "limit", x1: LEFT, x2: LEFT + INNER, y1: y, y2: y }),
-    s("text", { class: "axis", x: LEFT + INNER - 6, y: isLow ? y - 5 : y + 16, "text-anchor": "end" }, word),
+    s("line", { class: "limit", x1: LEFT, x2: LEFT + inner, y1: y, y2: y }),
+    s("text", { class: "axis", x: LEFT + inner - 6, y: isLow ? y - 5 : y + 16, "text-anchor": "end" }, word),
   ];
 }
 
 /** Names at the right end of their lines, pushed apart where they would lie on each other. */
-function tags(names, top, bottom) {
+function tags(names, top, bottom, inner) {
   const sorted = names.map(([word, kind, y]) => [word, kind, Math.min(Math.max(y, top + 8), bottom - 2)]);
   sorted.sort((a, b) => a[2] - b[2]);
   for (let at = 1; at < sorted.length; at += 1) {
     if (sorted[at][2] - sorted[at - 1][2] < 17) sorted[at][2] = sorted[at - 1][2] + 17;
   }
-  return sorted.map(([word, kind, y]) => s("text", { class: `tag ${kind}-tag`, x: LEFT + INNER + 8, y: y + 5 }, word));
+  return sorted.map(([word, kind, y]) => s("text", { class: `tag ${kind}-tag`, x: LEFT + inner + 8, y: y + 5 }, word));
 }
 
 /** A line through the readings, at most two points for each column of the screen; a gap where nothing is known. */
