@@ -14,6 +14,7 @@ import sys
 import tempfile
 import threading
 from collections.abc import Awaitable, Callable, Mapping, Sequence
+from contextlib import AbstractContextManager, nullcontext
 from pathlib import Path
 from typing import TYPE_CHECKING
 
@@ -58,7 +59,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
     for library in ("pymodbus.logging", "asyncua"):
         logging.getLogger(library).setLevel(logging.CRITICAL)
     try:
-        with tempfile.TemporaryDirectory(prefix="soft-plant-") as folder:
+        with _folder_for_certificates(options) as folder:
             asyncio.run(_run(rig, options, Path(folder)))
     except (_BadOption, _AddressTaken) as fault:
         print(f"python -m simulator: {fault}", file=sys.stderr)
@@ -72,6 +73,13 @@ class _BadOption(Exception):
 
 class _AddressTaken(Exception):
     pass
+
+
+def _folder_for_certificates(options: argparse.Namespace) -> AbstractContextManager[str]:
+    """None is made without need: a plant that is killed, as plants in tests are, leaves it behind."""
+    if options.opc_ua is None or options.opc_ua_pki is not None:
+        return nullcontext("")
+    return tempfile.TemporaryDirectory(prefix="soft-plant-")
 
 
 def _port(word: str) -> int:
