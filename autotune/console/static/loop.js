@@ -270,7 +270,7 @@ function figures(test, line) {
   return [
     figureBox("PV", reading(test.pv_eu, line.pv_unit)),
     figureBox("SP", reading(test.sp_eu, line.pv_unit)),
-    figureBox("OP, asked for", `${reading(test.op_eu, line.op_unit)}, ${reading(test.asked_op_eu, line.op_unit)}`),
+    figureBox("OP now, asked for", `${reading(test.op_eu, line.op_unit)}, ${reading(test.asked_op_eu, line.op_unit)}`),
     figureBox("Mode", test.mode ?? "not known"),
     figureBox("PV may be", `${figure(test.pv_low_eu)} to ${figure(test.pv_high_eu, line.pv_unit)}`),
     figureBox("OP may be", `${figure(test.op_low_eu)} to ${figure(test.op_high_eu, line.op_unit)}`),

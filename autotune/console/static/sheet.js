@@ -5,6 +5,7 @@ import { attend, exact, facts, figure, h, instant, mark, outcomeMark, part, roun
 import { secretField } from "./persons.js";
 import { Trend } from "./trend.js";
 
+const FIGURES_COMPARED = 4; // more don't fit beside the settings; all stand with each rule
 const OUTCOMES = {
   COMPLETE: "The test ran to its end and the loop was given back as found.",
   ABORTED: "The test was ended early; the loop reads as found, or was never touched.",
@@ -127,21 +128,21 @@ function proposalsPart(sheet, plan) {
   const not = sheet.proposals.filter((one) => one.not_proposed_because !== null);
   if (!sheet.proposals.length) return null;
   const fields = proposals[0]?.settings ?? [];
-  const figures = [...new Map(proposals.flatMap((one) => one.figures).map((one) => [one.name, one])).values()];
+  const figures = [...new Map(proposals.flatMap((one) => one.figures).map((one) => [one.name, one])).values()].slice(0, FIGURES_COMPARED);
   const number = (text) => [text, { class: "number" }];
   const amounts = (settings) => fields.map((field) => number(figure(settings.find((one) => one.name === field.name)?.amount ?? null)));
   const expected = (told) => figures.map((each) => number(rounded(told.find((own) => own.name === each.name)?.amount ?? null)));
-  const asFound = ["as found", ...amounts(sheet.as_found?.settings ?? []), number("1"), ...expected(sheet.as_found_figures ?? []), ""];
+  const asFound = ["as found", "", ...amounts(sheet.as_found?.settings ?? []), number("1"), ...expected(sheet.as_found_figures ?? [])];
   const row = (one) => [
     h("span", {}, one.title, one.is_recommended && h("span", { class: "recommended" }, " \u25c6 recommended")),
+    may("write") && sheet.outcome.ended === "COMPLETE"
+      ? h("button", { "aria-label": `Plan the change to ${one.title}`, onclick: () => plan("plan_change", { sheet: sheet.sheet_id, proposal: one.name }) }, "Plan")
+      : "",
     ...amounts(one.settings),
     number(one.gain_factor === null ? "not known" : rounded(one.gain_factor)),
     ...expected(one.figures),
-    may("write") && sheet.outcome.ended === "COMPLETE"
-      ? h("button", { "aria-label": `Plan the change to ${one.title}`, onclick: () => plan("plan_change", { sheet: sheet.sheet_id, proposal: one.name }) }, "Plan change")
-      : "",
   ];
-  const titles = ["Rule", ...fields.map((one) => number(`${one.label} ${one.unit}`)), number("Gain \u00d7 present"), ...figures.map((one) => number(`${one.label} ${one.unit}`)), ""];
+  const titles = ["Rule", "Change", ...fields.map((one) => number(`${one.label} ${one.unit}`)), number("Gain \u00d7 present"), ...figures.map((one) => number(`${one.label} ${one.unit}`))];
   const compared = (some) => table(titles, [asFound, ...some.map(row)], { class: "proposals" });
   const [first, others] = [proposals.slice(0, SHOWN_PROPOSALS), proposals.slice(SHOWN_PROPOSALS)];
   return part(
@@ -150,7 +151,7 @@ function proposalsPart(sheet, plan) {
     sheet.proposals_reason && h("p", {}, proposals.some((one) => one.is_recommended) ? "\u25c6 recommended: " : "Nothing is recommended: ", sheet.proposals_reason),
     first.length > 0 && compared(first),
     others.length > 0 && h("details", {}, h("summary", {}, `${others.length} more rules`), compared(others)),
-    h("details", {}, h("summary", {}, "What speaks against each, and where it comes from"), proposals.map((one) => h("div", {}, h("h3", {}, one.title), h("p", { class: "quiet" }, one.source), one.cautions.length > 0 && h("ul", {}, one.cautions.map((each) => h("li", {}, each)))))),
+    h("details", {}, h("summary", {}, "Each forecast, what speaks against it, and where it comes from"), proposals.map((one) => h("div", {}, h("h3", {}, one.title), h("p", { class: "quiet" }, one.source), one.figures.length > 0 && h("p", {}, `Forecast: ${one.figures.map((each) => `${each.label} ${rounded(each.amount, each.unit)}`).join(", ")}.`), one.cautions.length > 0 && h("ul", {}, one.cautions.map((each) => h("li", {}, each)))))),
     not.length > 0 && h("details", {}, h("summary", {}, `${not.length} rules propose nothing here`), h("ul", {}, not.map((one) => h("li", {}, h("strong", {}, one.title), ` ${one.not_proposed_because}`)))),
   );
 }
