@@ -69,11 +69,14 @@ class PersonAtTheTerminal:
         self._voice.say()
 
     def _ask(self, question: str) -> str:
-        """One line; the running event loop must not swallow Ctrl-C here."""
-        self._voice.console.print(question, end="", markup=False)
-        sys.stdout.flush()
+        """One line.
+
+        The running event loop must not swallow Ctrl-C here, from the moment that the question can be seen.
+        """
         before = signal.signal(signal.SIGINT, signal.default_int_handler)
         try:
+            self._voice.console.print(question, end="", markup=False)
+            sys.stdout.flush()
             return sys.stdin.readline().strip()
         except KeyboardInterrupt:
             self._voice.say()
