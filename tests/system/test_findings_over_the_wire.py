@@ -1,5 +1,6 @@
 """A whole test over a real socket finds what the soft plant really is."""
 
+import asyncio
 from cmath import rect
 from math import tau
 from pathlib import Path
@@ -29,7 +30,7 @@ ATTEMPTS = 3
 
 async def identified(folder: Path, changes: tuple[Change, ...]) -> Findings:
     for attempt in range(ATTEMPTS):
-        ended = await tested(folder / str(attempt), changes)
+        ended = await one_test(folder / str(attempt), changes)
         if ended.sheet.outcome.code not in MACHINE_GAVE_OUT:
             break
     assert ended.sheet.outcome.ended == "COMPLETE", ended.sheet.outcome
@@ -37,8 +38,8 @@ async def identified(folder: Path, changes: tuple[Change, ...]) -> Findings:
     return ended.findings
 
 
-async def tested(folder: Path, changes: tuple[Change, ...]) -> TestEnd:
-    folder.mkdir(parents=True)
+async def one_test(folder: Path, changes: tuple[Change, ...]) -> TestEnd:
+    await asyncio.to_thread(folder.mkdir, parents=True)
     async with soft_plant() as plant:
         workplace, loop = bench_workplace(folder, plant.port, changes, WorkerEstimator())
         await plant.press(f"enable {LOOP}")
