@@ -2,11 +2,13 @@
 
 import asyncio
 import signal
+import socket
 from collections.abc import Callable
 from contextlib import AsyncExitStack, suppress
 
 import structlog
 
+from autotune.errors import Complaint, ConfigError
 from autotune.service.console_keeper import ConsoleKeeper, PageAddress, bind_page
 from autotune.service.daemon import Daemon
 from autotune.service.door import Door
@@ -34,6 +36,9 @@ async def serve(
     ``address`` is the page's, ``None`` serves without a page; ``on_ready`` hears the page's URL once everything
     answers.  Raises ``ConfigError`` and ``LoopBusy`` before anything has begun.
     """
+    if not hasattr(socket, "SO_PEERCRED"):
+        remedy = "serve on Linux; every other command works here"
+        raise ConfigError((Complaint("this machine", "serve", "its kernel doesn't name the peer of a socket", remedy),))
     stopping = asyncio.Event()
     running = asyncio.get_running_loop()
     for number in (signal.SIGTERM, signal.SIGINT, signal.SIGHUP):

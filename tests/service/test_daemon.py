@@ -1,7 +1,9 @@
 """The daemon over its own sockets, on the soft plant's fast loop."""
 
+import asyncio
 import stat
 from base64 import b64decode
+from collections.abc import Awaitable, Callable, Mapping
 from pathlib import Path
 
 import pytest
@@ -14,16 +16,18 @@ from tests.system.plant import LOOP, as_real, moved
 
 pytestmark = pytest.mark.socket
 
+AT_ONCE = 2
 
-async def test_a_whole_test_is_started_watched_and_found_in_the_archive(tmp_path: Path) -> None:
-    async with served(tmp_path) as at:
+
+async def a_whole_test_is_started_watched_and_found_in_the_archive(folder: Path) -> None:
+    async with served(folder) as at:
         assert (await at.start_test()) == {"answer": {"text": "the test has begun"}}
         cycling = await at.until_live(lambda live: live["test"] and live["test"]["cycles"])
         assert cycling["loop"]["doing"] == "test"
         assert cycling["test"]["hysteresis_eu"] > 0.0
         assert len(cycling["trend"]["t_s"]) == len(cycling["trend"]["pv_eu"])
         ended = await at.until_live(lambda live: live["sheet"])
-        assert ended["test"]["phase"] == "COMPLETE"
+        assert ended["test"]["phase"] == "COMPLETE", ended["test"]["because"]
         whole = await at.until_live(lambda live: live["trend"])
         assert whole["trend"]["first"] == 0
         assert len(whole["trend"]["t_s"]) > len(cycling["trend"]["t_s"])
@@ -39,8 +43,8 @@ async def test_a_whole_test_is_started_watched_and_found_in_the_archive(tmp_path
         assert b64decode(paper["content"]).startswith(b"%PDF-")
 
 
-async def test_settings_are_written_by_who_signed_in_and_types_the_digest(tmp_path: Path) -> None:
-    async with served(tmp_path) as at:
+async def settings_are_written_by_who_signed_in_and_types_the_digest(folder: Path) -> None:
+    async with served(folder) as at:
         await at.start_test()
         sheet = (await at.until_live(lambda live: live["sheet"]))["sheet"]
         kept = (await at.ask("open_sheet", sheet=sheet))["answer"]["sheet"]
@@ -72,8 +76,8 @@ async def test_settings_are_written_by_who_signed_in_and_types_the_digest(tmp_pa
         ] * 2
 
 
-async def test_an_abort_at_a_locked_screen_hands_the_loop_back(tmp_path: Path) -> None:
-    async with served(tmp_path) as at:
+async def an_abort_at_a_locked_screen_hands_the_loop_back(folder: Path) -> None:
+    async with served(folder) as at:
         session = await at.sign_in()
         before = await at.plant.state()
         await at.start_test()
@@ -90,8 +94,8 @@ async def test_an_abort_at_a_locked_screen_hands_the_loop_back(tmp_path: Path) -
         assert (after["mode"], round(after["op"])) == (before["mode"], round(before["op"]))
 
 
-async def test_a_stop_hands_the_loop_back_and_keeps_the_sheet(tmp_path: Path) -> None:
-    async with served(tmp_path) as at:
+async def a_stop_hands_the_loop_back_and_keeps_the_sheet(folder: Path) -> None:
+    async with served(folder) as at:
         before = await at.plant.state()
         await at.start_test()
         await at.until_live(lambda live: live["test"] and live["test"]["phase"] == "TESTING")
@@ -101,15 +105,15 @@ async def test_a_stop_hands_the_loop_back_and_keeps_the_sheet(tmp_path: Path) ->
         assert (await at.ask("open_sheet", sheet="last"))["answer"]["sheet"]["outcome"]["ended"] == "ABORTED"
 
 
-async def test_while_it_serves_nobody_else_on_this_machine_is_master(tmp_path: Path) -> None:
-    async with served(tmp_path) as at:
-        workplace, loop = bench_workplace(tmp_path, at.plant.port)
+async def while_it_serves_nobody_else_on_this_machine_is_master(folder: Path) -> None:
+    async with served(folder) as at:
+        workplace, loop = bench_workplace(folder, at.plant.port)
         with pytest.raises(LoopBusy, match=r"serves bench\.toml; use its page http"):
             await SupervisedTest(workplace, loop).__aenter__()
 
 
-async def test_a_start_without_what_permission_needs_moves_nothing(tmp_path: Path) -> None:
-    async with served(tmp_path) as at:
+async def a_start_without_what_permission_needs_moves_nothing(folder: Path) -> None:
+    async with served(folder) as at:
         await at.plant.press(f"enable {LOOP}")
         looked = (await at.ask("look", loop=LOOP))["answer"]
         asked = {"loop": LOOP, "typed_loop": LOOP, "accepted": looked["cautions"], **PERMISSION}
@@ -123,8 +127,8 @@ async def test_a_start_without_what_permission_needs_moves_nothing(tmp_path: Pat
         assert not moved(before, await at.plant.state())
 
 
-async def test_a_daemon_that_only_watches_knows_no_word_that_writes(tmp_path: Path) -> None:
-    async with served(tmp_path, is_watch_only=True) as at:
+async def a_daemon_that_only_watches_knows_no_word_that_writes(folder: Path) -> None:
+    async with served(folder, is_watch_only=True) as at:
         await at.plant.press(f"enable {LOOP}")
         before = await at.plant.state()
         looked = (await at.ask("look", loop=LOOP))["answer"]
@@ -143,16 +147,56 @@ async def test_a_daemon_that_only_watches_knows_no_word_that_writes(tmp_path: Pa
         assert not moved(before, await at.plant.state())
 
 
-async def test_the_sockets_are_for_their_owner_only(tmp_path: Path) -> None:
-    async with served(tmp_path) as at:
+async def the_sockets_are_for_their_owner_only(folder: Path) -> None:
+    async with served(folder) as at:
         assert {stat.S_IMODE(file.stat().st_mode) for file in (at.local, at.console)} == {0o600}
 
 
-async def test_the_rounds_tell_loops_and_controllers(tmp_path: Path) -> None:
-    async with served(tmp_path) as at:
+async def the_rounds_tell_loops_and_controllers(folder: Path) -> None:
+    async with served(folder) as at:
         line = (await at.until_live(lambda live: live["loop"]["read_utc"]))["loop"]
         assert line["mode"] == "AUTO"
         assert [one["label"] for one in line["settings"]][:2] == ["GAIN", "TI"]
         controller = (await at.ask("list_controllers"))["answer"]["controllers"][0]
         assert controller["readings"] >= 1
         assert controller["missed"] == 0
+
+
+STORIES: Mapping[str, Callable[[Path], Awaitable[None]]] = {
+    story.__name__.replace("_", " "): story
+    for story in (
+        a_whole_test_is_started_watched_and_found_in_the_archive,
+        settings_are_written_by_who_signed_in_and_types_the_digest,
+        an_abort_at_a_locked_screen_hands_the_loop_back,
+        a_stop_hands_the_loop_back_and_keeps_the_sheet,
+        while_it_serves_nobody_else_on_this_machine_is_master,
+        a_start_without_what_permission_needs_moves_nothing,
+        a_daemon_that_only_watches_knows_no_word_that_writes,
+        the_sockets_are_for_their_owner_only,
+        the_rounds_tell_loops_and_controllers,
+    )
+}
+
+
+@pytest.fixture(scope="module")
+def ended(request: pytest.FixtureRequest, tmp_path_factory: pytest.TempPathFactory) -> Mapping[str, object]:
+    """How each story that was asked for ended, two at a time: most of their time is waiting for a plant."""
+    folder = tmp_path_factory.mktemp("daemon")
+    asked = {name for item in request.session.items for name in STORIES if name in item.name}
+
+    async def all_of_them() -> list[object]:
+        room = asyncio.Semaphore(AT_ONCE)
+
+        async def one(number: int, name: str) -> None:
+            async with room:
+                await STORIES[name](folder / str(number))
+
+        return await asyncio.gather(*(one(*named) for named in enumerate(sorted(asked))), return_exceptions=True)
+
+    return dict(zip(sorted(asked), asyncio.run(all_of_them()), strict=True))
+
+
+@pytest.mark.parametrize("story", STORIES)
+def test_over_its_own_sockets(ended: Mapping[str, object], story: str) -> None:
+    if isinstance(fault := ended[story], BaseException):
+        raise fault
